@@ -1,0 +1,3 @@
+"""Drawings in, jobs, drawings out."""
+
+__version__ = "0.1.0"

@@ -1,0 +1,1 @@
+"""Numbers only: curves, fits, distances. No files, no drawing format, no printing."""
