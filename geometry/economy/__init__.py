@@ -1,0 +1,1 @@
+"""Economy: the fewest lines, arcs or vertices that stay within a chord error of a spline."""

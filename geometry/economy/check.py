@@ -1,0 +1,100 @@
+"""Sampled two-sided distance between a track and the chain of lines and arcs laid along it, in linear time.
+
+The chain's joints know where on the track they belong, so every sample is compared with its own neighbourhood only.
+Each sample's distance is to a point that is really there (a point of the chain, a point of the curve): the values are
+upper bounds at the samples, and the samples are dense. The proven bound is the business of `geometry.deviation`.
+"""
+
+import numpy as np
+
+from geometry.arrays import FloatArray, IntArray
+from geometry.economy.track import ComplexArray, Track
+
+__all__ = ["arc_samples", "distance_to_arcs", "feet", "two_sided"]
+
+
+def two_sided(
+    track: Track,
+    joints: ComplexArray,
+    bulges: FloatArray,
+    s: FloatArray,
+    piece: IntArray,
+    samples: int = 16,
+) -> FloatArray:
+    """Return, per line or arc, the largest sampled distance between it and its stretch of the track.
+
+    Args:
+        track: the curve.
+        joints: chain vertices in order, the last one included, complex, shape (n + 1,).
+        bulges: of the pieces, shape (n,).
+        s: arc length on the track that belongs to the start and the end of every piece, shape (n, 2).
+        piece: smooth piece of the track that every line or arc belongs to, shape (n,); neighbours of another smooth
+            piece are not looked at.
+        samples: on every stretch, each way.
+    """
+    n = len(bulges)
+    share = (np.arange(samples) + 0.5) / samples
+    along = s[:, :1] + (s[:, 1:] - s[:, :1]) * share
+    curve = track.points(along)
+    to_chain = distance_to_arcs(curve, joints[:-1, None], joints[1:, None], bulges[:, None])
+    for other in (-1, 1):  # near a joint the neighbour may be nearer
+        index = np.arange(n) + other
+        index = np.mod(index, n) if track.closed else np.clip(index, 0, n - 1)
+        index = np.where(piece[index] == piece, index, np.arange(n))
+        near = distance_to_arcs(curve, joints[:-1][index, None], joints[1:][index, None], bulges[index, None])
+        to_chain = np.minimum(to_chain, near)
+    points = arc_samples(joints[:-1, None], joints[1:, None], bulges[:, None], np.linspace(0.0, 1.0, samples + 1))
+    guess = s[:, :1] + (s[:, 1:] - s[:, :1]) * np.linspace(0.0, 1.0, samples + 1)
+    reach = s[:, 1:] - s[:, :1]
+    low, high = s[:, :1] - reach, s[:, 1:] + reach
+    if not track.closed:
+        low = np.maximum(low, track.s[track.first][piece][:, None])
+        high = np.minimum(high, track.s[track.last][piece][:, None])
+    to_curve = np.abs(points - track.points(feet(track, points, guess, low, high)))
+    return np.maximum(to_chain.max(axis=1), to_curve.max(axis=1))
+
+
+def feet(
+    track: Track, points: ComplexArray, guess: FloatArray, low: FloatArray, high: FloatArray, steps: int = 3
+) -> FloatArray:
+    """Return arc lengths near the feet of points on the track, by Newton's method held between two bounds."""
+    s = guess
+    for _ in range(steps):
+        centre, angle, bend = track.frames(s)
+        q = (points - centre) * np.exp(-1j * angle)
+        s = np.clip(s + q.real / np.maximum(1.0 - bend * q.imag, 0.2), low, high)
+    return s
+
+
+def arc_samples(start: ComplexArray, end: ComplexArray, bulge: FloatArray, share: FloatArray) -> ComplexArray:
+    """Return points at shares of the sweep of lines and arcs (broadcast)."""
+    half = 2.0 * np.arctan(bulge)
+    flat = np.abs(half) < 1e-12
+    ratio = np.where(flat, share, np.sin(share * half) / np.where(flat, 1.0, np.sin(half)))
+    return np.asarray(start + (end - start) * ratio * np.exp(-1j * half * (1.0 - share)))
+
+
+def distance_to_arcs(points: ComplexArray, start: ComplexArray, end: ComplexArray, bulge: FloatArray) -> FloatArray:
+    """Return distances from points to lines and arcs given by ends and bulge (broadcast).
+
+    Beside the sweep the distance is the radial one, written without the radius so that lines need no other formula:
+    with K the curvature and v the point seen from the start along the start tangent, A = K |v|^2 - 2 Im v and the
+    signed distance is A / (1 + sqrt(1 + K A)). Outside the sweep it is the distance to the nearer end.
+    """
+    chord = end - start
+    length = np.maximum(np.abs(chord), 1e-300)
+    half = 2.0 * np.arctan(bulge)
+    curvature = 2.0 * np.sin(half) / length
+    unit = chord / length
+    v = (points - start) * np.conj(unit) * np.exp(1j * half)
+    a = curvature * np.abs(v) ** 2 - 2.0 * v.imag
+    radial = np.abs(a / (1.0 + np.sqrt(np.maximum(1.0 + curvature * a, 0.0))))
+    # angle from the chord's middle normal: inside the sweep when the point seen from both ends opens on the arc's side
+    turned = np.arctan2((v * (1j * curvature)).imag, 1.0 + (v * (1j * curvature)).real)
+    sweep = 2.0 * half
+    inside_arc = np.mod(turned * np.sign(sweep), 2.0 * np.pi) <= np.abs(sweep)
+    along = ((points - start) * np.conj(unit)).real
+    inside_line = (along >= 0.0) & (along <= length)
+    inside = np.where(np.abs(half) < 1e-9, inside_line, inside_arc)
+    ends = np.minimum(np.abs(points - start), np.abs(points - end))
+    return np.where(inside, radial, ends)

@@ -1,0 +1,291 @@
+"""Where the knots of a fitted spline go: a spacing field from coarse fits, then removal of one knot after another.
+
+Ratios are distances over the distance allowed at the same sample; 1 is just allowed.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+from scipy.linalg.lapack import dptsv
+
+from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.economy.spline_fit import Basis, Fit, measure, solve
+from geometry.economy.spline_source import Source
+
+__all__ = ["State", "add_where_over", "level", "place", "refit", "remove", "spacing"]
+
+_SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
+_SLIDE_FIRST = 0.05  # the same while parameters are still those of the source
+
+
+@dataclass(frozen=True, eq=False)
+class State:
+    """A fit with the foot parameters, weights and ratios of all samples, each of shape (n,)."""
+
+    fit: Fit
+    u: FloatArray
+    weight: FloatArray
+    ratio: FloatArray
+
+    @property
+    def inner(self) -> FloatArray:
+        """Interior knots of the fit."""
+        return self.fit.basis.inner
+
+
+def refit(source: Source, basis: Basis, u: FloatArray, weight: FloatArray, allowed: FloatArray) -> State | None:
+    """Fit once and move the parameters one step on."""
+    fit = solve(source, basis, u, weight, _SLIDE)
+    if fit is None:
+        return None
+    new, distance = measure(source, fit, u)
+    return State(fit, new, weight, distance / allowed)
+
+
+def level(source: Source, state: State, allowed: FloatArray) -> State | None:
+    """Put more weight where the ratio is large, less where it is small, and fit again."""
+    span, t = state.fit.basis.locate(state.u)
+    half = 2 * span + (t > 0.5)
+    runs = np.flatnonzero(np.diff(half, prepend=-1))
+    peak = np.maximum.reduceat(state.ratio, runs)
+    wide = peak.copy()
+    wide[1:] = np.maximum(wide[1:], peak[:-1])
+    wide[:-1] = np.maximum(wide[:-1], peak[1:])
+    counts = np.diff(np.append(runs, len(half)))
+    factor = np.repeat((0.15 + np.minimum(wide, 2.0)) ** 1.5, counts)
+    weight = np.clip(state.weight * factor, 0.01 * source.step, 30.0 * source.step)
+    return refit(source, state.fit.basis, state.u, np.maximum(weight, 1e-300), allowed)
+
+
+def _span_peaks(basis: Basis, span: IntArray, ratio: FloatArray) -> FloatArray:
+    """Return the largest ratio over each span and its neighbours in the same piece, shape (s,)."""
+    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    peak = np.zeros(len(basis.start))
+    peak[span[runs]] = np.maximum.reduceat(ratio, runs)
+    same = basis.piece[1:] == basis.piece[:-1]
+    wide = peak.copy()
+    wide[1:] = np.maximum(wide[1:], np.where(same, peak[:-1], 0.0))
+    wide[:-1] = np.maximum(wide[:-1], np.where(same, peak[1:], 0.0))
+    return wide
+
+
+def _uniform(source: Source, number: IntArray) -> FloatArray:
+    """Return interior knots that cut piece i into number[i] equal spans."""
+    if source.periodic:
+        return np.arange(number[0]) * (source.high[0] / number[0])
+    piece = np.repeat(np.arange(len(number)), number - 1)
+    before = np.cumsum(number - 1) - (number - 1)
+    index = np.arange(len(piece)) - before[piece] + 1
+    return source.low[piece] + index * (source.lengths / number)[piece]
+
+
+def spacing(source: Source, allowed: FloatArray) -> FloatArray:
+    """Return the knot spacing that the curve needs at every sample, shape (n,), drawing units.
+
+    Uniform fits, each twice as fine as the one before; a sample takes its spacing from the first that is good
+    enough around it, corrected by the order of the error. Nothing is differentiated, and features smaller than
+    what is allowed ask for no knots.
+    """
+    order = 1.0 / (source.degree + 1)
+    need = np.full(len(source.along), np.nan)
+    least = source.degree + 3 if source.periodic else 1
+    number = np.full(len(source.low), least)
+    finest = np.maximum(source.spans, least)
+    open_ = np.ones(len(need), dtype=bool)
+    while True:
+        basis = Basis(source, _uniform(source, number))
+        fit = solve(source, basis, source.along, source.step, _SLIDE_FIRST)
+        if fit is not None:
+            span, t = basis.locate(source.along)
+            r = fit.at(span, t, 0)[0] - source.point
+            r -= (r * source.tangent).sum(axis=0) * source.tangent
+            ratio = np.sqrt((r * r).sum(axis=0)) / allowed
+            peaks = _span_peaks(basis, span, ratio)[span]
+            good = open_ & (peaks <= 1.0)
+            width = (source.lengths / number)[source.piece]
+            need[good] = (width * np.clip(np.maximum(peaks, 1e-12) ** -order, 0.5, 2.0))[good]
+            open_ &= ~good
+        finer = np.zeros(len(number), dtype=bool)
+        finer[source.piece[open_]] = True
+        finer &= number < finest
+        if not finer.any():
+            break
+        number = np.where(finer, np.minimum(2 * number, finest), number)
+    smallest = (source.lengths / source.spans)[source.piece]
+    return np.maximum(np.where(open_, smallest, need), smallest)
+
+
+def _coordinate(source: Source, need: FloatArray) -> FloatArray:
+    """Return the integral of dx / spacing within each piece at every sample, shape (n,)."""
+    dx = np.where(source.piece[1:] == source.piece[:-1], np.diff(source.along), 0.0)
+    steps = 0.5 * dx * (1.0 / need[1:] + 1.0 / need[:-1])
+    total = np.concatenate([[0.0], np.cumsum(steps)])
+    return total - total[source.first[:-1]][source.piece]
+
+
+def smoothed(source: Source, need: FloatArray, reach: float) -> FloatArray:
+    """Smooth the logarithm of the spacing over about `reach` spans within each piece, in linear time.
+
+    Minimises the integral of (y - log spacing)^2 + reach^2 (dy / dF)^2 over the knot coordinate F.
+    """
+    f = _coordinate(source, need)
+    df = np.maximum(np.diff(f), 1e-9)
+    same = source.piece[1:] == source.piece[:-1]
+    tie = np.where(same, reach**2 / df, 0.0)
+    mass = np.zeros(len(f))
+    mass[1:] += np.where(same, 0.5 * df, 0.0)
+    mass[:-1] += np.where(same, 0.5 * df, 0.0)
+    mass = np.maximum(mass, 1e-12)
+    diagonal = mass.copy()
+    diagonal[1:] += tie
+    diagonal[:-1] += tie
+    _, _, y, info = dptsv(diagonal, -tie, mass * np.log(need))
+    return need if info else np.exp(y)
+
+
+def place(source: Source, need: FloatArray, share: float) -> FloatArray:
+    """Return interior knots at equal steps of the knot coordinate, `share` times as many as the field asks for."""
+    f = _coordinate(source, need)
+    last = source.first[1:] - 1
+    total = f[last]
+    if source.periodic:
+        total = total + (source.high[0] - source.along[-1]) / need[-1]
+    most = np.maximum(source.spans, 1)
+    least = source.degree + 1 if source.periodic else 1
+    number = np.clip(np.ceil(total * share - 1e-9).astype(np.intp), least, np.maximum(most, least))
+    scaled = f * (number / np.maximum(total, 1e-300))[source.piece]
+    if source.periodic:
+        ends = np.append(scaled, number[0])
+        return np.interp(np.arange(number[0]), ends, np.append(source.along, source.high[0]))
+    offset = np.cumsum(number) - number
+    knots = np.interp(_whole(number, offset), scaled + offset[source.piece] + 1e-3 * source.piece, source.along)
+    return knots
+
+
+def _whole(number: IntArray, offset: IntArray) -> FloatArray:
+    """Return the interior whole numbers of every piece on the stretched coordinate of `place`."""
+    piece = np.repeat(np.arange(len(number)), number - 1)
+    before = np.cumsum(number - 1) - (number - 1)
+    index = np.arange(len(piece)) - before[piece] + 1
+    return offset[piece] + index + 1e-3 * piece
+
+
+def add_where_over(source: Source, state: State, closest: FloatArray) -> FloatArray | None:
+    """Return interior knots with every span halved that holds a ratio over 1; None if nothing can be added.
+
+    Args:
+        closest: least width of a span for every piece, shape (pieces,).
+    """
+    basis = state.fit.basis
+    span, _ = basis.locate(state.u)
+    over = np.zeros(len(basis.start), dtype=bool)
+    over[span[state.ratio > 1.0]] = True
+    return halved(source, basis, over, closest)
+
+
+def halved(source: Source, basis: Basis, which: BoolArray, closest: FloatArray) -> FloatArray | None:
+    """Return interior knots with the given spans halved where that leaves them wide enough, else None."""
+    which = which & (basis.width >= 2.0 * closest[basis.piece])
+    middle = basis.start[which] + 0.5 * basis.width[which]
+    if source.periodic:
+        middle = np.mod(middle, source.high[0])
+    if not middle.size:
+        return None
+    merged = np.unique(np.concatenate([basis.inner, middle]))
+    if source.periodic:
+        merged = merged[np.diff(np.append(merged, merged[0] + source.high[0])) > 1e-9 * source.high[0]]
+    return merged
+
+
+def significance(state: State) -> FloatArray:
+    """Return how much each interior knot matters: the jump of the highest derivative times a power of the widths."""
+    basis = state.fit.basis
+    p = state.fit.coefficients.shape[0] - 1
+    top = state.fit.coefficients[p] / basis.width**p
+    jump = np.linalg.norm(np.diff(top, axis=1), axis=0)
+    left, right = basis.width[:-1], basis.width[1:]
+    value = jump * (left * right / (left + right)) ** p
+    a, b = basis.inside
+    if len(basis.fixed):
+        return value[basis.piece[1:] == basis.piece[:-1]]
+    return value[a - 1 : b - 1]
+
+
+def _apart(value: FloatArray, slot: IntArray, distance: int) -> BoolArray:
+    """Choose small values no two of which stand within `distance` slots; infinite ones are never chosen."""
+    row = np.full(int(slot[-1]) + 1 + 2 * distance, np.inf)
+    row[slot + distance] = value
+    chosen = np.zeros(len(row), dtype=bool)
+    size = len(row)
+    for _ in range(3):
+        least = row.copy()
+        for k in range(1, distance + 1):
+            np.minimum(least[k:], row[: size - k], out=least[k:])
+            np.minimum(least[:-k], row[k:], out=least[:-k])
+        now = (row == least) & np.isfinite(row)
+        if not now.any():
+            break
+        chosen |= now
+        taken = now.copy()
+        for k in range(1, distance + 1):
+            taken[k:] |= now[: size - k]
+            taken[:-k] |= now[k:]
+        row[taken] = np.inf
+    return chosen[slot + distance]
+
+
+def remove(source: Source, state: State, allowed: FloatArray, rounds: int = 40) -> State:
+    """Take out knots one here and one there, as long as the fit stays within what is allowed.
+
+    Every round removes the least significant knots, several spans apart, and puts back those near which the refit
+    is over; a knot put back is left alone until a close neighbour goes. Accepting and refusing are local, so
+    the number of rounds does not grow with the length of the profile.
+    """
+    frozen = np.zeros(len(state.inner), dtype=bool)
+    least = source.degree + 2 if source.periodic else 0
+    for turn in range(rounds):
+        inner = state.inner
+        if frozen.all() or len(inner) <= least:
+            break
+        piece = np.maximum(np.searchsorted(source.low, inner, side="right") - 1, 0)
+        distance = 5 if turn < 6 else 8
+        value = np.where(frozen, np.inf, significance(state))
+        out = _apart(value, np.arange(len(inner)) + distance * piece, distance)
+        if not out.any():
+            break
+        if source.periodic and len(inner) - out.sum() < least:
+            keep = np.flatnonzero(out)[len(inner) - least :]
+            out[keep] = False
+        tried = out.copy()
+        good: State | None = None
+        for _ in range(4):
+            trial = refit(source, Basis(source, inner[~out]), state.u, state.weight, allowed)
+            if trial is None:
+                break
+            over = trial.ratio > 1.0
+            if not over.any():
+                good = trial
+                break
+            gone = np.flatnonzero(out)
+            if not gone.size:
+                break
+            middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
+            out[gone[np.searchsorted(middle, state.u[over])]] = False
+            if not out.any():
+                break
+        if good is None:
+            frozen |= tried
+            continue
+        back = tried & ~out
+        frozen |= back
+        if turn < 30:
+            near = out.copy()
+            for k in (1, 2):
+                near[k:] |= out[:-k]
+                near[:-k] |= out[k:]
+            frozen &= ~near
+        frozen = frozen[~out]
+        state = level(source, good, allowed) or good
+        if state.ratio.max() > 1.0:
+            state = good
+    return state
