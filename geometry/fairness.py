@@ -1,8 +1,9 @@
 """How fair a curve is: inflections, curvature extrema, least radius, strain energy, and the curvature comb.
 
 The measures are of the curve, not of the points that describe it: the counts stay the same and the lengths nearly so
-when a spline gets more knots, an arc more joints or a smooth polyline more vertices. What is too small to matter is told from what counts by height
-(distance) and turning (angle), against a scale that the caller states; the tolerance is a good one.
+when a spline gets more knots, an arc more joints or a smooth polyline more vertices. What is too small to matter is
+told from what counts by height (distance) and turning (angle), against a scale that the caller states; the tolerance is
+a good one.
 """
 
 from dataclasses import dataclass
