@@ -1,0 +1,195 @@
+"""Fair one polyline: corners kept sharp, everything between as fair as the tolerance band allows."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from geometry.arrays import FloatArray
+from geometry.bspline import Spline, join
+from geometry.corners import Corners
+from geometry.fairing.band import LIMIT, BandCheck, Nodes, repair
+from geometry.fairing.ends import corner_points
+from geometry.fairing.layout import Layout
+from geometry.fairing.lobes import remove_lobes
+from geometry.fairing.samples import by_own_length, reparametrised
+from geometry.fairing.stiffness import Fit, relax, start_stiffness
+from geometry.fairing.trace import Trace
+from geometry.polyline import Polyline
+
+__all__ = ["Faired", "fair_outline"]
+
+_CORNER_REACH = 0.97  # a corner may lie this far from the trace
+_ONE_SIDED = 6.0  # stiffness of the first fits
+_INSERTIONS = 8
+
+
+@dataclass(frozen=True, slots=True)
+class Faired:
+    """A faired profile.
+
+    Attributes:
+        spline: the curve, with a knot of full multiplicity at every corner.
+        corners: places of the corners, shape (n, d), in order of travel.
+        inserted: corners added because no fair curve kept the band without them.
+        as_given: whether even that failed, so that the curve is the polyline itself, vertex for vertex.
+    """
+
+    spline: Spline
+    corners: FloatArray
+    inserted: int
+    as_given: bool
+
+
+def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree: int = 3) -> Faired:
+    """Fair a polyline between its corners.
+
+    Sampled distances keep the result within 0.985 of the tolerance, both ways; the proof is left to the caller
+    (`geometry.deviation`). Open ends stay exactly where they are drawn.
+
+    Args:
+        polyline: cleaned, 2-D or 3-D, drawing units.
+        corners: where the tangent may jump.
+        tolerance: largest distance allowed between the polyline and the curve, both ways, drawing units.
+        degree: 3, or 2.
+    """
+    origin = 0.5 * (polyline.points.min(axis=0) + polyline.points.max(axis=0))
+    path = (polyline.path() - origin) / tolerance
+    trace = Trace(path, polyline.closed)
+    own = _separated(trace, corners.along / tolerance, np.abs(corners.turns))
+    best: tuple[Fit, Nodes, BandCheck] | None = None
+    inserted = 0
+    while True:
+        try:
+            attempt = _attempt(trace, own, degree)
+        except np.linalg.LinAlgError:
+            break
+        if best is None or attempt[2].worst < best[2].worst:
+            best = attempt
+        if attempt[2].worst <= LIMIT or inserted == _INSERTIONS:
+            break
+        own = _with_corner(trace, own, attempt[2], attempt[0])
+        inserted += 1
+    if best is None or best[2].worst > LIMIT:
+        return Faired(_as_given(polyline, degree), polyline.points, inserted, True)
+    fit, nodes, _ = best
+    spline = _spline(fit, nodes)
+    control = spline.control * tolerance + origin
+    if polyline.closed:
+        control[-1] = control[0]
+    spline = Spline(spline.knots * tolerance, control, degree, polyline.closed, spline.smooth_seam)
+    return Faired(spline, nodes.points[~nodes.fixed] * tolerance + origin, inserted, False)
+
+
+def _separated(trace: Trace, own: FloatArray, weight: FloatArray) -> FloatArray:
+    """Return corners at least one tolerance apart (and from open ends), the sharper of two kept."""
+    kept: list[float] = [] if trace.closed else [0.0, trace.length]
+    for k in np.argsort(-weight, kind="stable"):
+        gaps = np.abs(np.array(kept) - own[k])
+        if trace.closed:
+            gaps = np.minimum(gaps, trace.length - gaps)
+        if not gaps.size or gaps.min() >= 1.0:
+            kept.append(float(own[k]))
+    return np.sort(np.array(kept if trace.closed else kept[2:]))
+
+
+def _attempt(trace: Trace, own: FloatArray, degree: int) -> tuple[Fit, Nodes, BandCheck]:
+    """Fit the pieces between given corners and hold them in the band."""
+    closed = trace.closed
+    periodic = closed and not own.size
+    if periodic:
+        bounds = np.array([0.0, trace.length])
+    elif closed:
+        bounds = np.append(own, own[0] + trace.length)
+    else:
+        bounds = np.concatenate([[0.0], own, [trace.length]])
+    sampled = by_own_length(trace, bounds, periodic, degree)
+    first = np.full(len(sampled.layout), _ONE_SIDED)
+    coefficients = sampled.layout.solve(sampled.points, sampled.live, first, None)
+    nodes = _nodes(trace, own, sampled.layout, coefficients, periodic)
+    sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
+    fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins)
+    again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
+    fit = relax(again, _carried(fit, again.layout), nodes.pins)
+    fit = remove_lobes(fit, nodes.pins)
+    return repair(trace, fit, nodes)
+
+
+def _nodes(trace: Trace, own: FloatArray, layout: Layout, coefficients: FloatArray, periodic: bool) -> Nodes:
+    if periodic:
+        return Nodes(np.zeros((0, trace.dimension)), own, np.zeros(0, dtype=bool), True)
+    count = len(own)
+    pieces = np.arange(count)
+    before, after = ((pieces - 1) % count, pieces) if trace.closed else (pieces, pieces + 1)
+    points = np.zeros((0, trace.dimension))
+    if count:
+        points = corner_points(trace, layout, coefficients, before, after, own, _CORNER_REACH)
+    if trace.closed:
+        return Nodes(points, own, np.zeros(count, dtype=bool), True)
+    fixed = np.ones(count + 2, dtype=bool)
+    fixed[1:-1] = False
+    ends = np.concatenate([[0.0], own, [trace.length]])
+    return Nodes(np.concatenate([trace.path[:1], points, trace.path[-1:]]), ends, fixed, False)
+
+
+def _carried(fit: Fit, layout: Layout) -> FloatArray:
+    """Return the stiffness of a fit at the same relative places of another layout of the same pieces."""
+    old = fit.sampled.layout
+    at = np.interp(
+        layout.piece + (layout.local + 0.5) / layout.counts[layout.piece],
+        old.piece + (old.local + 0.5) / old.counts[old.piece],
+        fit.stiffness,
+    )
+    return np.asarray(at)
+
+
+def _with_corner(trace: Trace, own: FloatArray, check: BandCheck, fit: Fit) -> FloatArray:
+    """Return the corners with one more, where the trace lies farthest from the curve."""
+    if check.trace.size and check.trace.max() >= check.curve.max():
+        place = float(check.trace_own[check.trace.argmax()])
+    else:
+        place = float(fit.sampled.own.ravel()[check.curve.argmax()])
+    place = place % trace.length if trace.closed else place
+    taken = own if trace.closed else np.concatenate([[0.0], own, [trace.length]])
+    for shift in (0.0, 1.05, -1.05, 2.1, -2.1, 3.2, -3.2, 4.3, -4.3):  # the nearest place that is a tolerance clear
+        gaps = np.abs(taken - (place + shift))
+        gaps = np.minimum(gaps, np.abs(trace.length - gaps)) if trace.closed else gaps
+        inside = trace.closed or 0.0 < place + shift < trace.length
+        if inside and (not gaps.size or gaps.min() >= 1.0):
+            moved = (place + shift) % trace.length if trace.closed else place + shift
+            return np.sort(np.append(own, moved))
+    return own
+
+
+def _spline(fit: Fit, nodes: Nodes) -> Spline:
+    """Return the uniform pieces as one clamped spline."""
+    layout, degree = fit.sampled.layout, fit.sampled.layout.degree
+    pieces = []
+    for k, (start, count) in enumerate(zip(layout.starts, layout.counts, strict=True)):
+        first = layout.first[start]
+        c = fit.coefficients[first : first + count + degree]
+        if degree == 3:
+            head = [(c[0] + 4.0 * c[1] + c[2]) / 6.0, (2.0 * c[1] + c[2]) / 3.0]
+            tail = [(c[-3] + 2.0 * c[-2]) / 3.0, (c[-3] + 4.0 * c[-2] + c[-1]) / 6.0]
+            control = np.vstack([head, c[2:-2], tail])
+        else:
+            control = np.vstack([[(c[0] + c[1]) / 2.0], c[1:-1], [(c[-2] + c[-1]) / 2.0]])
+        pins = nodes.pins
+        if pins is not None:
+            control[0], control[-1] = pins[k]
+        inner = layout.lengths[k] * np.arange(count + 1) / count
+        knots = np.concatenate([np.zeros(degree), inner, np.full(degree, inner[-1])])
+        pieces.append(Spline(knots, control, degree))
+    if pins is None:
+        only = pieces[0]
+        return Spline(only.knots, only.control, degree, True, True)
+    return join(pieces, nodes.closed)
+
+
+def _as_given(polyline: Polyline, degree: int) -> Spline:
+    """Return the polyline as a spline with a corner at every vertex."""
+    path = polyline.path()
+    fraction = np.arange(degree) / degree
+    control = (path[:-1, None] + fraction[:, None] * np.diff(path, axis=0)[:, None]).reshape(-1, path.shape[1])
+    along = Polyline(path).alongs()
+    knots = np.concatenate([[0.0], np.repeat(along, degree), along[-1:]])
+    return Spline(knots, np.vstack([control, path[-1:]]), degree, polyline.closed)

@@ -1,0 +1,106 @@
+"""Take out needless inflections: stiffen small lobes of curvature where the band and the size still hold.
+
+A lobe is a run of curvature of one sign within a piece. Its height is turning times length over 8, the sagitta of
+an arc of that turn and length; a lobe whose height is below half the tolerance is not supported by the evidence.
+"""
+
+import numpy as np
+
+from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.fairing.layout import Layout
+from geometry.fairing.samples import normal_offsets
+from geometry.fairing.stiffness import BAND, Fit, local_means, spread, worst_of
+
+__all__ = ["remove_lobes"]
+
+_FLAT = 0.003  # curvature that is not counted, per tolerance
+_HEIGHT = 0.5
+_STIFFER, _STIFFEST = 1.5, 60.0
+_MEAN_4, _MEAN_8 = 0.35, 0.30
+_ROUNDS = 12
+
+
+def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
+    """Return the fit with small lobes of curvature flattened (2-D; a 3-D curve has no sign and is returned as it is)."""
+    sampled, layout = fit.sampled, fit.sampled.layout
+    if sampled.points.shape[-1] != 2:
+        return fit
+    live, base = sampled.live, fit.stiffness
+    allowed = np.maximum(_excess(fit, fit.coefficients, live) + 1e-9, 1.0)
+    stiffness, coefficients = base.copy(), fit.coefficients
+    frozen = np.zeros(len(layout), dtype=bool)
+    for _ in range(_ROUNDS):
+        chosen = _stretches(layout, coefficients) & ~frozen & (stiffness < _STIFFEST)
+        if not chosen.any():
+            break
+        stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
+        coefficients = layout.solve(sampled.points, live, stiffness, pins)
+        for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
+            broken = _excess(fit, coefficients, live) > factor * allowed
+            if not broken.any():
+                break
+            back = spread(layout, broken, reach)
+            stiffness = np.where(back, base, stiffness)
+            frozen |= back
+            coefficients = layout.solve(sampled.points, live, stiffness, pins)
+    if (_excess(fit, coefficients, live) > 1.02 * allowed).any():
+        return fit
+    return Fit(sampled, coefficients, stiffness)
+
+
+def _excess(fit: Fit, coefficients: FloatArray, live: BoolArray) -> FloatArray:
+    """Return the largest of the offsets and local means over their limits, for every interval."""
+    layout = fit.sampled.layout
+    offsets = normal_offsets(fit.sampled, coefficients) * live[..., None]
+    return np.maximum.reduce([
+        worst_of(offsets) / BAND,
+        local_means(layout, offsets, live, 4.0) / _MEAN_4,
+        local_means(layout, offsets, live, 8.0) / _MEAN_8,
+    ])
+
+
+def _stretches(layout: Layout, coefficients: FloatArray) -> BoolArray:
+    """Return the intervals of small lobes that have a neighbour lobe, and as wide a margin beside them."""
+    middle = np.arange(len(layout))
+    t = np.full(len(layout), 0.5)
+    first, second = (layout.evaluate(coefficients, middle, t, k) for k in (1, 2))
+    speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
+    curvature = (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3
+    start, stop = _runs(layout, np.where(np.abs(curvature) < _FLAT, 0.0, np.sign(curvature)))
+    turning = np.concatenate([[0.0], np.cumsum(np.where(np.abs(curvature) < _FLAT, 0.0, np.abs(curvature)) * speed * layout.h)])
+    along = np.concatenate([[0.0], np.cumsum(speed * layout.h)])
+    height = (turning[stop] - turning[start]) * (along[stop] - along[start]) / 8.0
+    pieces = layout.piece[start]
+    if layout.periodic:
+        neighbour = np.full(len(start), len(start) > 1)
+    else:
+        same = pieces[1:] == pieces[:-1]
+        neighbour = np.concatenate([same, [False]]) | np.concatenate([[False], same])
+    chosen = np.flatnonzero(neighbour & (height < _HEIGHT))
+    margin = np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
+    change = np.zeros(len(layout) + 1)
+    if layout.periodic:
+        out = np.zeros(len(layout), dtype=bool)
+        for k in chosen:
+            out[np.mod(np.arange(start[k] - margin[k], stop[k] + margin[k]), len(layout))] = True
+        return out
+    low = np.maximum(start - margin, layout.starts[pieces])[chosen]
+    high = np.minimum(stop + margin, layout.starts[pieces] + layout.counts[pieces])[chosen]
+    np.add.at(change, low, 1.0)
+    np.add.at(change, high, -1.0)
+    return np.cumsum(change[:-1]) > 0.5
+
+
+def _runs(layout: Layout, sign: FloatArray) -> tuple[IntArray, IntArray]:
+    """Return [start, stop) of runs of one sign in each piece; flat intervals go with the run before them."""
+    size = len(sign)
+    if layout.periodic and (sign != 0.0).any():
+        sign = np.where((sign == 0.0) & (np.arange(size) < np.argmax(sign != 0.0)), sign[np.flatnonzero(sign)[-1]], sign)
+    index = np.where(sign != 0.0, np.arange(size), -1)
+    index = np.maximum(np.maximum.accumulate(index), layout.starts[layout.piece])
+    filled = sign[index]
+    edge = (filled[1:] != filled[:-1]) | (layout.piece[1:] != layout.piece[:-1])
+    # a flat beginning of a piece joins the first lobe
+    flat_start = (filled[:-1] == 0.0) & (layout.piece[1:] == layout.piece[:-1])
+    cuts = 1 + np.flatnonzero(edge & ~flat_start)
+    return np.concatenate([[0], cuts]), np.concatenate([cuts, [size]])

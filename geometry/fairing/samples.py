@@ -1,0 +1,126 @@
+"""Samples of the trace on a layout, and the map between the trace's own arc length and the fit's."""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from geometry.arrays import BoolArray, FloatArray
+from geometry.fairing.layout import Layout
+from geometry.fairing.trace import Trace
+
+__all__ = ["Sampled", "by_own_length", "normal_offsets", "reparametrised"]
+
+_DEAD, _DEAD_SHARE = 1.0, 0.3  # zones at corners that carry no weight: the trace rounds corners off
+_FOOT_STEP = 0.7
+
+
+@dataclass(frozen=True, slots=True)
+class Sampled:
+    """A layout with the samples that it is fitted to.
+
+    Attributes:
+        layout: knot intervals.
+        own: arc length of the trace at every sample, shape (m, q).
+        points: the trace there, shape (m, q, d).
+        bounds: arc length of the trace where each piece starts, and where the last one ends, shape (p + 1,).
+        own_nodes, fit_nodes: the map from the trace's arc length to the parameter counted through all pieces.
+        dead: zones without weight at both ends of each piece, shape (p, 2).
+    """
+
+    layout: Layout
+    own: FloatArray
+    points: FloatArray
+    bounds: FloatArray
+    own_nodes: FloatArray
+    fit_nodes: FloatArray
+    dead: FloatArray
+
+    @property
+    def live(self) -> BoolArray:
+        """Samples that count, shape (m, q)."""
+        return self.layout.live(self.dead)
+
+    def position_of(self, own: FloatArray) -> FloatArray:
+        """Return the parameter, counted through all pieces, for arc lengths of the trace from the first bound on."""
+        return np.interp(own, self.own_nodes, self.fit_nodes)
+
+
+def _sampled(
+    trace: Trace, layout: Layout, bounds: FloatArray, own_nodes: FloatArray, fit_nodes: FloatArray
+) -> Sampled:
+    position = layout.sample_positions() + layout.offsets[layout.piece][:, None]
+    own = np.interp(position, fit_nodes, own_nodes)
+    dead = np.minimum(_DEAD, _DEAD_SHARE * layout.lengths)[:, None] * np.ones(2)
+    return Sampled(layout, own, trace.at(own), bounds, own_nodes, fit_nodes, dead)
+
+
+def by_own_length(trace: Trace, bounds: FloatArray, periodic: bool, degree: int) -> Sampled:
+    """Lay out pieces on the trace's own arc length.
+
+    Args:
+        bounds: arc lengths that cut the trace into pieces, increasing, shape (p + 1,); on a loop the last one may
+            pass the length by up to one turn.
+    """
+    layout = Layout(np.diff(bounds), periodic, degree)
+    return _sampled(trace, layout, bounds, bounds, bounds - bounds[0])
+
+
+def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pins: FloatArray | None) -> Sampled:
+    """Lay out the pieces afresh on the arc length of a fit.
+
+    Every live sample takes the arc length of its foot point on the fit (one Newton step from its own parameter); at
+    piece ends the straight distance from the pin to the nearest foot point is added.
+
+    Args:
+        pins: points where pieces start and end, shape (p, 2, d); None for a periodic piece.
+    """
+    layout = sampled.layout
+    x, dx, ddx = (layout.at_samples(coefficients, k) for k in range(3))
+    gap = sampled.points - x
+    square = (dx * dx).sum(axis=-1)
+    bend = np.minimum((gap * ddx).sum(axis=-1), 0.5 * square)
+    move = np.clip((gap * dx).sum(axis=-1) / np.maximum(square - bend, 1e-12), -_FOOT_STEP, _FOOT_STEP)
+    live = sampled.live
+    piece = np.broadcast_to(layout.piece[:, None], live.shape)[live]
+    own = sampled.own[live]
+    local = (layout.sample_positions() + move)[live]
+    if layout.periodic:
+        foot = np.maximum.accumulate(local)
+        foot = np.minimum(foot, foot[0] + layout.lengths[0])
+        interval, t = layout.locate(piece, np.mod(foot, layout.lengths[0]))
+        points = layout.evaluate(coefficients, interval, t)
+        step = np.sqrt((np.diff(np.concatenate([points, points[:1]]), axis=0) ** 2).sum(axis=1))
+        along = np.concatenate([[0.0], np.cumsum(step)])
+        own_nodes = np.append(own, own[0] + trace.length)
+        fresh = Layout(along[-1:], True, layout.degree)
+        return _sampled(trace, fresh, own_nodes[[0, -1]], own_nodes, along)
+    assert pins is not None
+    held = np.clip(local, 0.0, layout.lengths[piece])
+    shift = layout.offsets[piece]
+    foot = np.maximum.accumulate(held + shift) - shift
+    interval, t = layout.locate(piece, np.maximum(foot, 0.0))
+    points = layout.evaluate(coefficients, interval, t)
+    # nodes of every piece: its start pin, its live samples, its end pin
+    pieces = len(layout.lengths)
+    owner = np.concatenate([piece, np.arange(pieces), np.arange(pieces)])
+    rank = np.concatenate([np.ones(len(piece)), np.zeros(pieces), np.full(pieces, 2.0)])
+    order = np.lexsort((np.arange(len(owner)), rank, owner))
+    nodes = np.concatenate([points, pins[:, 0], pins[:, 1]])[order]
+    own_nodes = np.concatenate([own, sampled.bounds[:-1], sampled.bounds[1:]])[order]
+    step = np.sqrt((np.diff(nodes, axis=0) ** 2).sum(axis=1))
+    step[np.diff(owner[order]) > 0] = 0.0  # from one piece's end pin to the next one's start pin
+    along = np.concatenate([[0.0], np.cumsum(step)])
+    ends = np.flatnonzero(rank[order] == 2.0)
+    lengths = np.maximum(np.diff(np.concatenate([[0.0], along[ends]])), 1e-6)
+    return _sampled(trace, Layout(lengths, False, layout.degree), sampled.bounds, own_nodes, along)
+
+
+def normal_offsets(sampled: Sampled, coefficients: FloatArray) -> FloatArray:
+    """Return the samples' offsets across the fit: signed, left positive, shape (m, q, 1); in 3-D vectors (m, q, 3)."""
+    x, dx = sampled.layout.at_samples(coefficients, 0), sampled.layout.at_samples(coefficients, 1)
+    gap = sampled.points - x
+    speed = np.maximum(np.sqrt((dx * dx).sum(axis=-1)), 1e-12)
+    if gap.shape[-1] == 2:
+        return ((dx[..., 0] * gap[..., 1] - dx[..., 1] * gap[..., 0]) / speed)[..., None]
+    unit = dx / speed[..., None]
+    return gap - (gap * unit).sum(axis=-1, keepdims=True) * unit
