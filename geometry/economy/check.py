@@ -15,39 +15,40 @@ __all__ = ["arc_samples", "distance_to_arcs", "feet", "two_sided"]
 
 def two_sided(
     track: Track,
-    joints: ComplexArray,
+    start: ComplexArray,
+    end: ComplexArray,
     bulges: FloatArray,
     s: FloatArray,
-    piece: IntArray,
+    group: IntArray,
     samples: int = 16,
 ) -> FloatArray:
     """Return, per line or arc, the largest sampled distance between it and its stretch of the track.
 
     Args:
         track: the curve.
-        joints: chain vertices in order, the last one included, complex, shape (n + 1,).
-        bulges: of the pieces, shape (n,).
-        s: arc length on the track that belongs to the start and the end of every piece, shape (n, 2).
-        piece: smooth piece of the track that every line or arc belongs to, shape (n,); neighbours of another smooth
-            piece are not looked at.
+        start, end: ends of the lines and arcs, complex, shapes (n,).
+        bulges: of the lines and arcs, shape (n,).
+        s: arc length on the track that belongs to the start and the end of each, shape (n, 2).
+        group: chain that each belongs to, shape (n,); only neighbours of the same chain are looked at.
         samples: on every stretch, each way.
     """
     n = len(bulges)
     share = (np.arange(samples) + 0.5) / samples
     along = s[:, :1] + (s[:, 1:] - s[:, :1]) * share
     curve = track.points(along)
-    to_chain = distance_to_arcs(curve, joints[:-1, None], joints[1:, None], bulges[:, None])
+    to_chain = distance_to_arcs(curve, start[:, None], end[:, None], bulges[:, None])
     for other in (-1, 1):  # near a joint the neighbour may be nearer
         index = np.arange(n) + other
         index = np.mod(index, n) if track.closed else np.clip(index, 0, n - 1)
-        index = np.where(piece[index] == piece, index, np.arange(n))
-        near = distance_to_arcs(curve, joints[:-1][index, None], joints[1:][index, None], bulges[index, None])
+        index = np.where(group[index] == group, index, np.arange(n))
+        near = distance_to_arcs(curve, start[index, None], end[index, None], bulges[index, None])
         to_chain = np.minimum(to_chain, near)
-    points = arc_samples(joints[:-1, None], joints[1:, None], bulges[:, None], np.linspace(0.0, 1.0, samples + 1))
+    points = arc_samples(start[:, None], end[:, None], bulges[:, None], np.linspace(0.0, 1.0, samples + 1))
     guess = s[:, :1] + (s[:, 1:] - s[:, :1]) * np.linspace(0.0, 1.0, samples + 1)
     reach = s[:, 1:] - s[:, :1]
     low, high = s[:, :1] - reach, s[:, 1:] + reach
     if not track.closed:
+        piece = np.searchsorted(track.s[track.first], 0.5 * (s[:, 0] + s[:, 1]), side="right") - 1
         low = np.maximum(low, track.s[track.first][piece][:, None])
         high = np.minimum(high, track.s[track.last][piece][:, None])
     to_curve = np.abs(points - track.points(feet(track, points, guess, low, high)))

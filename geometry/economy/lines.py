@@ -119,11 +119,11 @@ def _worst(gates: Gates, track: Track, vertices: Vertices) -> float:
     block_end = np.append(vertices.block[1:] != vertices.block[:-1], True)
     here = gates.s[vertices.gate]
     there = np.where(block_end, gates.s[gates.last[vertices.block]], np.roll(here, -1))
-    piece = np.searchsorted(track.first, np.searchsorted(track.s, here, side="right") - 1, side="right") - 1
     samples = 16 if len(here) < MANY else 4
     path = _path(gates, track, vertices)
     s = np.stack([here, there], axis=1)
-    return float(two_sided(track, path, np.zeros(len(here)), s, piece, samples).max())
+    group = np.zeros(len(here), dtype=np.intp)
+    return float(two_sided(track, path[:-1], path[1:], np.zeros(len(here)), s, group, samples).max())
 
 
 def _polyline(gates: Gates, track: Track, vertices: Vertices) -> Polyline:

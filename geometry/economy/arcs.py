@@ -1,0 +1,294 @@
+"""Fewest arcs: the chain of lines and circular arcs of least count within a chord error, tangent continuous."""
+
+from collections.abc import Generator
+
+import numpy as np
+
+from geometry.arcs import ArcChain, full_circle
+from geometry.arrays import FloatArray, IntArray
+from geometry.bspline import Spline
+from geometry.economy.arc_newton import Polished, chain_bulges, measure_chains, polish
+from geometry.economy.arc_start import Chain, arc_demand, start_chain
+from geometry.economy.biarcs import biarc_chain
+from geometry.economy.check import distance_to_arcs
+from geometry.economy.track import ComplexArray, Track, track_of
+from geometry.errors import GeometryError
+
+__all__ = ["fewest_arcs"]
+
+Driver = Generator[Chain, Polished, Chain]
+
+GROW_ROUNDS = 12
+STRENGTH = 31.0  # chord errors that a joint's strength has where arcs are as long as they can be
+DEFECT = 1e-9  # radians a joint may kink
+
+
+def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> ArcChain:
+    """Return a chain of few lines and arcs within a chord error of a planar spline, both ways.
+
+    Between corners the chain is tangent continuous, its joints need not lie on the curve; a closed spline without a
+    corner gives a closed chain that is tangent continuous at the seam too. A smooth piece within the chord error of
+    its chord becomes one line. A circle comes back as two semicircles (`full_circle`).
+
+    Args:
+        spline: degree 1 to 3, planar.
+        chord_error: largest distance allowed between spline and chain, drawing units.
+        thorough: whether to spend more time on a smaller count.
+
+    Returns:
+        The chain, closed when the spline is, checked on dense samples. Where the sparse method finds nothing within the
+        chord error, biarcs are halved until they are.
+
+    Raises:
+        GeometryError: the spline is not planar or has no length, or the chord error is not positive.
+    """
+    if not (chord_error > 0.0 and np.isfinite(chord_error)):
+        raise GeometryError(f"chord error {chord_error:g} is not a positive number")
+    track = track_of(spline)
+    straight = _straight_pieces(track, chord_error)
+    chains: list[Chain | None] = [None] * len(track.first)
+    drivers: dict[int, Driver] = {}
+    for piece in np.flatnonzero(~straight).tolist():
+        drivers[piece] = _drive(track, piece, chord_error, thorough)
+    waiting = {piece: next(driver) for piece, driver in drivers.items()}
+    while waiting:
+        pieces = list(waiting)
+        for piece, result in zip(pieces, polish(track, chord_error, [waiting[p] for p in pieces]), strict=True):
+            try:
+                waiting[piece] = drivers[piece].send(result)
+            except StopIteration as stop:
+                chains[piece] = stop.value
+                del waiting[piece]
+    return _assembled(track, chains)
+
+
+def _straight_pieces(track: Track, chord_error: float) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
+    """Return which open pieces lie within the chord error of their chord."""
+    if track.closed:
+        return np.zeros(1, dtype=np.bool_)
+    node = np.arange(len(track.s))
+    piece = np.searchsorted(track.first, node, side="right") - 1
+    points = track.points(track.s)
+    start, end = points[track.first][piece], points[track.last][piece]
+    off = distance_to_arcs(points, start, end, np.zeros(len(points)))
+    return np.asarray(np.maximum.reduceat(off, track.first) <= 0.99 * chord_error)
+
+
+def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driver:
+    """Find the chain of one piece: grow until it fits, shrink while it fits, make lines; yields chains to polish."""
+    demand = arc_demand(track, piece, chord_error)
+    accepted = yield from _grown(track, piece, demand, chord_error, thorough)
+    if accepted is None:
+        accepted = _by_biarcs(track, piece, demand, chord_error)
+    accepted = yield from _shrunk(accepted, chord_error, thorough)
+    accepted = yield from _with_lines(accepted, chord_error)
+    return accepted.chain
+
+
+def _fits(result: Polished, chord_error: float) -> bool:
+    return result.worst <= chord_error and result.defect < DEFECT
+
+
+def _grown(
+    track: Track, piece: int, demand: tuple[FloatArray, FloatArray], chord_error: float, thorough: bool
+) -> Generator[Chain, Polished, Polished | None]:
+    """Start from the demand and add joints where the error is, until the chain fits; None when it never does."""
+    least = 4 if track.closed else 1
+    estimate = float(demand[1][-1])
+    count = max(least, int(np.ceil(estimate) if thorough else np.ceil(1.03 * estimate + 0.5)))
+    restarts = 0
+    chain = start_chain(track, piece, demand, count, 0.25)
+    for turn in range(GROW_ROUNDS):
+        result = yield chain
+        if _fits(result, chord_error):
+            return result
+        lost = not np.isfinite(result.worst) or (turn > 3 and turn % 3 == 0 and result.worst > 8.0 * chord_error)
+        if lost:
+            restarts += 1
+            if restarts > 3:
+                return None
+            count = int(np.ceil(1.04 * count + 1.0))
+            chain = start_chain(track, piece, demand, count, 0.25 + 0.37 * restarts)
+            continue
+        chain = _with_more(track, result, chord_error, thorough)
+        count = chain.count
+    return None
+
+
+def _with_more(track: Track, result: Polished, chord_error: float, thorough: bool) -> Chain:
+    """Return a chain with joints added in the middle of its worst arcs."""
+    chain, errors = result.chain, result.errors
+    n = chain.count
+    wanted = round(float(np.cbrt(np.minimum(errors / chord_error, 1e3)).sum()) - n)
+    wanted = max(wanted, 1 if thorough else int(np.ceil(0.015 * n)), 1)
+    wanted = min(wanted, max(1, int(0.3 * n)))
+    left, right = (
+        (np.roll(errors, 1), np.roll(errors, -1)) if chain.closed else (_shifted(errors, 1), _shifted(errors, -1))
+    )
+    peaks = np.flatnonzero((errors >= left) & (errors >= right))
+    worst = np.sort(peaks[np.argsort(errors[peaks])[::-1][:wanted]])
+    joints, angles, s = _extended(track, chain)
+    chord = np.diff(joints)
+    half = 0.5 * np.diff(angles)
+    middle = 0.5 * (joints[:-1] + joints[1:]) - 0.5j * chord * np.tan(0.5 * np.clip(half, -1.5, 1.5))
+    heading = 0.5 * (angles[:-1] + angles[1:])
+    at = worst + 1
+    return Chain(
+        chain.piece,
+        np.insert(chain.joint, at, middle[worst]),
+        np.insert(chain.angle, at, heading[worst]),
+        np.insert(chain.s, at, 0.5 * (s[:-1] + s[1:])[worst]),
+        np.zeros(n + len(worst), dtype=np.bool_),
+        chain.closed,
+    )
+
+
+def _shifted(values: FloatArray, by: int) -> FloatArray:
+    out = np.zeros_like(values)
+    if by > 0:
+        out[by:] = values[:-by]
+    else:
+        out[:by] = values[-by:]
+    return out
+
+
+def _extended(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, FloatArray]:
+    """Return joints, angles and arc lengths with the end of the last arc."""
+    if not chain.closed:
+        return chain.joint, chain.angle, chain.s
+    return (
+        np.append(chain.joint, chain.joint[0]),
+        np.append(chain.angle, chain.angle[0] + track.turn),
+        np.append(chain.s, chain.s[0] + track.period),
+    )
+
+
+def _by_biarcs(track: Track, piece: int, demand: tuple[FloatArray, FloatArray], chord_error: float) -> Polished:
+    count = max(4, int(np.ceil(0.5 * demand[1][-1])))
+    chain = start_chain(track, piece, demand, count, 0.0)
+    s = np.append(chain.s, chain.s[0] + track.period) if track.closed else chain.s
+    return measure_chains(track, [biarc_chain(track, piece, s, chord_error)])[0]
+
+
+def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Chain, Polished, Polished]:
+    """Take out the weakest joints while the chain still fits."""
+    barred = np.zeros(len(accepted.chain.joint), dtype=np.bool_)
+    failures, share = 0, 1.0
+    while failures < (3 if thorough else 2):
+        weak = _weak_joints(accepted.chain, barred, (14.0 if thorough else 4.0) * chord_error, chord_error)
+        if not len(weak):
+            break
+        weak = weak[: max(1, int(np.ceil(share * len(weak))))]
+        result = yield _without(accepted.chain, weak)
+        if _fits(result, chord_error):
+            accepted, share = result, 1.0
+            barred = np.delete(barred, weak)
+        else:
+            failures += len(weak) == 1
+            barred[weak[0]] = len(weak) == 1
+            share = 1.0 / 3.0 if len(weak) > 1 and share == 1.0 else 0.0
+    return accepted
+
+
+def _weak_joints(
+    chain: Chain, barred: np.ndarray[tuple[int, ...], np.dtype[np.bool_]], most: float, sure: float
+) -> IntArray:
+    """Return the joints to take out, the weakest first: that one if under `most`, others, none adjacent, if under `sure`.
+
+    The strength of a joint is its jump of curvature times (x y / (x + y))^2 with x, y the chords beside it: about eight
+    times the distance by which one arc over both would miss them.
+    """
+    joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
+    if chain.count < (3 if chain.closed else 2):
+        return np.zeros(0, dtype=np.intp)
+    chord = np.abs(np.diff(joints))
+    bend = _bends(chain, joints)
+    if chain.closed:
+        x, y, jump = np.roll(chord, 1), chord, bend - np.roll(bend, 1)
+        number = np.arange(chain.count)
+    else:
+        x, y, jump = chord[:-1], chord[1:], np.diff(bend)
+        number = 1 + np.arange(chain.count - 1)
+    strength = np.where(barred[number], np.inf, np.abs(jump) * (x * y / (x + y)) ** 2)
+    order = np.argsort(strength)
+    if strength[order[0]] >= most:
+        return np.zeros(0, dtype=np.intp)
+    taken = [int(number[order[0]])]
+    blocked = {taken[0] - 1, taken[0] + 1}
+    room = chain.count - (2 if chain.closed else 1)
+    size = len(chain.joint)
+    for index in order[1:].tolist():
+        joint = int(number[index])
+        if strength[index] >= sure or len(taken) >= room:
+            break
+        if joint not in blocked:
+            taken.append(joint)
+            blocked |= {(joint - 1) % size, (joint + 1) % size} if chain.closed else {joint - 1, joint + 1}
+    return np.array(taken, dtype=np.intp)
+
+
+def _bends(chain: Chain, joints: ComplexArray) -> FloatArray:
+    """Return the curvature of every arc, from its chord and the tangent at its start."""
+    chord = np.diff(joints)
+    start = chain.angle if chain.closed else chain.angle[:-1]
+    return np.asarray(2.0 * np.sin(np.angle(chord * np.exp(-1j * start))) / np.maximum(np.abs(chord), 1e-300))
+
+
+def _without(chain: Chain, joints: IntArray) -> Chain:
+    """Return the chain with some joints taken out; arcs that were lines stay so only when whole."""
+    line = chain.line.copy()
+    line[joints - 1] = False
+    return Chain(
+        chain.piece,
+        np.delete(chain.joint, joints),
+        np.delete(chain.angle, joints),
+        np.delete(chain.s, joints),
+        np.delete(line, joints),
+        chain.closed,
+    )
+
+
+def _with_lines(accepted: Polished, chord_error: float) -> Generator[Chain, Polished, Polished]:
+    """Hold nearly straight arcs straight where the chain still fits, the boldest choice first."""
+    for share in (1.0, 0.25, 0.02):
+        chain = accepted.chain
+        joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
+        chord = np.abs(np.diff(joints))
+        half = np.arcsin(np.clip(0.5 * chord * _bends(chain, joints), -1.0, 1.0))
+        sagitta = 0.25 * chord * np.abs(half)
+        line = chain.line.copy()
+        for index in np.argsort(sagitta).tolist():
+            if sagitta[index] >= share * chord_error:
+                break
+            neighbours = [index - 1, (index + 1) % chain.count] if chain.closed else [index - 1, index + 1]
+            if not any(0 <= k < chain.count and line[k] for k in neighbours) and not (chain.closed and line[index - 1]):
+                line[index] = True
+        if np.array_equal(line, chain.line):
+            continue
+        result = yield Chain(chain.piece, chain.joint, chain.angle, chain.s, line, chain.closed)
+        if _fits(result, chord_error):
+            return result
+    return accepted
+
+
+def _assembled(track: Track, chains: list[Chain | None]) -> ArcChain:
+    """Return the chains of all pieces as one; a piece without a chain is a line."""
+    points: list[ComplexArray] = []
+    bulges: list[FloatArray] = []
+    for piece, chain in enumerate(chains):
+        if chain is None:
+            points.append(track.points(track.s[track.first[piece]][None]))
+            bulges.append(np.zeros(1))
+            continue
+        joints, bent, _ = chain_bulges(track, chain)
+        points.append(joints[:-1])
+        bulges.append(bent)
+    if not track.chained:
+        points.append(track.points(track.s[track.last[-1]][None]))
+    out = ArcChain(track.to_xy(np.concatenate(points)), np.concatenate(bulges), track.chained)
+    if track.closed and len(out.bulges) == 2:
+        centre, radius = out.circles()
+        if abs(radius[0] - radius[1]) <= 1e-9 * radius[0]:
+            circle = full_circle(centre.mean(axis=0), float(radius.mean()))
+            return circle if out.bulges[0] > 0.0 else circle.reversed()
+    return out
