@@ -1,0 +1,98 @@
+"""What people and scripts read after a job: the sentence, the table, the JSON record."""
+
+import json
+import math
+from pathlib import Path
+from typing import Any
+
+from converter.files import write_text
+from converter.jobs.records import FairRecord, ProfileRecord
+
+__all__ = ["CAUTION", "FAIR_HEADINGS", "fair_rows", "fair_sentence", "write_json"]
+
+CAUTION = (
+    "Before cutting: check units and scale on a scrap piece. The tolerance is geometric; it leaves kerf, tool radius and "
+    "material out. Load-bearing and flight parts need a licensed engineer's approval under local codes."
+)
+FAIR_HEADINGS = ("profile", "layer", "given", "written", "corners", "deviation", "of", "mean", "inflections")
+
+
+def write_json(path: Path, record: dict[str, Any], force: bool, inputs: list[Path]) -> None:
+    """Write a record as JSON; numbers that are not finite become null.
+
+    Raises:
+        OutputError: the file exists without `force`, is an input, or cannot be written.
+    """
+    write_text(path, json.dumps(_finite(record), indent=1, allow_nan=False) + "\n", force, inputs)
+
+
+def _finite(value: Any) -> Any:
+    if isinstance(value, dict):
+        return {key: _finite(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [_finite(item) for item in value]
+    if isinstance(value, float) and not math.isfinite(value):
+        return None
+    return value
+
+
+def fair_rows(record: FairRecord) -> list[tuple[str, ...]]:
+    """Return a row of text for every profile, the one that uses most of its tolerance first."""
+
+    def used(profile: ProfileRecord) -> float:
+        if profile.deviation is None or not profile.tolerance:
+            return -1.0
+        return profile.deviation.certified / profile.tolerance
+
+    return [_row(profile) for profile in sorted(record.profiles, key=used, reverse=True)]
+
+
+def _row(profile: ProfileRecord) -> tuple[str, ...]:
+    given = f"{profile.vertices_in} vertices, {'closed' if profile.closed else 'open'}"
+    if profile.left_as_drawn is not None or profile.deviation is None:
+        return (profile.id, profile.layer, profile.entity, f"as drawn: {profile.left_as_drawn}", "", "", "", "", "")
+    mean = profile.deviation.mean_signed
+    change = ""
+    if profile.fairness is not None:
+        change = f"{profile.fairness['before']['inflections']} -> {profile.fairness['after']['inflections']}"
+    return (
+        profile.id,
+        profile.layer,
+        given,
+        _written(profile),
+        str(len(profile.corners)),
+        f"{profile.deviation.certified:.3g}" + ("" if profile.within_tolerance else " OUT"),
+        f"{profile.tolerance:.3g}",
+        "" if mean is None else f"{mean:+.2g}",
+        change,
+    )
+
+
+def _written(profile: ProfileRecord) -> str:
+    if profile.control_points:
+        return f"{profile.entity}, {profile.control_points} control points"
+    if profile.arcs:
+        return f"{profile.entity}, {_counted(profile.arcs, 'arc')}, {_counted(profile.lines, 'line')}"
+    return f"{profile.entity}, {profile.vertices_out} vertices"
+
+
+def _counted(number: int, noun: str) -> str:
+    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"
+
+
+def fair_sentence(record: FairRecord) -> str:
+    """Return the outcome in one sentence."""
+    faired = [profile for profile in record.profiles if profile.left_as_drawn is None]
+    left = len(record.profiles) - len(faired)
+    parts = [f"{_counted(len(faired), 'profile')} faired"]
+    if left:
+        parts[0] += f", {left} left as drawn"
+    measured = [p for p in faired if p.deviation is not None and p.tolerance]
+    if measured:
+        worst = max(measured, key=lambda p: p.deviation.certified / p.tolerance)  # type: ignore[union-attr, operator]
+        unit = "" if record.units == "unitless" else f" {record.units}"
+        assert worst.deviation is not None
+        parts.append(f"certified deviation at most {worst.deviation.certified:.3g} of {worst.tolerance:.3g}{unit}")
+    out = [p.id for p in faired if not p.within_tolerance]
+    parts.append(f"out of tolerance: {', '.join(out)}" if out else "none out of tolerance")
+    return "; ".join(parts)
