@@ -10,10 +10,10 @@ from dataclasses import dataclass
 import numpy as np
 from scipy.linalg.lapack import dpbsv
 
-from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.arrays import FloatArray, IntArray
 from geometry.economy.spline_source import Source
 
-__all__ = ["Basis", "Fit", "measure", "solve"]
+__all__ = ["Basis", "Bend", "Fit", "measure", "solve"]
 
 
 class Basis:
@@ -27,8 +27,9 @@ class Basis:
         matrix: matrix[s, i, k] is the coefficient of t^k of basis function i, t = (u - start) / width.
         count: number of control points.
         fixed: control points that are ends of pieces, shape (2 * pieces,); none if periodic.
-        after: periodic: first and one past the last span of the period; a few more stand on either side, so that
+        inside: periodic: first and one past the last span of the period; a few more stand on either side, so that
             samples may drift over the seam. Else 0 and s.
+        low, high: ends of the parameters of every piece, shape (pieces,).
     """
 
     def __init__(self, source: Source, inner: FloatArray) -> None:
@@ -64,7 +65,8 @@ class Basis:
         self.order: IntArray = order
         self.start, self.width = knots[span], knots[span + 1] - knots[span]
         self.matrix = _polynomials(knots, span, p)
-        self.low, self.high = (self.start[0], self.start[-1] + self.width[-1]) if source.periodic else (-np.inf, np.inf)
+        self.low: FloatArray = self.start[:1] if source.periodic else source.low
+        self.high: FloatArray = self.start[-1:] + self.width[-1:] if source.periodic else source.high
 
     @property
     def edges(self) -> FloatArray:
@@ -129,61 +131,96 @@ class Fit:
         return out
 
 
-def solve(source: Source, basis: Basis, u: FloatArray, weight: FloatArray, slide: float) -> Fit | None:
+@dataclass(frozen=True, eq=False)
+class Bend:
+    """Asks that second derivatives follow the curvature of the source.
+
+    Attributes:
+        weight: of the squared residual of the second derivative, tangential part cut, shape (n,).
+        speed: length of source for a unit of parameter, shape (n,).
+    """
+
+    weight: FloatArray
+    speed: FloatArray
+
+
+def solve(
+    source: Source, basis: Basis, u: FloatArray, weight: FloatArray, slide: float, bend: Bend | None = None
+) -> Fit | None:
     """Return the least-squares fit with the ends of pieces pinned, or None if the system cannot be solved.
 
     Args:
         u: parameter of every sample, non-decreasing, shape (n,).
         weight: W of every sample, shape (n,), positive.
         slide: a, the share of a tangential residual that counts, in (0, 1].
+        bend: if given, second derivatives are fitted too.
     """
-    p, d = source.degree, len(source.point)
     span, t = basis.locate(u)
+    local, load = _normal(source, basis, span, t, weight, slide, source.point, basis.matrix)
+    if bend is not None:
+        p = source.degree
+        powers = np.arange(2, p + 1)
+        second = basis.matrix[:, :, 2:] * (powers * (powers - 1)) / basis.width[:, None, None] ** 2
+        more, pull = _normal(source, basis, span, t, bend.weight, 0.0, source.bend * bend.speed**2, second)
+        local, load = local + more, load + pull
+    return _solve_spans(source, basis, local, load)
+
+
+def _normal(
+    source: Source,
+    basis: Basis,
+    span: IntArray,
+    t: FloatArray,
+    weight: FloatArray,
+    slide: float,
+    target: FloatArray,
+    matrix: FloatArray,
+) -> tuple[FloatArray, FloatArray]:
+    """Return each span's share of the normal equations for sum weight |target - value|^2, tangential part cut.
+
+    Args:
+        matrix: powers of t of the basis functions (or of derivatives of theirs), shape (s, p + 1, q).
+
+    Returns:
+        Matrices, shape (s, p + 1, d, p + 1, d), and right-hand sides, shape (s, p + 1, d).
+    """
+    q, d, n = matrix.shape[2], len(target), len(t)
     pairs = [(i, j) for i in range(d) for j in range(i, d)]
-    n = len(u)
     form = np.empty((len(pairs), n))
     pull = weight * (1.0 - slide)
     for row, (i, j) in enumerate(pairs):
-        form[row] = -pull * source.tangent[i] * source.tangent[j]
+        np.multiply(-pull, source.tangent[i] * source.tangent[j], out=form[row])
         if i == j:
             form[row] += weight
-    along = pull * (source.tangent * source.point).sum(axis=0)
-    right = weight * source.point - along * source.tangent
-    powers = np.empty((2 * p + 1, n))
+    right = weight * target - pull * (source.tangent * target).sum(axis=0) * source.tangent
+    powers = np.empty((2 * q - 1, n))
     powers[0] = 1.0
-    for k in range(1, 2 * p + 1):
+    for k in range(1, 2 * q - 1):
         np.multiply(powers[k - 1], t, out=powers[k])
-    rows = np.concatenate(
-        [
-            (powers[:, None] * form[None]).reshape(-1, n),
-            (powers[: p + 1, None] * right[None]).reshape(-1, n),
-        ]
-    )
+    rows = np.concatenate([(powers[:, None] * form).reshape(-1, n), (powers[:q, None] * right).reshape(-1, n)])
     runs = np.flatnonzero(np.diff(span, prepend=-1))
-    sums = np.zeros((len(rows), len(basis.start)))
+    s = len(basis.start)
+    sums = np.zeros((len(rows), s))
     sums[:, span[runs]] = np.add.reduceat(rows, runs, axis=1)
-    forms = sums[: (2 * p + 1) * len(pairs)].reshape(2 * p + 1, len(pairs), -1)
-    rights = sums[(2 * p + 1) * len(pairs) :].reshape(p + 1, d, -1).transpose(2, 0, 1)
-    return _solve_spans(source, basis, forms, rights, pairs)
-
-
-def _solve_spans(
-    source: Source, basis: Basis, forms: FloatArray, rights: FloatArray, pairs: list[tuple[int, int]]
-) -> Fit | None:
-    """Assemble the band matrix from the moments of every span, pin the ends, solve."""
-    p, d, s = source.degree, len(source.point), len(basis.start)
-    m = basis.matrix
-    product = np.einsum("sia,sjb->sijab", m, m)
-    by_power = np.zeros((s, p + 1, p + 1, 2 * p + 1))
-    for a in range(p + 1):
-        by_power[..., a : a + p + 1] += product[..., a, :]
-    local = by_power.reshape(s, (p + 1) ** 2, 2 * p + 1) @ forms.transpose(2, 0, 1)
-    local = local.reshape(s, p + 1, p + 1, len(pairs))
+    cut = (2 * q - 1) * len(pairs)
+    forms = sums[:cut].reshape(2 * q - 1, len(pairs), s)
+    rights = sums[cut:].reshape(q, d, s).transpose(2, 0, 1)
+    product = matrix[:, :, None, :, None] * matrix[:, None, :, None, :]
+    size = matrix.shape[1]
+    by_power = np.zeros((s, size, size, 2 * q - 1))
+    for a in range(q):
+        by_power[..., a : a + q] += product[..., a, :]
+    local = by_power.reshape(s, size * size, 2 * q - 1) @ forms.transpose(2, 0, 1)
     which = np.empty((d, d), dtype=np.intp)
     for row, (i, j) in enumerate(pairs):
         which[i, j] = which[j, i] = row
-    stiff = local[..., which].transpose(0, 1, 3, 2, 4)  # s, i, coordinate, j, coordinate
-    load = m @ rights  # s, i, coordinate
+    stiff = local.reshape(s, size, size, len(pairs))[..., which].transpose(0, 1, 3, 2, 4)
+    return stiff, matrix @ rights
+
+
+def _solve_spans(source: Source, basis: Basis, stiff: FloatArray, load: FloatArray) -> Fit | None:
+    """Assemble the band matrix from the share of every span, pin the ends, solve."""
+    p, d, s, m = source.degree, len(source.point), len(basis.start), basis.matrix
     size = basis.count * d
     free = np.ones(basis.count)
     held = np.zeros((basis.count, d))
@@ -248,11 +285,7 @@ def measure(source: Source, fit: Fit, u: FloatArray) -> tuple[FloatArray, FloatA
     if not source.periodic:
         step[source.first[:-1]] = 0.0
         step[source.first[1:] - 1] = 0.0
-    new = u + step
-    if source.periodic:
-        new = np.clip(new, basis.low, basis.high)
-    else:
-        new = np.clip(new, source.low[source.piece], source.high[source.piece])
+    new = np.clip(u + step, basis.low[source.piece], basis.high[source.piece])
     if np.any(new[1:] < new[:-1]):
         up = np.maximum.accumulate(new)
         down = np.minimum.accumulate(new[::-1])[::-1]

@@ -10,10 +10,12 @@ from scipy.linalg.lapack import dptsv
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.economy.spline_fit import Basis, Fit, measure, solve
+from geometry.economy.spline_shape import Counts, Guard
 from geometry.economy.spline_source import Source
 
 __all__ = ["State", "add_where_over", "level", "place", "refit", "remove", "spacing"]
 
+TRIES, WORTH = 2, 4.0
 _SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
 _SLIDE_FIRST = 0.05  # the same while parameters are still those of the source
 
@@ -158,8 +160,7 @@ def place(source: Source, need: FloatArray, share: float) -> FloatArray:
         ends = np.append(scaled, number[0])
         return np.interp(np.arange(number[0]), ends, np.append(source.along, source.high[0]))
     offset = np.cumsum(number) - number
-    knots = np.interp(_whole(number, offset), scaled + offset[source.piece] + 1e-3 * source.piece, source.along)
-    return knots
+    return np.interp(_whole(number, offset), scaled + offset[source.piece] + 1e-3 * source.piece, source.along)
 
 
 def _whole(number: IntArray, offset: IntArray) -> FloatArray:
@@ -234,14 +235,15 @@ def _apart(value: FloatArray, slot: IntArray, distance: int) -> BoolArray:
     return chosen[slot + distance]
 
 
-def remove(source: Source, state: State, allowed: FloatArray, rounds: int = 40) -> State:
-    """Take out knots one here and one there, as long as the fit stays within what is allowed.
+def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, rounds: int = 40) -> State:
+    """Take out knots one here and one there, as long as the fit stays within what is allowed and fair.
 
     Every round removes the least significant knots, several spans apart, and puts back those near which the refit
-    is over; a knot put back is left alone until a close neighbour goes. Accepting and refusing are local, so
-    the number of rounds does not grow with the length of the profile.
+    is over or less fair than the source; a knot put back is left alone until a close neighbour goes. Accepting and
+    refusing are local, so the number of rounds does not grow with the length of the profile.
     """
     frozen = np.zeros(len(state.inner), dtype=bool)
+    counts = guard.check(state.fit, state.u).counts
     least = source.degree + 2 if source.periodic else 0
     for turn in range(rounds):
         inner = state.inner
@@ -251,33 +253,17 @@ def remove(source: Source, state: State, allowed: FloatArray, rounds: int = 40) 
         distance = 5 if turn < 6 else 8
         value = np.where(frozen, np.inf, significance(state))
         out = _apart(value, np.arange(len(inner)) + distance * piece, distance)
+        if source.periodic and len(inner) - out.sum() < least:
+            out[np.flatnonzero(out)[len(inner) - least :]] = False
         if not out.any():
             break
-        if source.periodic and len(inner) - out.sum() < least:
-            keep = np.flatnonzero(out)[len(inner) - least :]
-            out[keep] = False
         tried = out.copy()
-        good: State | None = None
-        for _ in range(4):
-            trial = refit(source, Basis(source, inner[~out]), state.u, state.weight, allowed)
-            if trial is None:
-                break
-            over = trial.ratio > 1.0
-            if not over.any():
-                good = trial
-                break
-            gone = np.flatnonzero(out)
-            if not gone.size:
-                break
-            middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
-            out[gone[np.searchsorted(middle, state.u[over])]] = False
-            if not out.any():
-                break
+        good = _without(source, state, out, allowed, guard, counts)
         if good is None:
             frozen |= tried
             continue
-        back = tried & ~out
-        frozen |= back
+        state, counts = good
+        frozen |= tried & ~out
         if turn < 30:
             near = out.copy()
             for k in (1, 2):
@@ -285,7 +271,38 @@ def remove(source: Source, state: State, allowed: FloatArray, rounds: int = 40) 
                 near[:-k] |= out[k:]
             frozen &= ~near
         frozen = frozen[~out]
-        state = level(source, good, allowed) or good
-        if state.ratio.max() > 1.0:
-            state = good
     return state
+
+
+def _without(
+    source: Source, state: State, out: BoolArray, allowed: FloatArray, guard: Guard, base: Counts
+) -> tuple[State, Counts] | None:
+    """Refit without some knots; `out` loses those that have to stay. None if all have to.
+
+    Args:
+        base: turning points of the state, which are let pass.
+
+    Returns:
+        The new state and its turning points.
+    """
+    inner = state.inner
+    for _ in range(5):
+        trial = refit(source, Basis(source, inner[~out]), state.u, state.weight, allowed)
+        if trial is None:
+            return None
+        for _ in range(TRIES):
+            if trial.ratio.max() <= 1.0 or trial.ratio.max() > WORTH:
+                break
+            trial = level(source, trial, allowed) or trial
+        wrong = trial.ratio > 1.0
+        if not wrong.any():
+            verdict = guard.check(trial.fit, trial.u, base)
+            wrong = verdict.where
+            if not wrong.any():
+                return trial, verdict.counts
+        gone = np.flatnonzero(out)
+        middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
+        out[gone[np.searchsorted(middle, state.u[wrong])]] = False
+        if not out.any():
+            break
+    return None

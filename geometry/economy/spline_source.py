@@ -2,13 +2,14 @@
 
 from dataclasses import dataclass
 from functools import cached_property
+from itertools import pairwise
 
 import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.bspline import Spline, bezier_evaluate
 
-__all__ = ["Source", "cross", "cut", "turned_to_corner"]
+__all__ = ["Source", "cross", "cut", "sample", "straight", "turned_to_corner", "turning"]
 
 
 @dataclass(frozen=True, eq=False)
@@ -19,6 +20,7 @@ class Source:
         along: arc length of every sample, shape (n,), drawing units; piece i covers [low[i], high[i]] and the
             next piece starts `gap` farther on, so that one search finds piece and span.
         point, tangent: positions and unit tangents, shape (d, n).
+        bend: curvature vectors, square to the tangent, shape (d, n), 1 / drawing units.
         curvature: shape (n,), left turn positive in 2-D, its size in 3-D; 1 / drawing units.
         piece: index of the piece of every sample, shape (n,).
         first: index of the first sample of every piece, and n, shape (pieces + 1,).
@@ -30,6 +32,7 @@ class Source:
     along: FloatArray
     point: FloatArray
     tangent: FloatArray
+    bend: FloatArray
     curvature: FloatArray
     piece: IntArray
     first: IntArray
@@ -38,6 +41,16 @@ class Source:
     spans: IntArray
     degree: int
     periodic: bool
+
+    def only(self, pieces: BoolArray) -> "Source":
+        """Return the source of some of the pieces, which keep their place along."""
+        chosen = pieces[self.piece]
+        count = np.diff(self.first)[pieces]
+        return Source(
+            self.along[chosen], self.point[:, chosen], self.tangent[:, chosen], self.bend[:, chosen],
+            self.curvature[chosen], np.repeat(np.arange(len(count)), count), np.concatenate([[0], np.cumsum(count)]),
+            self.low[pieces], self.high[pieces], self.spans[pieces], self.degree, self.periodic,
+        )  # fmt: skip
 
     @property
     def lengths(self) -> FloatArray:
@@ -56,12 +69,6 @@ class Source:
             step[0] += seam
             step[-1] += seam
         return step
-
-    @cached_property
-    def turn(self) -> FloatArray:
-        """Tangent angle of every sample against the start of its piece, shape (n,), radians; 2-D only."""
-        t = self.tangent
-        return turning(t, self.first)
 
 
 def cross(a: FloatArray, b: FloatArray) -> FloatArray:
@@ -112,7 +119,7 @@ def cut(spline: Spline) -> list[Spline]:
     starts = np.searchsorted(spline.knots, spline.breaks[spline.corner_breaks])
     edges = [0, *(starts - 1).tolist(), len(spline.control) - 1]
     pieces = []
-    for a, b in zip(edges[:-1], edges[1:], strict=True):
+    for a, b in pairwise(edges):
         inner = spline.knots[a + p + 1 : b + 1]
         low, high = spline.knots[a + 1], spline.knots[b + p]
         knots = np.concatenate([[low] * (p + 1), inner, [high] * (p + 1)])
@@ -158,8 +165,9 @@ def sample(spline: Spline, per_span: int) -> Source:
         usable = np.where(chord > 0.0, chord, 1.0)
         tangent[:, slow] = (follow / usable)[:, slow]
     curvature = np.where(slow, 0.0, cross(slope, second) / safe**3)
+    bend = np.where(slow, 0.0, (second - (second * tangent).sum(axis=0) * tangent) / safe**2)
     return Source(
-        along[:-1] + shift[piece], point, tangent, curvature, piece, first, low + shift, high + shift, spans,
+        along[:-1] + shift[piece], point, tangent, bend, curvature, piece, first, low + shift, high + shift, spans,
         spline.degree, periodic,
     )  # fmt: skip
 
