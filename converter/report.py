@@ -11,8 +11,8 @@ from converter.jobs.records import FairRecord, ProfileRecord
 __all__ = ["CAUTION", "FAIR_HEADINGS", "fair_rows", "fair_sentence", "write_json"]
 
 CAUTION = (
-    "Before cutting: check units and scale on a scrap piece. The tolerance is geometric; it leaves kerf, tool radius and "
-    "material out. Load-bearing and flight parts need a licensed engineer's approval under local codes."
+    "Before cutting: check units and scale on a scrap piece. The tolerance is geometric; it leaves kerf, tool radius "
+    "and material out. Load-bearing and flight parts need a licensed engineer's approval under local codes."
 )
 FAIR_HEADINGS = ("profile", "layer", "given", "written", "corners", "deviation", "of", "mean", "inflections")
 

@@ -57,11 +57,14 @@ def estimate(polyline: Polyline) -> Jaggedness:
     scatter = (sigma > 0.02 * spacing and uneven and tail < 3.0) or (sigma > 0.04 * spacing and tail < 1.5)
     if scatter and sigma < 0.6 * spacing and len(turns) >= _NOISE_VERTICES:
         return Jaggedness(
-            "noise", sigma, _NOISE_SIGMAS * sigma,
+            "noise",
+            sigma,
+            _NOISE_SIGMAS * sigma,
             f"the points scatter by {sigma:.3g} (standard deviation); 4 times that takes the scatter out",
         )
     if _looks_like_stations(merged, edges, turns):
-        return Jaggedness("stations", 0.0, 0.0, "the points are sparse and lie on a smooth curve: the chords are no evidence")
+        reason = "the points are sparse and lie on a smooth curve: the chords between them are no evidence"
+        return Jaggedness("stations", 0.0, 0.0, reason)
     return Jaggedness("none", 0.0, 0.0, "no jaggedness was found: none needed")
 
 
@@ -167,10 +170,8 @@ def _noise(polyline: Polyline) -> tuple[float, float]:
     unit = chord / np.maximum(np.linalg.norm(chord, axis=1), 1e-300)[:, None]
     across = difference - (difference * unit).sum(axis=1)[:, None] * unit
     size = np.linalg.norm(across, axis=1)
-    if points.shape[1] == 3:  # two components across: the median of their norm is 1.1774 sigma
-        sigma = float(np.median(size)) / 1.1774
-    else:
-        sigma = float(np.median(size)) / 0.6745
+    # median of the size of one normal component across, and of two of them in 3-D, for a sigma of 1
+    sigma = float(np.median(size)) / (1.1774 if points.shape[1] == 3 else 0.6745)
     tail = float(np.quantile(size, 0.9)) / (1.645 * sigma) if sigma > 0.0 else np.inf
     return sigma, tail
 

@@ -7,6 +7,7 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
+from geometry.signed import deviation_statistics
 
 import converter
 from converter.drawing import AnyCurve, Drawing, Profile, Written, read_drawing, replace, save, supports
@@ -21,7 +22,6 @@ from geometry.bspline import Spline
 from geometry.deviation import hausdorff
 from geometry.fairness import fairness
 from geometry.polyline import Polyline
-from geometry.signed import deviation_statistics
 
 __all__ = ["FairSettings", "fair_drawing"]
 
@@ -87,10 +87,16 @@ def fair_drawing(
         )
     version = (settings.version or drawing.version).upper()
     record = FairRecord(
-        "fair", converter.__version__, str(source), str(output), drawing.units.symbol,
+        "fair",
+        converter.__version__,
+        str(source),
+        str(output),
+        drawing.units.symbol,
         tolerance if tolerance is not None else "auto",
         chord_error if chord_error is not None else f"{_CHORD_SHARE:g} of the tolerance",
-        settings.form, settings.degree, drawing.gap,
+        settings.form,
+        settings.degree,
+        drawing.gap,
     )
     record.seconds["read"] = time.perf_counter() - clock
     clock = time.perf_counter()
@@ -118,7 +124,11 @@ def _positive(drawing: Drawing, length: Length | None, name: str) -> float | Non
 
 
 def _fair_profile(
-    drawing: Drawing, profile: Profile, tolerance: float | None, chord_error: float | None, version: str,
+    drawing: Drawing,
+    profile: Profile,
+    tolerance: float | None,
+    chord_error: float | None,
+    version: str,
     settings: FairSettings,
 ) -> ProfileRecord:
     need = assess(profile, tolerance, settings.redraw)
@@ -161,9 +171,20 @@ def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
     length = profile.length()
     area = profile.parts[0].area() if len(profile.parts) == 1 else 0.0
     record = ProfileRecord(
-        profile.id, profile.layer, profile.closed, profile.vertices_in, "/".join(sorted(set(profile.types))),
-        None, need.reason, _jaggedness(need), reason,
-        vertices_out=profile.vertices_in, length_in=length, length_out=length, area_in=area, area_out=area,
+        profile.id,
+        profile.layer,
+        profile.closed,
+        profile.vertices_in,
+        "/".join(sorted(set(profile.types))),
+        None,
+        need.reason,
+        _jaggedness(need),
+        reason,
+        vertices_out=profile.vertices_in,
+        length_in=length,
+        length_out=length,
+        area_in=area,
+        area_out=area,
         deviation=DeviationRecord(0.0, 0.0, 0.0, 0.0),
     )
     if need.unusable:
@@ -186,8 +207,15 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
     statistics = deviation_statistics(curve, outline, tolerance)
     points, turns = corner_turns(result.faired.spline)
     record = ProfileRecord(
-        profile.id, profile.layer, profile.closed, profile.vertices_in, written.type,
-        tolerance, need.reason, _jaggedness(need), None,
+        profile.id,
+        profile.layer,
+        profile.closed,
+        profile.vertices_in,
+        written.type,
+        tolerance,
+        need.reason,
+        _jaggedness(need),
+        None,
         corners=[
             {"x": float(p[0]), "y": float(p[1]), "turn_deg": math.degrees(float(t))}
             for p, t in zip(points, turns, strict=True)
@@ -199,12 +227,16 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
             "before": fairness(outline, tolerance, points).record(),
             "after": fairness(curve, tolerance, points).record(),
         },
-        length_in=outline.length(), length_out=curve.length(), area_in=outline.area(), area_out=curve.area(),
+        length_in=outline.length(),
+        length_out=curve.length(),
+        area_in=outline.area(),
+        area_out=curve.area(),
         within_tolerance=certified <= tolerance,
     )
     _count(record, curve, written.type)
     if not record.within_tolerance:
-        record.warnings.append(f"out of tolerance: certified {certified:.4g} of {tolerance:.4g}; state a larger tolerance")
+        said = f"out of tolerance: certified {certified:.4g} of {tolerance:.4g}; state a larger tolerance"
+        record.warnings.append(said)
     return record
 
 

@@ -5,8 +5,8 @@ from typing import Literal
 
 import numpy as np
 
-from geometry.arrays import FloatArray
 from geometry.arcs import ArcChain
+from geometry.arrays import FloatArray
 from geometry.bspline import Spline
 from geometry.corners import Corners, corners_by_angle, find_corners
 from geometry.deviation import TwoSided, hausdorff

@@ -7,16 +7,17 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.fairing.layout import Layout
 from geometry.fairing.samples import Sampled
 from geometry.fairing.stiffness import Fit, limit_growth, spread
 from geometry.fairing.trace import Trace
 
-__all__ = ["LIMIT", "BandCheck", "Nodes", "check_band", "repair"]
+__all__ = ["CORNER_SEARCH", "LIMIT", "BandCheck", "Nodes", "check_band", "repair"]
 
 LIMIT = 0.985
 _NEAR = 0.90  # a partner at the same parameter nearer than this needs no search
-_SEARCH, _CORNER_SEARCH = 3.0, 8.0
+_SEARCH, CORNER_SEARCH = 3.0, 8.0
 _ROUNDS = 12
 _DRAW = 0.9
 
@@ -67,7 +68,7 @@ class BandCheck:
     curve: FloatArray
     trace: FloatArray
     trace_own: FloatArray
-    trace_interval: FloatArray
+    trace_interval: IntArray
     corners: FloatArray
 
     @property
@@ -85,7 +86,7 @@ def check_band(trace: Trace, fit: Fit, nodes: Nodes) -> BandCheck:
     far = curve > _NEAR
     if far.any():
         curve[far] = trace.distance(x[far], sampled.own[far], _SEARCH)
-    corners = trace.distance(nodes.points, nodes.own, _CORNER_SEARCH) if len(nodes.points) else np.zeros(0)
+    corners = trace.distance(nodes.points, nodes.own, CORNER_SEARCH) if len(nodes.points) else np.zeros(0)
     own = trace.alongs[:-1] if trace.closed else trace.alongs
     own = np.where(own < sampled.bounds[0], own + trace.length, own) if trace.closed else own
     position = sampled.position_of(own)
@@ -136,7 +137,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         if check.worst <= LIMIT:
             break
         out_trace = check.trace > LIMIT
-        out = (check.curve > LIMIT).any(axis=1)
+        out: BoolArray = np.any(check.curve > LIMIT, axis=1)
         out[check.trace_interval[out_trace]] = True
         if len(nodes.points):
             bad = check.corners > LIMIT
@@ -155,7 +156,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
     return best
 
 
-def _flag_nodes(starts: FloatArray, counts: FloatArray, bad: BoolArray, closed: bool, out: BoolArray) -> None:
+def _flag_nodes(starts: IntArray, counts: IntArray, bad: BoolArray, closed: bool, out: BoolArray) -> None:
     """Flag the intervals on both sides of nodes."""
     index = np.flatnonzero(bad)
     pieces = len(starts)
@@ -183,7 +184,7 @@ def _drawn_corners(trace: Trace, fit: Fit, nodes: Nodes, check: BandCheck, turn:
     points = nodes.points.copy()
     layout = fit.sampled.layout
     total = trace.length if nodes.closed else np.inf
-    for k in np.flatnonzero(~nodes.fixed):
+    for k in np.flatnonzero(~nodes.fixed).tolist():
         gap = np.abs(check.trace_own - nodes.own[k])
         gap = np.minimum(gap, np.abs(total - gap))
         missed = np.flatnonzero((gap < 4.0) & (check.trace > LIMIT))
@@ -203,8 +204,8 @@ def _drawn_corners(trace: Trace, fit: Fit, nodes: Nodes, check: BandCheck, turn:
     return nodes.moved(points)
 
 
-def _out_beside(layout: object, check: BandCheck, piece: int, at_start: bool) -> bool:
-    start, count = int(layout.starts[piece]), int(layout.counts[piece])  # type: ignore[attr-defined]
+def _out_beside(layout: Layout, check: BandCheck, piece: int, at_start: bool) -> bool:
+    start, count = int(layout.starts[piece]), int(layout.counts[piece])
     span = min(4, count)
     part = check.curve[start : start + span] if at_start else check.curve[start + count - span : start + count]
     return bool((part > LIMIT).any())

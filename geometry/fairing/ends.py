@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from geometry.arrays import FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.trace import Trace
 
@@ -21,7 +21,12 @@ def unit(vectors: FloatArray) -> FloatArray:
 
 
 def corner_points(
-    trace: Trace, layout: Layout, coefficients: FloatArray, before: FloatArray, after: FloatArray, own: FloatArray,
+    trace: Trace,
+    layout: Layout,
+    coefficients: FloatArray,
+    before: IntArray,
+    after: IntArray,
+    own: FloatArray,
     most: float,
 ) -> FloatArray:
     """Return the sharp corner between each two neighbouring pieces.
@@ -46,7 +51,12 @@ def corner_points(
 
 
 def _batch(
-    trace: Trace, layout: Layout, coefficients: FloatArray, before: FloatArray, after: FloatArray, own: FloatArray,
+    trace: Trace,
+    layout: Layout,
+    coefficients: FloatArray,
+    before: IntArray,
+    after: IntArray,
+    own: FloatArray,
     most: float,
 ) -> FloatArray:
     p, d1 = _side(layout, coefficients, before, end=True)
@@ -69,9 +79,7 @@ def _batch(
     return _moved_in(trace, meeting, d2 - d1, own, most)
 
 
-def _side(
-    layout: Layout, coefficients: FloatArray, piece: FloatArray, *, end: bool
-) -> tuple[FloatArray, FloatArray]:
+def _side(layout: Layout, coefficients: FloatArray, piece: IntArray, *, end: bool) -> tuple[FloatArray, FloatArray]:
     """Return points and directions of travel on the last (first) stretch of pieces and its straight extension."""
     lengths = layout.lengths[piece]
     reach = np.minimum(_REACH, _REACH_SHARE * lengths)
@@ -94,7 +102,7 @@ def _moved_in(trace: Trace, points: FloatArray, inwards: FloatArray, own: FloatA
     trial = points[far, None] + steps[:, None] * unit(inwards[far])[:, None]
     flat = trial.reshape(-1, trial.shape[-1])
     gap = trace.distance(flat, np.repeat(own[far], len(steps)), _WINDOW).reshape(len(far), len(steps))
-    inside = gap <= most
+    inside: BoolArray = np.less_equal(gap, most)
     first = inside.argmax(axis=1)
     out = points.copy()
     out[far] = np.where(inside.any(axis=1)[:, None], trial[np.arange(len(far)), first], trace.at(own[far]))

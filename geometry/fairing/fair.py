@@ -4,10 +4,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from geometry.arrays import FloatArray
+from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, join
 from geometry.corners import Corners
-from geometry.fairing.band import LIMIT, BandCheck, Nodes, repair
+from geometry.fairing.band import CORNER_SEARCH, LIMIT, BandCheck, Nodes, repair
 from geometry.fairing.ends import corner_points
 from geometry.fairing.layout import Layout
 from geometry.fairing.lobes import remove_lobes
@@ -21,6 +21,7 @@ __all__ = ["Faired", "fair_outline"]
 _CORNER_REACH = 0.97  # a corner may lie this far from the trace
 _ONE_SIDED = 6.0  # stiffness of the first fits
 _INSERTIONS = 8
+_CLEAR = (0.0, 1.05, -1.05, 2.1, -2.1, 3.2, -3.2, 4.3, -4.3)
 
 
 @dataclass(frozen=True, slots=True)
@@ -55,19 +56,20 @@ def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree:
     origin = 0.5 * (polyline.points.min(axis=0) + polyline.points.max(axis=0))
     path = (polyline.path() - origin) / tolerance
     trace = Trace(path, polyline.closed)
-    own = _separated(trace, corners.along / tolerance, np.abs(corners.turns))
+    kept = _separated(trace, corners.along / tolerance, np.abs(corners.turns))
+    own, found = corners.along[kept] / tolerance, (corners.points[kept] - origin) / tolerance
     best: tuple[Fit, Nodes, BandCheck] | None = None
     inserted = 0
     while True:
         try:
-            attempt = _attempt(trace, own, degree)
+            attempt = _attempt(trace, own, found, degree)
         except np.linalg.LinAlgError:
             break
         if best is None or attempt[2].worst < best[2].worst:
             best = attempt
         if attempt[2].worst <= LIMIT or inserted == _INSERTIONS:
             break
-        own = _with_corner(trace, own, attempt[2], attempt[0])
+        own, found = _with_corner(trace, own, found, attempt[2], attempt[0])
         inserted += 1
     if best is None or best[2].worst > LIMIT:
         return Faired(_as_given(polyline, degree), polyline.points, inserted, True)
@@ -80,19 +82,25 @@ def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree:
     return Faired(spline, nodes.points[~nodes.fixed] * tolerance + origin, inserted, False)
 
 
-def _separated(trace: Trace, own: FloatArray, weight: FloatArray) -> FloatArray:
-    """Return corners at least one tolerance apart (and from open ends), the sharper of two kept."""
-    kept: list[float] = [] if trace.closed else [0.0, trace.length]
+def _separated(trace: Trace, own: FloatArray, weight: FloatArray) -> IntArray:
+    """Return which corners to keep, at least one tolerance apart and from open ends, the sharper of two kept."""
+    taken = np.zeros(0) if trace.closed else np.array([0.0, trace.length])
+    kept: list[int] = []
+    order = np.argsort(own, kind="stable")
+    gaps = np.diff(np.concatenate([own[order], own[order][:1] + trace.length])) if own.size else own
+    if own.size and gaps.min() >= 1.0 and (trace.closed or (own.min() >= 1.0 and own.max() <= trace.length - 1.0)):
+        return order
     for k in np.argsort(-weight, kind="stable"):
-        gaps = np.abs(np.array(kept) - own[k])
-        if trace.closed:
-            gaps = np.minimum(gaps, trace.length - gaps)
-        if not gaps.size or gaps.min() >= 1.0:
-            kept.append(float(own[k]))
-    return np.sort(np.array(kept if trace.closed else kept[2:]))
+        away = np.abs(taken - own[k])
+        away = np.minimum(away, trace.length - away) if trace.closed else away
+        if not away.size or away.min() >= 1.0:
+            kept.append(int(k))
+            taken = np.append(taken, own[k])
+    chosen = np.array(kept, dtype=np.intp)
+    return chosen[np.argsort(own[chosen], kind="stable")]
 
 
-def _attempt(trace: Trace, own: FloatArray, degree: int) -> tuple[Fit, Nodes, BandCheck]:
+def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> tuple[Fit, Nodes, BandCheck]:
     """Fit the pieces between given corners and hold them in the band."""
     closed = trace.closed
     periodic = closed and not own.size
@@ -105,7 +113,7 @@ def _attempt(trace: Trace, own: FloatArray, degree: int) -> tuple[Fit, Nodes, Ba
     sampled = by_own_length(trace, bounds, periodic, degree)
     first = np.full(len(sampled.layout), _ONE_SIDED)
     coefficients = sampled.layout.solve(sampled.points, sampled.live, first, None)
-    nodes = _nodes(trace, own, sampled.layout, coefficients, periodic)
+    nodes = _nodes(trace, own, found, sampled.layout, coefficients)
     sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
     fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins)
     again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
@@ -114,16 +122,18 @@ def _attempt(trace: Trace, own: FloatArray, degree: int) -> tuple[Fit, Nodes, Ba
     return repair(trace, fit, nodes)
 
 
-def _nodes(trace: Trace, own: FloatArray, layout: Layout, coefficients: FloatArray, periodic: bool) -> Nodes:
-    if periodic:
-        return Nodes(np.zeros((0, trace.dimension)), own, np.zeros(0, dtype=bool), True)
-    count = len(own)
-    pieces = np.arange(count)
-    before, after = ((pieces - 1) % count, pieces) if trace.closed else (pieces, pieces + 1)
-    points = np.zeros((0, trace.dimension))
-    if count:
-        points = corner_points(trace, layout, coefficients, before, after, own, _CORNER_REACH)
-    if trace.closed:
+def _nodes(trace: Trace, own: FloatArray, found: FloatArray, layout: Layout, coefficients: FloatArray) -> Nodes:
+    """Return the corners, where they were found if the band allows it, otherwise where the first fits meet."""
+    count, closed = len(own), trace.closed
+    points = found.copy()
+    known = np.asarray(np.isfinite(found).all(axis=1))
+    if known.any():
+        known[known] = trace.distance(found[known], own[known], CORNER_SEARCH) <= _CORNER_REACH
+    rest = np.flatnonzero(~known)
+    if rest.size:
+        before, after = ((rest - 1) % count, rest) if closed else (rest, rest + 1)
+        points[rest] = corner_points(trace, layout, coefficients, before, after, own[rest], _CORNER_REACH)
+    if closed:
         return Nodes(points, own, np.zeros(count, dtype=bool), True)
     fixed = np.ones(count + 2, dtype=bool)
     fixed[1:-1] = False
@@ -142,22 +152,23 @@ def _carried(fit: Fit, layout: Layout) -> FloatArray:
     return np.asarray(at)
 
 
-def _with_corner(trace: Trace, own: FloatArray, check: BandCheck, fit: Fit) -> FloatArray:
-    """Return the corners with one more, where the trace lies farthest from the curve."""
+def _with_corner(
+    trace: Trace, own: FloatArray, found: FloatArray, check: BandCheck, fit: Fit
+) -> tuple[FloatArray, FloatArray]:
+    """Return the corners with one more, where the trace lies farthest from the curve; its place is not known yet."""
     if check.trace.size and check.trace.max() >= check.curve.max():
         place = float(check.trace_own[check.trace.argmax()])
     else:
         place = float(fit.sampled.own.ravel()[check.curve.argmax()])
-    place = place % trace.length if trace.closed else place
     taken = own if trace.closed else np.concatenate([[0.0], own, [trace.length]])
-    for shift in (0.0, 1.05, -1.05, 2.1, -2.1, 3.2, -3.2, 4.3, -4.3):  # the nearest place that is a tolerance clear
-        gaps = np.abs(taken - (place + shift))
-        gaps = np.minimum(gaps, np.abs(trace.length - gaps)) if trace.closed else gaps
-        inside = trace.closed or 0.0 < place + shift < trace.length
-        if inside and (not gaps.size or gaps.min() >= 1.0):
-            moved = (place + shift) % trace.length if trace.closed else place + shift
-            return np.sort(np.append(own, moved))
-    return own
+    for shift in _CLEAR:  # the nearest place that is a tolerance clear of the others
+        at = (place + shift) % trace.length if trace.closed else place + shift
+        gaps = np.abs(taken - at)
+        gaps = np.minimum(gaps, trace.length - gaps) if trace.closed else gaps
+        if 0.0 <= at < trace.length and (not gaps.size or gaps.min() >= 1.0):
+            row = int(np.searchsorted(own, at))
+            return np.insert(own, row, at), np.insert(found, row, np.nan, axis=0)
+    return own, found
 
 
 def _spline(fit: Fit, nodes: Nodes) -> Spline:

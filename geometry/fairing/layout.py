@@ -4,9 +4,9 @@ Each piece between corners has its own uniform knots; coefficients of different 
 normal matrix is block diagonal with half-width 3. A closed profile without corners is one periodic piece, whose
 cyclic matrix is solved exactly through a border of three unknowns (Schur complement).
 
-Penalty: squared third differences of the coefficients (P-splines: P. H. C. Eilers, B. D. Marx, Statistical Science 11,
-1996), weighted by (l / h)^6 h a row; for cubic splines that is l^6 times the integral of |x'''|^2, so that parabolas cost
-nothing and circles nearly nothing. For quadratic splines it acts on the jumps of x''.
+Penalty: squared third differences of the coefficients (P-splines: P. H. C. Eilers, B. D. Marx, Statistical Science
+11, 1996), weighted by (l / h)^6 h a row; for cubic splines that is l^6 times the integral of |x'''|^2, so that
+parabolas cost nothing and circles nearly nothing. For quadratic splines it acts on the jumps of x''.
 """
 
 from functools import cached_property
@@ -104,9 +104,7 @@ class Layout:
 
     # ---- solving -----------------------------------------------------------------------
 
-    def solve(
-        self, targets: FloatArray, live: BoolArray, stiffness: FloatArray, pins: FloatArray | None
-    ) -> FloatArray:
+    def solve(self, targets: FloatArray, live: BoolArray, stiffness: FloatArray, pins: FloatArray | None) -> FloatArray:
         """Return the coefficients that fit samples under a penalty.
 
         Args:

@@ -21,7 +21,7 @@ _ROUNDS = 12
 
 
 def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
-    """Return the fit with small lobes of curvature flattened (2-D; a 3-D curve has no sign and is returned as it is)."""
+    """Return the fit with small lobes of curvature flattened; a 3-D one, whose curvature has no sign, as it is."""
     sampled, layout = fit.sampled, fit.sampled.layout
     if sampled.points.shape[-1] != 2:
         return fit
@@ -52,11 +52,13 @@ def _excess(fit: Fit, coefficients: FloatArray, live: BoolArray) -> FloatArray:
     """Return the largest of the offsets and local means over their limits, for every interval."""
     layout = fit.sampled.layout
     offsets = normal_offsets(fit.sampled, coefficients) * live[..., None]
-    return np.maximum.reduce([
-        worst_of(offsets) / BAND,
-        local_means(layout, offsets, live, 4.0) / _MEAN_4,
-        local_means(layout, offsets, live, 8.0) / _MEAN_8,
-    ])
+    return np.maximum.reduce(
+        [
+            worst_of(offsets) / BAND,
+            local_means(layout, offsets, live, 4.0) / _MEAN_4,
+            local_means(layout, offsets, live, 8.0) / _MEAN_8,
+        ]
+    )
 
 
 def _stretches(layout: Layout, coefficients: FloatArray) -> BoolArray:
@@ -66,8 +68,9 @@ def _stretches(layout: Layout, coefficients: FloatArray) -> BoolArray:
     first, second = (layout.evaluate(coefficients, middle, t, k) for k in (1, 2))
     speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
     curvature = (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3
-    start, stop = _runs(layout, np.where(np.abs(curvature) < _FLAT, 0.0, np.sign(curvature)))
-    turning = np.concatenate([[0.0], np.cumsum(np.where(np.abs(curvature) < _FLAT, 0.0, np.abs(curvature)) * speed * layout.h)])
+    curvature[np.abs(curvature) < _FLAT] = 0.0
+    start, stop = _runs(layout, np.sign(curvature))
+    turning = np.concatenate([[0.0], np.cumsum(np.abs(curvature) * speed * layout.h)])
     along = np.concatenate([[0.0], np.cumsum(speed * layout.h)])
     height = (turning[stop] - turning[start]) * (along[stop] - along[start]) / 8.0
     pieces = layout.piece[start]
@@ -95,7 +98,8 @@ def _runs(layout: Layout, sign: FloatArray) -> tuple[IntArray, IntArray]:
     """Return [start, stop) of runs of one sign in each piece; flat intervals go with the run before them."""
     size = len(sign)
     if layout.periodic and (sign != 0.0).any():
-        sign = np.where((sign == 0.0) & (np.arange(size) < np.argmax(sign != 0.0)), sign[np.flatnonzero(sign)[-1]], sign)
+        bent = np.flatnonzero(sign)
+        sign[: bent[0]] = sign[bent[-1]]
     index = np.where(sign != 0.0, np.arange(size), -1)
     index = np.maximum(np.maximum.accumulate(index), layout.starts[layout.piece])
     filled = sign[index]

@@ -45,9 +45,7 @@ class Sampled:
         return np.interp(own, self.own_nodes, self.fit_nodes)
 
 
-def _sampled(
-    trace: Trace, layout: Layout, bounds: FloatArray, own_nodes: FloatArray, fit_nodes: FloatArray
-) -> Sampled:
+def _sampled(trace: Trace, layout: Layout, bounds: FloatArray, own_nodes: FloatArray, fit_nodes: FloatArray) -> Sampled:
     position = layout.sample_positions() + layout.offsets[layout.piece][:, None]
     own = np.interp(position, fit_nodes, own_nodes)
     dead = np.minimum(_DEAD, _DEAD_SHARE * layout.lengths)[:, None] * np.ones(2)

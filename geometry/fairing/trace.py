@@ -39,7 +39,8 @@ class Trace:
             high = np.minimum(high, low + self.length)
             first = np.searchsorted(self.alongs, low, side="right") - 1
             over = np.floor(high / self.length)
-            last = np.searchsorted(self.alongs, high - over * self.length, side="right") - 1 + over.astype(np.intp) * count
+            last = np.searchsorted(self.alongs, high - over * self.length, side="right") - 1
+            last = last + over.astype(np.intp) * count
         else:
             first = np.searchsorted(self.alongs, np.maximum(low, 0.0), side="right") - 1
             last = np.searchsorted(self.alongs, np.minimum(high, self.length), side="right") - 1

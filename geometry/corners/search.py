@@ -1,21 +1,17 @@
-"""Find and place the true corners of a traced outline, before any fairing.
+"""Decide which candidates are true corners, and place them.
 
-A soft fit proposes candidates; at each, a wedge is compared with the same wedge rounded by a fillet; a score made of
-the turn, the gain of the wedge over the fillet, the quality of the fit and the bend of its sides decides. Close pairs
-and blunt tips are told apart by a chain of two corners. All fits are local and batched, so the time is linear.
-
-The weights of the score come from a logistic regression on traced outlines with known corners (staircases, chamfered
-contours, hand-digitised points); they are empirical, and nothing here is a proven bound.
+At each candidate a wedge is compared with the same wedge rounded by a fillet; a score made of the turn, the gain of the
+wedge over the fillet, the quality of the fit and the bend of its sides decides. Close pairs and blunt tips are told
+apart by a chain of two corners. The weights of the score come from a logistic regression on traced outlines with known
+corners; they are empirical.
 """
-
-from dataclasses import dataclass
 
 import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
-from geometry.outline import EvenOutline, even_outline
-from geometry.polyline import Polyline
-from geometry.wedge import (
+from geometry.corners.candidates import gaps_ahead
+from geometry.corners.outline import EvenOutline
+from geometry.corners.wedge import (
     Chain,
     Samples,
     Wedge,
@@ -28,10 +24,9 @@ from geometry.wedge import (
     start_line,
 )
 
-__all__ = ["Corners", "corners_by_angle", "find_corners", "jaggedness_scale"]
+__all__ = ["Search"]
 
 # lengths in the outline's scale, angles in degrees
-_CANDIDATE_SMOOTHING, _CANDIDATE_HALF, _CANDIDATE_TURN, _CANDIDATE_GAP = 1.5, 1.25, 16.0, 1.6
 _WINDOW, _WINDOW_LEAST, _NEIGHBOUR_CLEAR = 9.0, 1.25, 0.5
 _ROUND_RADIUS, _ROUND_TURN = 6.0, 65.0
 _PAIR_GAP, _PAIR_RADII = 7.0, (0.0, 3.0, 6.0, 9.0, 13.0)
@@ -39,125 +34,7 @@ _SPLIT_START, _SPLIT_RADII = 2.0, (0.0, 2.0, 3.0, 4.5, 6.0, 9.0)
 _PLACE_WINDOWS, _PLACE_RIDGE = (12.0, 17.0), 400.0
 
 
-@dataclass(frozen=True, slots=True)
-class Corners:
-    """Corners of an outline in order of travel.
-
-    Attributes:
-        along: arc length of the polyline at each corner, shape (n,), drawing units.
-        points: places of the corners, shape (n, d), drawing units; they need not lie on the polyline.
-        turns: turn at each, shape (n,), radians; left positive in 2-D.
-    """
-
-    along: FloatArray
-    points: FloatArray
-    turns: FloatArray
-
-    def __len__(self) -> int:
-        return len(self.along)
-
-
-def jaggedness_scale(polyline: Polyline, tolerance: float) -> float:
-    """Return the length below which detail is jaggedness: half the median edge, held to [1, 2] tolerances."""
-    return float(np.clip(0.5 * np.median(polyline.edge_lengths()), tolerance, 2.0 * tolerance))
-
-
-def corners_by_angle(polyline: Polyline, angle: float) -> Corners:
-    """Take every vertex as a corner at which the polyline turns by more than an angle.
-
-    Args:
-        polyline: cleaned.
-        angle: radians; 0 takes every vertex that turns, pi none.
-    """
-    edges = np.diff(polyline.path(), axis=0)
-    unit = edges / np.linalg.norm(edges, axis=1)[:, None]
-    before, after = (np.roll(unit, 1, axis=0), unit) if polyline.closed else (unit[:-1], unit[1:])
-    # half the turn by its sine and cosine: exact near 0 and near pi
-    turns = 2.0 * np.arctan2(np.linalg.norm(after - before, axis=1), np.linalg.norm(after + before, axis=1))
-    if polyline.dimension == 2:
-        turns = np.copysign(turns, before[:, 0] * after[:, 1] - before[:, 1] * after[:, 0])
-    first = 0 if polyline.closed else 1
-    taken = np.flatnonzero(np.abs(turns) > max(angle, 1e-9))
-    index = taken + first
-    return Corners(polyline.alongs()[index], polyline.points[index], turns[taken])
-
-
-def find_corners(polyline: Polyline, tolerance: float) -> Corners:
-    """Find the true corners of a jagged planar outline.
-
-    Args:
-        polyline: cleaned, 2-D; closed, or open (its ends are no corners).
-        tolerance: largest distance that fairing may move the outline, drawing units; about the size of the jaggedness.
-
-    Returns:
-        The corners, sharpened: each lies where its two sides meet, at most 0.95 of the tolerance off the polyline.
-    """
-    scale = jaggedness_scale(polyline, tolerance)
-    none = Corners(np.zeros(0), np.zeros((0, 2)), np.zeros(0))
-    if polyline.length() < 8.0 * scale:
-        return none
-    outline = even_outline(polyline, scale)
-    index, fair = _candidates(outline, scale)
-    if not index.size:
-        return none
-    search = _Search(outline, fair, scale, tolerance, float(np.median(polyline.edge_lengths())))
-    search.start(index)
-    search.remove_weak()
-    search.test_pairs()
-    search.test_splits()
-    search.place()
-    return search.result()
-
-
-def _candidates(outline: EvenOutline, scale: float) -> tuple[IntArray, FloatArray]:
-    """Return indices of samples that may be corners, and the softly smoothed outline."""
-    fair, first, second = outline.smoothed(_CANDIDATE_SMOOTHING * scale, 2)
-    speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
-    curvature = (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3
-    n, half = len(curvature), max(1, round(_CANDIDATE_HALF * scale / outline.step))
-    size = np.abs(curvature)
-    turn = _window_sum(curvature * speed * outline.step, half, outline.closed)
-    peak = np.abs(turn) > np.radians(_CANDIDATE_TURN)
-    before, after = np.roll(size, 1), np.roll(size, -1)
-    peak &= (size >= before) & (size > after)
-    if not outline.closed:
-        clear = round(2.0 * scale / outline.step)
-        peak[:clear] = peak[n - clear :] = False
-    index = np.flatnonzero(peak)
-    gap = _CANDIDATE_GAP * scale / outline.step
-    while index.size > 1:  # of two nearer than the gap keep the sharper; repeat, since dropping one may free another
-        ahead = _gaps(index, n, outline.closed)
-        close = ahead < gap
-        if not close.any():
-            break
-        peak_size = size[index]
-        following = np.roll(peak_size, -1)
-        weaker = np.zeros(index.size, dtype=bool)
-        weaker |= close & (peak_size < following)
-        weaker |= np.roll(close & (peak_size >= following), 1)
-        # drop only local minima, so that a run of close peaks is not emptied at once
-        least = weaker & ~(np.roll(weaker & close, 1) & (np.roll(peak_size, 1) <= peak_size))
-        index = index[~(least if least.any() else weaker)]
-    return index, fair
-
-
-def _window_sum(values: FloatArray, half: int, closed: bool) -> FloatArray:
-    padded = np.pad(values, half, mode="wrap") if closed and half < len(values) else np.pad(values, half)
-    total = np.concatenate([[0.0], np.cumsum(padded)])
-    return total[2 * half + 1 :] - total[: -2 * half - 1]
-
-
-def _gaps(index: IntArray, count: int, closed: bool) -> FloatArray:
-    """Return the distance in samples from each index to the next one; inf past the last one of an open outline."""
-    ahead = np.roll(index, -1) - index
-    ahead = ahead.astype(np.float64)
-    if not index.size:
-        return ahead
-    ahead[-1] = index[0] + count - index[-1] if closed else np.inf
-    return ahead
-
-
-class _Search:
+class Search:
     """Candidates of one outline with their fits; lengths in the outline's scale, frames moved to each candidate."""
 
     def __init__(
@@ -185,17 +62,17 @@ class _Search:
 
     def _reach(self, window: float) -> tuple[FloatArray, FloatArray]:
         """Return how far every candidate's window reaches back and ahead, up to the neighbours."""
-        ahead = _gaps(self.index, self.count, self.outline.closed) * self.step
+        ahead = gaps_ahead(self.index, self.count, self.outline.closed) * self.step
         behind = np.roll(ahead, 1)
         if self.index.size == 1 and self.outline.closed:
             ahead = behind = np.full(1, np.inf)
         most = min(window, self.half_length)
-        return tuple(  # type: ignore[return-value]
-            np.clip(gap - _NEIGHBOUR_CLEAR, _WINDOW_LEAST, max(most, _WINDOW_LEAST)) for gap in (behind, ahead)
-        )
+        most = max(most, _WINDOW_LEAST)
+        back, reach = (np.clip(gap - _NEIGHBOUR_CLEAR, _WINDOW_LEAST, most) for gap in (behind, ahead))
+        return back, reach
 
     def _gather(
-        self, centre: FloatArray, back: FloatArray, ahead: FloatArray
+        self, centre: FloatArray | IntArray, back: FloatArray, ahead: FloatArray
     ) -> tuple[Samples, FloatArray, FloatArray]:
         """Return samples about given sample positions, their offsets (n, m) and the frames' origins (n, 2)."""
         at = np.rint(centre).astype(np.intp)
@@ -212,7 +89,7 @@ class _Search:
         frame = self.samples[np.mod(at, self.count)]
         return Samples(self.samples[index] - frame[:, None], np.where(inside, self.step, 0.0)), offset, frame
 
-    def _fair_at(self, position: FloatArray) -> FloatArray:
+    def _fair_at(self, position: FloatArray | IntArray) -> FloatArray:
         at = np.rint(position).astype(np.intp)
         return self.fair[np.mod(at, self.count) if self.outline.closed else np.clip(at, 0, self.count - 1)]
 
@@ -257,7 +134,10 @@ class _Search:
             gain[weak] = (residual_sum(some, rounded, radius) - sharp[weak]) / self.noise
         quality = sharp / (self.noise * (back + ahead))
         self.score[changed] = (
-            -0.13 + 0.252 * (turn - 40.0) + 0.80 * np.arcsinh(gain) - 0.22 * np.log(quality + 0.05)
+            -0.13
+            + 0.252 * (turn - 40.0)
+            + 0.80 * np.arcsinh(gain)
+            - 0.22 * np.log(quality + 0.05)
             - 49.6 * np.abs(wedge.k1 + wedge.k2)
         )
         self.quality[changed] = quality
@@ -284,7 +164,7 @@ class _Search:
             bad = self.score < 0.0
             if not bad.any():
                 return
-            ahead = _gaps(self.index, self.count, self.outline.closed) * self.step < 12.0
+            ahead = gaps_ahead(self.index, self.count, self.outline.closed) * self.step < 12.0
             lowest = bad.copy()
             if self.index.size > 1:
                 after, before = np.roll(self.score, -1), np.roll(self.score, 1)
@@ -296,7 +176,7 @@ class _Search:
     def test_pairs(self) -> None:
         """Keep two corners near each other only where a chain explains them better than one, sharp or round."""
         self._fit_changed()
-        gaps = _gaps(self.index, self.count, self.outline.closed) * self.step
+        gaps = gaps_ahead(self.index, self.count, self.outline.closed) * self.step
         first = np.flatnonzero(gaps < _PAIR_GAP) if self.index.size > 1 else np.zeros(0, dtype=np.intp)
         if not first.size:
             return
@@ -305,11 +185,16 @@ class _Search:
         middle = self.index[first] + half / self.step
         samples, offset, frame = self._gather(middle, half + self.reach[first, 0], half + self.reach[second, 1])
         chain = Chain(
-            self.wedge.tip[first] - frame, self.wedge.tip[second] - frame,
-            self.wedge.a1[first], self.wedge.k1[first], self.wedge.a2[second], self.wedge.k2[second],
+            self.wedge.tip[first] - frame,
+            self.wedge.tip[second] - frame,
+            self.wedge.a1[first],
+            self.wedge.k1[first],
+            self.wedge.a2[second],
+            self.wedge.k2[second],
         )
         chain = fit_chain(samples, chain, 5)
-        start = self._first_wedge(samples, offset + half[:, None], offset - half[:, None], self._fair_at(middle) - frame)
+        apart = half[:, None]
+        start = self._first_wedge(samples, offset + apart, offset - apart, self._fair_at(middle) - frame)
         side = np.minimum(self.reach[first, 0], self.reach[second, 1]) + half
         rounds = self._rounded(samples, start, _PAIR_RADII, side)
         gain = (rounds.min(axis=0) - residual_sum(samples, chain)) / self.noise
@@ -349,7 +234,7 @@ class _Search:
         if not self.index.size:
             return
         turn = np.degrees(np.abs(self.wedge.turn))
-        ahead = _gaps(self.index, self.count, self.outline.closed) * self.step
+        ahead = gaps_ahead(self.index, self.count, self.outline.closed) * self.step
         alone = np.minimum(ahead, np.roll(ahead, 1)) > 4.0 if self.index.size > 1 else np.ones(1, dtype=bool)
         chosen = np.flatnonzero(~self.paired & alone & ((turn > 115.0) | ((turn > 60.0) & (self.quality > 1.1))))
         if not chosen.size:
@@ -361,12 +246,16 @@ class _Search:
         back = np.clip(behind_room - _NEIGHBOUR_CLEAR, _WINDOW_LEAST, most)
         reach = np.clip(ahead_room - _NEIGHBOUR_CLEAR, _WINDOW_LEAST, most)
         samples, _, frame = self._gather(self.index[chosen], back, reach)
-        shift = _SPLIT_START / self.step
+        back_off = round(_SPLIT_START / self.step)
         wedge = self.wedge.only(chosen)
         wedge = Wedge(wedge.tip - frame, wedge.a1, wedge.k1, wedge.a2, wedge.k2)
         chain = Chain(
-            self._fair_at(self.index[chosen] - shift) - frame, self._fair_at(self.index[chosen] + shift) - frame,
-            wedge.a1, wedge.k1, wedge.a2, wedge.k2,
+            self._fair_at(self.index[chosen] - back_off) - frame,
+            self._fair_at(self.index[chosen] + back_off) - frame,
+            wedge.a1,
+            wedge.k1,
+            wedge.a2,
+            wedge.k2,
         )
         chain = fit_chain(samples, chain, 5)
         rounds = self._rounded(samples, wedge, _SPLIT_RADII, np.minimum(back, reach))
@@ -447,8 +336,11 @@ class _Search:
         best = np.argmin(gap[..., 0] ** 2 + gap[..., 1] ** 2, axis=1)
         return near[np.arange(len(index)), best]
 
-    def result(self) -> Corners:
-        """Return the corners in drawing units, clamped to 0.95 of the tolerance from the polyline's samples."""
+    def result(self) -> tuple[FloatArray, FloatArray, FloatArray]:
+        """Return own arc length, place and turn of the corners, in drawing units and radians.
+
+        Places are clamped to 0.95 of the tolerance from the polyline's samples.
+        """
         nearest = self._nearest(self.index, self.tips)
         gap = self.tips - self.samples[nearest]
         far = np.hypot(gap[:, 0], gap[:, 1])
@@ -456,4 +348,4 @@ class _Search:
         tips = self.samples[nearest] + gap * np.minimum(1.0, most / np.maximum(far, 1e-12))[:, None]
         along = self.outline.own[nearest]
         order = np.argsort(along, kind="stable")
-        return Corners(along[order], (tips * self.scale + self.origin)[order], self.wedge.turn[order])
+        return along[order], (tips * self.scale + self.origin)[order], self.wedge.turn[order]

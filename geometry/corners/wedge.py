@@ -10,7 +10,7 @@ from dataclasses import dataclass, replace
 
 import numpy as np
 
-from geometry.arrays import FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 
 __all__ = [
     "Chain",
@@ -37,7 +37,7 @@ class Samples:
     points: FloatArray
     weight: FloatArray
 
-    def only(self, index: FloatArray) -> "Samples":
+    def only(self, index: IntArray | BoolArray) -> "Samples":
         """Return the samples of some places."""
         return Samples(self.points[index], self.weight[index])
 
@@ -57,7 +57,7 @@ class Wedge:
         """Turn at the tip, radians, left positive."""
         return wrap_angle(self.a2 - self.a1)
 
-    def only(self, index: FloatArray) -> "Wedge":
+    def only(self, index: IntArray | BoolArray) -> "Wedge":
         """Return some of the wedges."""
         return Wedge(self.tip[index], self.a1[index], self.k1[index], self.a2[index], self.k2[index])
 
@@ -258,8 +258,18 @@ def _wedge_rows(points: FloatArray, wedge: Wedge, radius: FloatArray | None) -> 
 
 
 def _fillet(
-    turn: FloatArray, radius: FloatArray, left: FloatArray, a: FloatArray, b: FloatArray, k: FloatArray,
-    c: FloatArray, s: FloatArray, e: FloatArray, by_tip: FloatArray, by_angle: FloatArray, by_curvature: FloatArray,
+    turn: FloatArray,
+    radius: FloatArray,
+    left: BoolArray,
+    a: FloatArray,
+    b: FloatArray,
+    k: FloatArray,
+    c: FloatArray,
+    s: FloatArray,
+    e: FloatArray,
+    by_tip: FloatArray,
+    by_angle: FloatArray,
+    by_curvature: FloatArray,
 ) -> tuple[FloatArray, ...]:
     """Replace the offsets nearer the tip than the fillet's tangent points by those from the fillet's circle."""
     sign = np.where(turn < 0.0, -1.0, 1.0)

@@ -1,0 +1,5 @@
+"""True corners of a jagged outline."""
+
+from geometry.corners.find import Corners, corners_by_angle, find_corners, jaggedness_scale
+
+__all__ = ["Corners", "corners_by_angle", "find_corners", "jaggedness_scale"]
