@@ -85,7 +85,7 @@ def polygon_area(points: FloatArray) -> float:
 
 
 def clean(polyline: Polyline, least: float = 0.0) -> tuple[Polyline, IntArray]:
-    """Drop vertices that lie within `least` of the one kept before them.
+    """Drop vertices that lie within `least` of the one kept before them, and at the end of a closed one of the first.
 
     Args:
         polyline: any polyline.
@@ -104,9 +104,9 @@ def clean(polyline: Polyline, least: float = 0.0) -> tuple[Polyline, IntArray]:
         raise NotFiniteError(int(bad[0]))
     steps = np.linalg.norm(np.diff(points, axis=0), axis=1)
     kept = np.concatenate([[0], 1 + np.flatnonzero(steps > least)]) if len(points) else np.zeros(0, dtype=np.intp)
-    if least > 0.0 and len(kept) > 1:  # runs of short steps may still add up: walk only where one was dropped
-        kept = _walk(points, least) if len(kept) < len(points) else kept
-    if polyline.closed and len(kept) > 1 and np.linalg.norm(points[kept[-1]] - points[kept[0]]) <= least:
+    if least > 0.0 and len(kept) < len(points):  # runs of short steps may still add up
+        kept = _walk(points, least)
+    while polyline.closed and len(kept) > 1 and np.linalg.norm(points[kept[-1]] - points[kept[0]]) <= least:
         kept = kept[:-1]
     needed = 3 if polyline.closed else 2
     if len(kept) < needed:
