@@ -132,21 +132,22 @@ def _distances(batch: _Batch, shape: _Shape) -> tuple[FloatArray, ComplexArray, 
     return a / (1.0 + np.sqrt(np.maximum(1.0 + bend * a, 0.0))), points, seen
 
 
-def polish(track: Track, chord_error: float, chains: list[Chain], steps: int = len(POWERS)) -> list[Polished]:
+def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[float]) -> list[Polished]:
     """Lower the largest error of chains, make their tangents continuous and measure them.
 
     Args:
         track: the curve.
-        chord_error: a chain is left as soon as it is within this, drawing units.
-        chains: starting chains; those of an open track may be many, a closed track has one.
-        steps: most Newton steps.
+        chord_error: drawing units.
+        chains: starting chains in order of their pieces; an open track may have many, a closed track has one.
+        goals: a chain is left as soon as its error is this share of the chord error, shape (c,).
     """
     best: list[Chain] = list(chains)
     score = np.full(len(chains), np.inf)
     active = np.arange(len(chains))
     batch = _batch(track, chains)
-    history = np.full((steps, len(chains)), np.inf)
-    for step in range(steps):
+    goal = np.array(goals) * chord_error
+    history = np.full((len(POWERS), len(chains)), np.inf)
+    for step, power in enumerate(POWERS):
         shape = _shape(batch)
         r, points, seen = _distances(batch, shape)
         owner = batch.arc_owner
@@ -158,10 +159,10 @@ def polish(track: Track, chord_error: float, chains: list[Chain], steps: int = l
             score[active[index]] = merit[index]
             best[active[index]] = _chain(batch, index)
         history[step, active] = worst
-        done = (worst < 0.985 * chord_error) & (defect < 1e-3)
+        done = (worst < goal[active]) & (defect < 1e-3)
         if step >= 9:
-            done |= (worst > 1.02 * chord_error) & (history[step - 3, active] < 1.01 * worst)
-        broken = _advance(batch, shape, r, points, seen, worst, chord_error, POWERS[min(step, len(POWERS) - 1)])
+            done |= (worst > 1.02 * np.minimum(goal[active], chord_error)) & (history[step - 3, active] < 1.01 * worst)
+        broken = _advance(batch, shape, r, points, seen, worst, goal[active], power)
         done |= broken | ~np.isfinite(merit)
         if done.any():
             active = active[~done]
@@ -191,13 +192,13 @@ def _advance(
     points: ComplexArray,
     seen: ComplexArray,
     worst: FloatArray,
-    chord_error: float,
+    goal: FloatArray,
     power: int,
 ) -> BoolArray:
     """Take one Newton step of the p-norm in place; return the chains that broke."""
     owner = batch.arc_owner
     chains = len(worst)
-    level = np.maximum(worst, 1e-3 * chord_error)
+    level = np.maximum(worst, 1e-3 * goal)
     size = np.maximum(np.abs(r) / level[owner][:, None], 0.03)
     weight = size ** (power - 2) if power > 2 else np.ones_like(size)
     total = np.bincount(owner, weights=weight.sum(axis=1), minlength=chains)
@@ -212,7 +213,7 @@ def _advance(
     pull = np.matmul(weighted.transpose(0, 2, 1), r[..., None])[..., 0] * min(1.0, 2.0 / power)
     near = _shorter_chord(batch, shape)
     mean = float(np.trace(gram, axis1=1, axis2=2).mean()) + 1e-300
-    slide = 0.3 * SAMPLES * (np.maximum(level, chord_error)[batch.owner] / (0.15 * near)) ** 2
+    slide = 0.3 * SAMPLES * (np.maximum(level, goal)[batch.owner] / (0.15 * near)) ** 2
     diagonal = np.stack([1e-9 * mean * near**2, np.full(len(near), 1e-9 * mean), slide], axis=1)
     x = _solve(batch, shape, block, pull, diagonal)
     return _move(batch, x, near)

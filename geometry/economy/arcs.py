@@ -16,10 +16,13 @@ from geometry.errors import GeometryError
 
 __all__ = ["fewest_arcs"]
 
-Driver = Generator[Chain, Polished, Chain]
+Trial = tuple[Chain, float]  # a chain to polish, and the share of the chord error to stop at
+Driver = Generator[Trial, Polished, Chain]
 
 GROW_ROUNDS = 12
 STRENGTH = 31.0  # chord errors that a joint's strength has where arcs are as long as they can be
+FIRM, EXACT = 0.985, 0.02  # shares of the chord error at which polishing stops
+ROUND = 2.5  # arcs asked for under which a closed curve may be a circle
 DEFECT = 1e-9  # radians a joint may kink
 
 
@@ -53,13 +56,17 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
     waiting = {piece: next(driver) for piece, driver in drivers.items()}
     while waiting:
         pieces = list(waiting)
-        for piece, result in zip(pieces, polish(track, chord_error, [waiting[p] for p in pieces]), strict=True):
+        for piece, result in zip(pieces, _polished(track, chord_error, list(waiting.values())), strict=True):
             try:
                 waiting[piece] = drivers[piece].send(result)
             except StopIteration as stop:
                 chains[piece] = stop.value
                 del waiting[piece]
     return _assembled(track, chains)
+
+
+def _polished(track: Track, chord_error: float, trials: list[Trial]) -> list[Polished]:
+    return polish(track, chord_error, [trial[0] for trial in trials], [trial[1] for trial in trials])
 
 
 def _straight_pieces(track: Track, chord_error: float) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
@@ -81,7 +88,7 @@ def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driv
     if accepted is None:
         accepted = _by_biarcs(track, piece, demand, chord_error)
     accepted = yield from _shrunk(accepted, chord_error, thorough)
-    accepted = yield from _with_lines(accepted, chord_error)
+    accepted = yield from _with_lines(accepted, chord_error, thorough)
     return accepted.chain
 
 
@@ -91,15 +98,19 @@ def _fits(result: Polished, chord_error: float) -> bool:
 
 def _grown(
     track: Track, piece: int, demand: tuple[FloatArray, FloatArray], chord_error: float, thorough: bool
-) -> Generator[Chain, Polished, Polished | None]:
+) -> Generator[Trial, Polished, Polished | None]:
     """Start from the demand and add joints where the error is, until the chain fits; None when it never does."""
     least = 4 if track.closed else 1
     estimate = float(demand[1][-1])
+    if track.closed and estimate < ROUND:
+        result = yield start_chain(track, piece, demand, 2, 0.25), FIRM
+        if _fits(result, chord_error):
+            return result
     count = max(least, int(np.ceil(estimate) if thorough else np.ceil(1.03 * estimate + 0.5)))
     restarts = 0
     chain = start_chain(track, piece, demand, count, 0.25)
     for turn in range(GROW_ROUNDS):
-        result = yield chain
+        result = yield chain, FIRM
         if _fits(result, chord_error):
             return result
         lost = not np.isfinite(result.worst) or (turn > 3 and turn % 3 == 0 and result.worst > 8.0 * chord_error)
@@ -170,7 +181,7 @@ def _by_biarcs(track: Track, piece: int, demand: tuple[FloatArray, FloatArray], 
     return measure_chains(track, [biarc_chain(track, piece, s, chord_error)])[0]
 
 
-def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Chain, Polished, Polished]:
+def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Trial, Polished, Polished]:
     """Take out the weakest joints while the chain still fits."""
     barred = np.zeros(len(accepted.chain.joint), dtype=np.bool_)
     failures, share = 0, 1.0
@@ -179,7 +190,7 @@ def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator
         if not len(weak):
             break
         weak = weak[: max(1, int(np.ceil(share * len(weak))))]
-        result = yield _without(accepted.chain, weak)
+        result = yield _without(accepted.chain, weak), FIRM
         if _fits(result, chord_error):
             accepted, share = result, 1.0
             barred = np.delete(barred, weak)
@@ -213,17 +224,17 @@ def _weak_joints(
     order = np.argsort(strength)
     if strength[order[0]] >= most:
         return np.zeros(0, dtype=np.intp)
-    taken = [int(number[order[0]])]
-    blocked = {taken[0] - 1, taken[0] + 1}
-    room = chain.count - (2 if chain.closed else 1)
     size = len(chain.joint)
+    taken = [int(number[order[0]])]
+    blocked = {(taken[0] - 1) % size, (taken[0] + 1) % size}  # the ends of an open chain are never taken
+    room = chain.count - (2 if chain.closed else 1)
     for index in order[1:].tolist():
         joint = int(number[index])
         if strength[index] >= sure or len(taken) >= room:
             break
         if joint not in blocked:
             taken.append(joint)
-            blocked |= {(joint - 1) % size, (joint + 1) % size} if chain.closed else {joint - 1, joint + 1}
+            blocked |= {(joint - 1) % size, (joint + 1) % size}
     return np.array(taken, dtype=np.intp)
 
 
@@ -248,9 +259,9 @@ def _without(chain: Chain, joints: IntArray) -> Chain:
     )
 
 
-def _with_lines(accepted: Polished, chord_error: float) -> Generator[Chain, Polished, Polished]:
+def _with_lines(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Trial, Polished, Polished]:
     """Hold nearly straight arcs straight where the chain still fits, the boldest choice first."""
-    for share in (1.0, 0.25, 0.02):
+    for share in (3.0, 1.0, 0.25, 0.02) if thorough else (3.0, 0.25, 0.02):
         chain = accepted.chain
         joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
         chord = np.abs(np.diff(joints))
@@ -265,9 +276,13 @@ def _with_lines(accepted: Polished, chord_error: float) -> Generator[Chain, Poli
                 line[index] = True
         if np.array_equal(line, chain.line):
             continue
-        result = yield Chain(chain.piece, chain.joint, chain.angle, chain.s, line, chain.closed)
+        result = yield Chain(chain.piece, chain.joint, chain.angle, chain.s, line, chain.closed), FIRM
         if _fits(result, chord_error):
             return result
+        if share == 3.0:  # settle: true lines then stand out from slight arcs
+            settled = yield chain, EXACT
+            if _fits(settled, chord_error):
+                accepted = settled
     return accepted
 
 

@@ -30,7 +30,7 @@ def two_sided(
         bulges: of the lines and arcs, shape (n,).
         s: arc length on the track that belongs to the start and the end of each, shape (n, 2).
         group: chain that each belongs to, shape (n,); only neighbours of the same chain are looked at.
-        samples: on every stretch, each way.
+        samples: on every stretch, each way; the nodes of the track on it are looked at besides.
     """
     n = len(bulges)
     share = (np.arange(samples) + 0.5) / samples
@@ -52,7 +52,28 @@ def two_sided(
         low = np.maximum(low, track.s[track.first][piece][:, None])
         high = np.minimum(high, track.s[track.last][piece][:, None])
     to_curve = np.abs(points - track.points(feet(track, points, guess, low, high)))
-    return np.maximum(to_chain.max(axis=1), to_curve.max(axis=1))
+    worst = np.maximum(to_chain.max(axis=1), to_curve.max(axis=1))
+    node, owner = _nodes_inside(track, s)
+    at = track.node_points[node]
+    off = distance_to_arcs(at, start[owner], end[owner], bulges[owner])
+    more = np.flatnonzero(off > worst[owner])
+    at, off, owner = at[more], off[more], owner[more]
+    for other in (-1, 1):
+        index = np.mod(owner + other, n) if track.closed else np.clip(owner + other, 0, n - 1)
+        index = np.where(group[index] == group[owner], index, owner)
+        off = np.minimum(off, distance_to_arcs(at, start[index], end[index], bulges[index]))
+    np.maximum.at(worst, owner, off)
+    return worst
+
+
+def _nodes_inside(track: Track, s: FloatArray) -> tuple[IntArray, IntArray]:
+    """Return the nodes of the track that lie on given stretches (in order, not overlapping), and which each lies on."""
+    along = track.s
+    if track.closed:
+        along = np.where(along < s[0, 0], along + track.period, along)
+    owner = np.clip(np.searchsorted(s[:, 0], along, side="right") - 1, 0, len(s) - 1)
+    node = np.flatnonzero((along >= s[owner, 0]) & (along <= s[owner, 1]))
+    return node, owner[node]
 
 
 def feet(

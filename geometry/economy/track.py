@@ -6,6 +6,7 @@ one piece and the start of the next) and evaluates points, tangent angles and cu
 """
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from numpy.typing import NDArray
@@ -70,6 +71,11 @@ class Track:
         """Whole turn of the tangent round a closed track, radians, 0 otherwise."""
         return float(self.angle[-1] - self.angle[0]) if self.closed else 0.0
 
+    @cached_property
+    def node_points(self) -> ComplexArray:
+        """Points at the nodes, complex, shape (n,)."""
+        return self.points(self.s)
+
     @property
     def cells(self) -> BoolArray:
         """Whether a cell (not a gap) lies behind every node but the last, shape (n - 1,)."""
@@ -107,7 +113,7 @@ class Track:
         return np.stack([z.real, z.imag], axis=-1) + self.origin
 
     def integral(self, density: FloatArray) -> FloatArray:
-        """Return the running integral over arc length of a density given at the nodes (trapezoidal rule, gaps count 0)."""
+        """Return the running integral over arc length of a density given at the nodes (trapezoidal rule, no gaps)."""
         area = 0.5 * (density[1:] + density[:-1]) * np.diff(self.s) * self.cells
         return np.concatenate([[0.0], np.cumsum(area)])
 
