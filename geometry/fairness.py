@@ -21,7 +21,7 @@ __all__ = ["LEAST_HEIGHT", "LEAST_TURNING", "PROMINENCE", "CurvatureComb", "Fair
 
 LEAST_TURNING = np.radians(1.0)
 """A lobe of curvature that turns by this or more, radians, counts whatever its height."""
-LEAST_HEIGHT = 0.02
+LEAST_HEIGHT = 0.05
 """A lobe that stands this share of the scale or more off its chord counts whatever its turning."""
 PROMINENCE = 0.02
 """A curvature extremum counts when it stands out by this share of the range of the curvature."""

@@ -135,7 +135,7 @@ def test_wiggles_under_the_scale_do_not_count_and_over_it_do():
     wave = sine(200, waves=10.0, height=0.01)
     assert fairness(wave, scale=1.0).inflections == 0
     assert fairness(wave, scale=1.0).curvature_extrema == 0
-    assert fairness(wave, scale=0.2).inflections == 19
+    assert fairness(wave, scale=0.15).inflections == 19
     assert fairness(wave, scale=0.0).inflections == 19
 
 
