@@ -70,7 +70,8 @@ class ArcChain:
         radius_squared = 1.0 / np.where(np.abs(curvature) > 0.0, curvature, np.inf) ** 2
         # circular segment r^2 (sweep - sin sweep) / 2; its own sign is that of the sweep and of the bulge
         small = np.abs(sweep) < 1e-3  # the difference cancels there: c^2 sweep / 12 is its series to 1e-7
-        segment = np.where(small, self.chord_lengths() ** 2 * sweep / 12.0, 0.5 * radius_squared * (sweep - np.sin(sweep)))
+        flat = self.chord_lengths() ** 2 * sweep / 12.0
+        segment = np.where(small, flat, 0.5 * radius_squared * (sweep - np.sin(sweep)))
         return polygon_area(self.points) + float(segment.sum())
 
     def bounds(self) -> tuple[FloatArray, FloatArray]:
