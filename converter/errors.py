@@ -1,0 +1,40 @@
+"""Errors of the converter: one line each that says what, where (file, handle, layer) and what to do.
+
+The command line prints them as `error: ...` and ends with exit code 2.
+"""
+
+__all__ = [
+    "ConverterError",
+    "LengthError",
+    "NoProfileError",
+    "OutputError",
+    "ReadError",
+    "VersionError",
+]
+
+
+class ConverterError(Exception):
+    """Base of every error of the converter; its text is the whole message, on one line."""
+
+    def __init__(self, message: str) -> None:
+        super().__init__(" ".join(message.split()))  # one plain argument, so the error can cross a process pool
+
+
+class ReadError(ConverterError):
+    """A file cannot be read as a drawing."""
+
+
+class NoProfileError(ConverterError):
+    """The drawing, or the chosen layers of it, hold no profile."""
+
+
+class LengthError(ConverterError):
+    """A length or a unit on the command line cannot be used."""
+
+
+class OutputError(ConverterError):
+    """An output cannot or must not be written."""
+
+
+class VersionError(ConverterError):
+    """A DXF version cannot express what is to be written."""
