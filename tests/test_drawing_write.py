@@ -5,7 +5,6 @@ import os
 import ezdxf
 import numpy as np
 import pytest
-from dxf_text import handle, records
 
 from converter.drawing import read_drawing, replace, save, supports, written_curve
 from converter.drawing.write import circle_of
@@ -13,6 +12,7 @@ from converter.errors import ConverterError, OutputError, VersionError
 from geometry.arcs import ArcChain, full_circle
 from geometry.bspline import Spline
 from geometry.polyline import Polyline
+from tests.dxf_text import handle, records
 
 VERSIONS = ["R12", "R2000", "R2010", "R2018"]
 SQUARE = [(0.0, 0.0), (10 / 3, 0.1), (10.0, 0.0), (10.0, 10.0), (0.0, 10.0)]
