@@ -118,9 +118,12 @@ def _staircase(edges: FloatArray, closed: bool) -> Jaggedness | None:
     shares = [float(length[classes == k].sum()) / total for k in (0, 1)]
     chamfered = min(shares) > 0.02
     straight, slant = length[classes == 0], length[classes == 1]
-    if chamfered:  # steps along the grid are whole pitches, slanted ones whole half diagonals; try both ways round
+    if chamfered:  # steps along the grid are whole pitches, slanted ones whole half diagonals
         options = [_pitch(straight, slant), _pitch(slant, straight)]
-        pitch, whole = min((o for o in options if o[1] >= 0.95), default=(0.0, 0.0))
+        if abs(phase) < _HEADING:  # a scan that lies straight has its grid along the axes
+            level = np.rint(heading / (np.pi / 4.0)).astype(int) % 2
+            options = [_pitch(length[level == 0], length[level == 1])]
+        pitch, whole = max((o for o in options if o[1] >= 0.95), default=(0.0, 0.0))
     else:
         pitch = float(np.quantile(length, 0.01, method="lower"))
         whole = float(np.mean(_near_multiple(length, pitch)))

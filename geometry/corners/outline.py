@@ -54,11 +54,12 @@ class EvenOutline:
         extended = _extended(self.points - origin, self.closed)
         frequency = 2.0 * np.pi * np.fft.rfftfreq(len(extended), self.step)
         spectrum = np.fft.rfft(extended, axis=0) / (1.0 + (length * frequency) ** 6)[:, None]
-        first = 0 if self.closed else len(self.points) - 1
+        # an open path stands behind its mirror image, its last point being the mirror image's first
+        taken = np.mod(np.arange(len(self.points)) + (0 if self.closed else len(self.points) - 1), len(extended))
         out = []
         for order in range(derivatives + 1):
             values = np.fft.irfft(spectrum * ((1j * frequency) ** order)[:, None], len(extended), axis=0)
-            out.append(np.ascontiguousarray(values[first : first + len(self.points)]))
+            out.append(values[taken])
         if not self.closed:
             _restore_line(out, self.points - origin, self.step)
         out[0] += origin

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.arrays import FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.trace import Trace
 
@@ -102,8 +102,8 @@ def _moved_in(trace: Trace, points: FloatArray, inwards: FloatArray, own: FloatA
     trial = points[far, None] + steps[:, None] * unit(inwards[far])[:, None]
     flat = trial.reshape(-1, trial.shape[-1])
     gap = trace.distance(flat, np.repeat(own[far], len(steps)), _WINDOW).reshape(len(far), len(steps))
-    inside: BoolArray = np.less_equal(gap, most)
+    inside = gap <= most
     first = inside.argmax(axis=1)
     out = points.copy()
-    out[far] = np.where(inside.any(axis=1)[:, None], trial[np.arange(len(far)), first], trace.at(own[far]))
+    out[far] = np.where(inside.any(axis=1, keepdims=True), trial[np.arange(len(far)), first], trace.at(own[far]))
     return out

@@ -78,6 +78,8 @@ def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree:
     control = spline.control * tolerance + origin
     if polyline.closed:
         control[-1] = control[0]
+    else:
+        control[0], control[-1] = polyline.points[0], polyline.points[-1]  # exactly: others may join there
     spline = Spline(spline.knots * tolerance, control, degree, polyline.closed, spline.smooth_seam)
     return Faired(spline, nodes.points[~nodes.fixed] * tolerance + origin, inserted, False)
 
