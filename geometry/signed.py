@@ -1,0 +1,247 @@
+"""Signed deviation: how far, and to which side, points lie from a curve in the plane.
+
+The sign: + is outside a closed curve, and left of travel of an open one. It is taken at the nearest point. Where that
+lies inside a segment, the segment's own side is the side. Where it is a vertex, the own side of either segment may be
+wrong (beside a sharp corner the line of one of them has been passed); the vector from the vertex to the point then lies
+in the cone between the normals of both, so the side against the sum of their unit tangents is right, unless the curve
+turns straight back and the sum vanishes.
+"""
+
+from dataclasses import dataclass
+
+import numpy as np
+
+from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.chords import Chords, anchors, whole_chords
+from geometry.curve import Curve
+from geometry.errors import GeometryError
+from geometry.nearest import SegmentSearch
+from geometry.polyline import polygon_area
+
+__all__ = ["Course", "DeviationStatistics", "deviation_along", "deviation_statistics", "signed_distances"]
+
+_U = 2.0**-53
+_SHARE = 1.0 / 400.0  # of the tolerance: the chord error that signed deviations are taken to
+
+
+@dataclass(frozen=True, slots=True)
+class DeviationStatistics:
+    """Deviation of a curve from a reference, every stretch weighted by its length; drawing units.
+
+    Attributes:
+        rms: root mean square.
+        mean_signed: mean, + outside a closed reference or left of an open one; None in 3-D, where there are no sides.
+        max_plus: largest on the plus side, 0 where there is none; None in 3-D.
+        max_minus: largest on the minus side as a number <= 0, 0 where there is none; None in 3-D.
+        percentile_95: the size that 95% of the length does not pass.
+    """
+
+    rms: float
+    mean_signed: float | None
+    max_plus: float | None
+    max_minus: float | None
+    percentile_95: float
+
+
+@dataclass(frozen=True, slots=True, eq=False)
+class Course:
+    """Deviation in the course of a curve.
+
+    Attributes:
+        along: arc length from the start to each sample, shape (n,), drawing units.
+        points: the samples, on the curve, shape (n, d).
+        weights: length of the stretch each sample stands for, in the middle of which it lies, shape (n,).
+        deviation: signed in 2-D, unsigned in 3-D, shape (n,), drawing units.
+    """
+
+    along: FloatArray
+    points: FloatArray
+    weights: FloatArray
+    deviation: FloatArray
+
+    def statistics(self) -> DeviationStatistics:
+        """Return the statistics of the deviation, weighted by length."""
+        share = (
+            self.weights / self.weights.sum()
+            if self.weights.any()
+            else np.full(len(self.weights), 1.0 / len(self.weights))
+        )
+        size = np.abs(self.deviation)
+        order = np.argsort(size)
+        rank = min(int(np.searchsorted(np.cumsum(share[order]), 0.95)), len(order) - 1)
+        flat = self.points.shape[1] == 2
+        return DeviationStatistics(
+            rms=float(np.sqrt(np.dot(share, size * size))),
+            mean_signed=float(np.dot(share, self.deviation)) if flat else None,
+            max_plus=max(0.0, float(self.deviation.max())) if flat else None,
+            max_minus=min(0.0, float(self.deviation.min())) if flat else None,
+            percentile_95=float(size[order[rank]]),
+        )
+
+
+def signed_distances(points: FloatArray, curve: Curve, chord_error: float, crossing: bool = False) -> FloatArray:
+    """Return the signed distance from points to a planar curve.
+
+    Args:
+        points: shape (n, 2), finite, drawing units.
+        curve: polyline, arc chain or spline in the plane.
+        chord_error: how far the curve's chords may lie from it, drawing units, > 0.
+        crossing: the closed curve crosses or touches itself, so that inside and outside are told by the even-odd rule
+            over all of it instead of by its nearest part (slower).
+
+    Returns:
+        Distances, shape (n,): within `chord_error` of the true ones in size; + outside a closed curve, + left of travel
+        of an open one (beyond an end: of the end tangent; beyond the tip of a spike that turns straight back: of the
+        edge that leads there). A point nearer to the curve than `chord_error` may be given either sign, one within
+        rounding of the chords is at 0.
+
+    Raises:
+        NotFiniteError, TooFewPointsError: the curve cannot be used.
+        GeometryError: the curve is not planar, has no length, or the chord error is not above 0.
+    """
+    if curve.dimension != 2 or points.shape[1] != 2:
+        raise GeometryError("there are no sides in 3 dimensions; measure without sign, or give a planar curve")
+    return _distances(points, curve, chord_error, crossing)
+
+
+def deviation_statistics(curve: Curve, reference: Curve, tolerance: float) -> DeviationStatistics:
+    """Return how a curve deviates from a reference: + where it lies outside (closed) or left of (open) the reference.
+
+    Args:
+        curve: polyline, arc chain or spline; samples are taken all along it, each in the middle of its stretch.
+        reference: what it is measured to, of the same dimension.
+        tolerance: sets how closely samples follow each other and the chord error (1/400 of it), drawing units, > 0.
+
+    Returns:
+        Statistics weighted by arc length. They come from samples: the certified largest deviation is another matter.
+
+    Raises:
+        As `signed_distances`.
+    """
+    along, points, weights = _samples(curve, reference, tolerance)
+    return Course(along, points, weights, _distances(points, reference, _SHARE * tolerance, False)).statistics()
+
+
+def deviation_along(old: Curve, new: Curve, tolerance: float, crossing: bool = False) -> Course:
+    """Return, in the course of an old curve, how far and to which side a new one lies: + outside it or left of it.
+
+    The distance is from the sample of the old curve to the nearest point of the new one; the side is that of the new
+    curve as seen from the old. Open curves may run in opposite directions: the new one is taken in that in which its
+    ends are nearer to those of the old one.
+
+    Args:
+        old: polyline, arc chain or spline; samples are taken all along it.
+        new: what it is measured to, of the same dimension.
+        tolerance: as for `deviation_statistics`.
+        crossing: as for `signed_distances`, about the new curve.
+
+    Raises:
+        As `signed_distances`.
+    """
+    along, points, weights = _samples(old, new, tolerance)
+    deviation = _distances(points, new, _SHARE * tolerance, crossing)
+    if old.dimension == 2:
+        deviation = deviation if not new.closed and _opposed(old, new) else -deviation
+    return Course(along, points, weights, deviation)
+
+
+def _opposed(old: Curve, new: Curve) -> bool:
+    p, q = anchors(old), anchors(new)
+    same = np.sum((p[0] - q[0]) ** 2) + np.sum((p[-1] - q[-1]) ** 2)
+    swapped = np.sum((p[0] - q[-1]) ** 2) + np.sum((p[-1] - q[0]) ** 2)
+    return bool(swapped < same)
+
+
+def _samples(curve: Curve, other: Curve, tolerance: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Points on a curve, with arc length to each and the length it stands for; about 4 an edge of the finer curve."""
+    if not 0.0 < tolerance < np.inf:
+        raise GeometryError(f"a tolerance of {tolerance:g} cannot be used; it must be a number above 0")
+    chords = whole_chords(curve).split(_SHARE * tolerance)
+    lengths = np.linalg.norm(chords.end - chords.start, axis=1)
+    total = float(lengths.sum())
+    step = max(tolerance, total / (400.0 + 4.0 * (len(anchors(other)) + len(lengths))))
+    parts = np.maximum(np.ceil(lengths / step), 1.0).astype(np.intp)
+    chord = np.repeat(np.arange(len(parts)), parts)
+    share = (np.arange(len(chord)) - np.repeat(np.cumsum(parts) - parts, parts) + 0.5) / parts[chord]
+    t = chords.low[chord] + share * (chords.high - chords.low)[chord]
+    weights = (lengths / parts)[chord]
+    return np.cumsum(weights) - 0.5 * weights, chords.elements.at(chords.element[chord], t), weights
+
+
+def _distances(points: FloatArray, curve: Curve, chord_error: float, crossing: bool) -> FloatArray:
+    """Signed distances in 2-D, plain ones in 3-D."""
+    if not 0.0 < chord_error < np.inf:
+        raise GeometryError(f"a chord error of {chord_error:g} cannot be used; it must be a number above 0")
+    if points.shape[1] != curve.dimension:
+        raise GeometryError(
+            "curves of different dimensions cannot be measured to each other; give both in 2 or both in 3"
+        )
+    defining = anchors(curve)
+    middle = 0.5 * defining.min(axis=0) + 0.5 * defining.max(axis=0)
+    chords = whole_chords(curve, -middle).split(chord_error)
+    long = np.flatnonzero((chords.start != chords.end).any(axis=1))
+    if not long.size:
+        raise GeometryError("the curve to measure to has no length; give one with two distinct points")
+    chords = chords.take(long)
+    local = (points - middle).T.copy()
+    search = SegmentSearch(chords.start.T.copy(), chords.end.T.copy())
+    index, size, _ = search.exact(local)
+    if curve.dimension != 2:
+        return size
+    reach = max(chords.elements.reach, float(np.abs(local).max(initial=0.0)))
+    size[size <= (100.0 + chords.elements.rounding) * _U * reach] = 0.0
+    if curve.closed and crossing:
+        return np.where(_inside(chords, local), -size, size)
+    left, doubtful = _left(search, local, index, curve.closed)
+    if not curve.closed:
+        return np.where(left, size, -size)
+    outside = left != (polygon_area(chords.start) > 0.0)
+    if doubtful.any():
+        outside[doubtful] = ~_inside(chords, local[:, doubtful])
+    return np.where(outside, size, -size)
+
+
+def _left(search: SegmentSearch, points: FloatArray, index: IntArray, closed: bool) -> tuple[BoolArray, BoolArray]:
+    """Whether points lie left of travel at their nearest segments, and where that cannot be told."""
+    count = len(search)
+    unit = search.along / np.sqrt(np.add.reduce(search.along * search.along))
+    t = search.foot(points, index)
+    tangent = unit[:, index].copy()
+    doubtful = np.zeros(len(index), dtype=np.bool_)
+    for at_vertex, step in ((t <= 0.0, -1), (t >= 1.0, 1)):
+        vertex = np.flatnonzero(at_vertex)
+        other = index[vertex] + step
+        if closed:
+            other %= count
+        else:  # beyond an end its own tangent counts
+            other = np.clip(other, 0, count - 1)
+        both = unit[:, index[vertex]] + unit[:, other]
+        back = np.hypot(*both) < 1e-7  # of two unit vectors: a turn of all but 180 degrees
+        both[:, back] = unit[:, index[vertex[back]] if step > 0 else other[back]]
+        tangent[:, vertex] = both
+        doubtful[vertex[back]] = True
+    offset = points - search.start[:, index] - t * search.along[:, index]
+    return tangent[0] * offset[1] - tangent[1] * offset[0] > 0.0, doubtful
+
+
+def _inside(chords: Chords, points: FloatArray) -> BoolArray:
+    """Whether points lie inside the closed polygon of the chords, by the even-odd rule, at any crossing of itself."""
+    y0, y1 = chords.start[:, 1], chords.end[:, 1]
+    inside = np.zeros(points.shape[1], dtype=np.bool_)
+    # the ray towards +x from a point at height y crosses the edges with one end at or under y and one above it
+    low, high = np.minimum(y0, y1), np.maximum(y0, y1)
+    order = np.argsort(points[1])
+    height = points[1][order]
+    first, last = np.searchsorted(height, low, side="left"), np.searchsorted(height, high, side="left")
+    hits = last - first
+    block = np.concatenate([[0], 1 + np.flatnonzero(np.diff(np.cumsum(hits) // 1_000_000))])
+    for begin, end in zip(block, np.append(block[1:], len(hits)), strict=True):
+        edges = np.repeat(np.arange(begin, end), hits[begin:end])
+        if not edges.size:
+            continue
+        before = np.cumsum(hits[begin:end]) - hits[begin:end]
+        which = order[first[edges] + np.arange(len(edges)) - np.repeat(before, hits[begin:end])]
+        x0, x1 = chords.start[edges, 0], chords.end[edges, 0]
+        crossing = x0 + (points[1, which] - y0[edges]) / (y1[edges] - y0[edges]) * (x1 - x0)
+        inside ^= (np.bincount(which[crossing > points[0, which]], minlength=len(inside)) % 2).astype(np.bool_)
+    return inside
