@@ -11,6 +11,7 @@ from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import Sampled
 from geometry.fairing.stiffness import Fit, limit_growth, spread
+from geometry.fairing.system import System
 from geometry.fairing.trace import Trace
 
 __all__ = ["CORNER_SEARCH", "LIMIT", "BandCheck", "Nodes", "check_band", "repair"]
@@ -149,7 +150,8 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         stiffness = np.maximum(limit_growth(layout, stiffness, 0.5), 0.3)
         old = fit.sampled
         sampled = Sampled(layout, old.own, old.points, old.bounds, old.own_nodes, old.fit_nodes, dead)
-        fit = Fit(sampled, layout.solve(old.points, sampled.live, stiffness, nodes.pins), stiffness)
+        system = System(layout, old.points, sampled.live, nodes.pins)
+        fit = Fit(sampled, system.solve(stiffness), stiffness)
         check = check_band(trace, fit, nodes)
         if check.worst < best[2].worst:
             best = (fit, nodes, check)

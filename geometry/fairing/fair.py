@@ -13,6 +13,7 @@ from geometry.fairing.layout import Layout
 from geometry.fairing.lobes import remove_lobes
 from geometry.fairing.samples import by_own_length, reparametrised
 from geometry.fairing.stiffness import Fit, relax, start_stiffness
+from geometry.fairing.system import System
 from geometry.fairing.trace import Trace
 from geometry.polyline import Polyline
 
@@ -114,7 +115,7 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
         bounds = np.concatenate([[0.0], own, [trace.length]])
     sampled = by_own_length(trace, bounds, periodic, degree)
     first = np.full(len(sampled.layout), _ONE_SIDED)
-    coefficients = sampled.layout.solve(sampled.points, sampled.live, first, None)
+    coefficients = System(sampled.layout, sampled.points, sampled.live, None).solve(first)
     nodes = _nodes(trace, own, found, sampled.layout, coefficients)
     sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
     fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins)

@@ -10,6 +10,7 @@ from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import normal_offsets
 from geometry.fairing.stiffness import BAND, Fit, local_means, spread, worst_of
+from geometry.fairing.system import System
 
 __all__ = ["remove_lobes"]
 
@@ -25,8 +26,9 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
     sampled, layout = fit.sampled, fit.sampled.layout
     if sampled.points.shape[-1] != 2:
         return fit
-    live, base = sampled.live, fit.stiffness
-    allowed = np.maximum(_excess(fit, fit.coefficients, live) + 1e-9, 1.0)
+    base = fit.stiffness
+    system = System(layout, sampled.points, sampled.live, pins)
+    allowed = np.maximum(_excess(fit, fit.coefficients) + 1e-9, 1.0)
     stiffness, coefficients = base.copy(), fit.coefficients
     frozen = np.zeros(len(layout), dtype=bool)
     for _ in range(_ROUNDS):
@@ -34,29 +36,29 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
         if not chosen.any():
             break
         stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
-        coefficients = layout.solve(sampled.points, live, stiffness, pins)
+        coefficients = system.solve(stiffness)
         for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
-            broken = _excess(fit, coefficients, live) > factor * allowed
+            broken = _excess(fit, coefficients) > factor * allowed
             if not broken.any():
                 break
             back = spread(layout, broken, reach)
             stiffness = np.where(back, base, stiffness)
             frozen |= back
-            coefficients = layout.solve(sampled.points, live, stiffness, pins)
-    if (_excess(fit, coefficients, live) > 1.02 * allowed).any():
+            coefficients = system.solve(stiffness)
+    if (_excess(fit, coefficients) > 1.02 * allowed).any():
         return fit
     return Fit(sampled, coefficients, stiffness)
 
 
-def _excess(fit: Fit, coefficients: FloatArray, live: BoolArray) -> FloatArray:
+def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:
     """Return the largest of the offsets and local means over their limits, for every interval."""
-    layout = fit.sampled.layout
-    offsets = normal_offsets(fit.sampled, coefficients) * live[..., None]
+    layout, live = fit.sampled.layout, fit.sampled.live
+    offsets = normal_offsets(fit.sampled, coefficients)
     return np.maximum.reduce(
         [
             worst_of(offsets) / BAND,
-            local_means(layout, offsets, live, 4.0) / _MEAN_4,
-            local_means(layout, offsets, live, 8.0) / _MEAN_8,
+            local_means(layout.piece, layout.periodic, offsets, live, 4.0) / _MEAN_4,
+            local_means(layout.piece, layout.periodic, offsets, live, 8.0) / _MEAN_8,
         ]
     )
 

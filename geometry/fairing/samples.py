@@ -1,10 +1,11 @@
 """Samples of the trace on a layout, and the map between the trace's own arc length and the fit's."""
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.trace import Trace
 
@@ -14,7 +15,7 @@ _DEAD, _DEAD_SHARE = 1.0, 0.3  # zones at corners that carry no weight: the trac
 _FOOT_STEP = 0.7
 
 
-@dataclass(frozen=True, slots=True)
+@dataclass(frozen=True)
 class Sampled:
     """A layout with the samples that it is fitted to.
 
@@ -35,7 +36,7 @@ class Sampled:
     fit_nodes: FloatArray
     dead: FloatArray
 
-    @property
+    @cached_property
     def live(self) -> BoolArray:
         """Samples that count, shape (m, q)."""
         return self.layout.live(self.dead)
@@ -113,12 +114,27 @@ def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pin
     return _sampled(trace, Layout(lengths, False, layout.degree), sampled.bounds, own_nodes, along)
 
 
-def normal_offsets(sampled: Sampled, coefficients: FloatArray) -> FloatArray:
-    """Return the samples' offsets across the fit: signed, left positive, shape (m, q, 1); in 3-D vectors (m, q, 3)."""
-    x, dx = sampled.layout.at_samples(coefficients, 0), sampled.layout.at_samples(coefficients, 1)
-    gap = sampled.points - x
-    speed = np.maximum(np.sqrt((dx * dx).sum(axis=-1)), 1e-12)
-    if gap.shape[-1] == 2:
-        return ((dx[..., 0] * gap[..., 1] - dx[..., 1] * gap[..., 0]) / speed)[..., None]
-    unit = dx / speed[..., None]
-    return gap - (gap * unit).sum(axis=-1, keepdims=True) * unit
+def normal_offsets(sampled: Sampled, coefficients: FloatArray, intervals: IntArray | None = None) -> FloatArray:
+    """Return the offsets of samples across the fit, 0 for those that do not count.
+
+    Args:
+        sampled: samples and layout.
+        coefficients: of the fit.
+        intervals: the intervals wanted; None for all.
+
+    Returns:
+        Signed, left positive, shape (m, q, 1); in 3-D vectors, shape (m, q, 3).
+    """
+    layout = sampled.layout
+    x, dx = layout.at_samples(coefficients, 0, intervals), layout.at_samples(coefficients, 1, intervals)
+    points, live = sampled.points, sampled.live
+    if intervals is not None:
+        points, live = points[intervals], live[intervals]
+    if points.shape[-1] == 2:
+        gx, gy = points[..., 0] - x[..., 0], points[..., 1] - x[..., 1]
+        tx, ty = dx[..., 0], dx[..., 1]
+        across = (tx * gy - ty * gx) / np.maximum(np.hypot(tx, ty), 1e-12)
+        return np.where(live, across, 0.0)[..., None]
+    gap = points - x
+    unit = dx / np.maximum(np.sqrt((dx * dx).sum(axis=-1)), 1e-12)[..., None]
+    return np.where(live[..., None], gap - (gap * unit).sum(axis=-1, keepdims=True) * unit, 0.0)

@@ -8,9 +8,10 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import Sampled, normal_offsets
+from geometry.fairing.system import System
 from geometry.fairing.trace import near
 
 __all__ = ["BAND", "Fit", "limit_growth", "local_means", "relax", "spread", "start_stiffness", "worst_of"]
@@ -21,6 +22,8 @@ _STIFFEST, _SOFTEST = 40.0, 0.6
 _GROWTH = 0.1
 _SPREAD = 3
 _ROUNDS = 40
+_WINDOWED, _WINDOWS, _NARROWER = 600, 4, 0.6
+_REACH, _LEAST_REACH, _MARGIN = 5.0, 16, 12
 
 
 @dataclass(frozen=True, slots=True)
@@ -43,33 +46,36 @@ def worst_of(values: FloatArray) -> FloatArray:
     return np.asarray(size.max(axis=1))
 
 
-def local_means(layout: Layout, offsets: FloatArray, live: BoolArray, sigma: float) -> FloatArray:
-    """Return the size of the Gaussian mean of the offsets inside each piece, shape (m,).
+def local_means(runs: IntArray, wrap: bool, offsets: FloatArray, live: BoolArray, sigma: float) -> FloatArray:
+    """Return the size of the Gaussian mean of the offsets inside each run of intervals, shape (m,).
 
     The sum of g w e is divided by the root of the sum of g w, since a short window is noisier than a long one.
 
     Args:
+        runs: run of every interval, not decreasing, shape (m,).
+        wrap: whether the one run is a loop.
         offsets: shape (m, q, 1 or 3), 0 where not live.
+        live: samples that count, shape (m, q).
         sigma: width in intervals.
     """
     half = int(np.ceil(3.0 * sigma))
     kernel = np.exp(-0.5 * (np.arange(-half, half + 1) / sigma) ** 2)
     kernel /= kernel.sum()
-    weight = live.mean(axis=1)
-    columns = [offsets[..., k].mean(axis=1) for k in range(offsets.shape[-1])]
-    if layout.periodic:
-        size = len(layout)
+    size = len(runs)
+    columns = [offsets[..., k].sum(axis=1) / offsets.shape[1] for k in range(offsets.shape[-1])]
+    columns.append(live.sum(axis=1) / live.shape[1])
+    if wrap:
         at = np.mod(np.arange(-half, size + half), size)
-        smooth = [np.convolve(column[at], kernel, mode="valid") for column in (*columns, weight)]
+        smooth = [np.convolve(column[at], kernel, mode="valid") for column in columns]
     else:
-        at = np.arange(len(layout)) + half * (layout.piece + 1)
-        padded = np.zeros(len(layout) + half * (len(layout.lengths) + 1))
+        at = np.arange(size) + half * (runs + 1)
+        padded = np.zeros(size + half * (int(runs[-1]) + 2))
         smooth = []
-        for column in (*columns, weight):
+        for column in columns:
             padded[at] = column
             smooth.append(np.convolve(padded, kernel, mode="same")[at])
     scale = np.sqrt(np.maximum(smooth[-1], 1e-12))
-    total = np.abs(smooth[0]) if len(columns) == 1 else np.sqrt(sum(s * s for s in smooth[:-1]))
+    total = np.abs(smooth[0]) if len(columns) == 2 else np.sqrt(sum(s * s for s in smooth[:-1]))
     return np.asarray(np.where(smooth[-1] > 1e-9, total / scale, 0.0))
 
 
@@ -92,35 +98,111 @@ def _limited(values: FloatArray, ramp: FloatArray) -> FloatArray:
 def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None) -> Fit:
     """Soften a fit until it keeps the band and its size.
 
+    On a long profile only windows about the places that ask for it are solved again, so that a stretch costs its own
+    rounds only; the whole is solved again at the end.
+
     Args:
+        sampled: samples and layout.
         stiffness: of every interval, shape (m,); it only falls.
         pins: points where pieces start and end, shape (p, 2, d); None for a periodic piece.
     """
     layout, live = sampled.layout, sampled.live
+    system = System(layout, sampled.points, live, pins)
+    windows = 0
+    coefficients = system.solve(stiffness)
     for _ in range(_ROUNDS):
-        coefficients = layout.solve(sampled.points, live, stiffness, pins)
-        offsets = normal_offsets(sampled, coefficients) * live[..., None]
-        excess = np.maximum(worst_of(offsets) / BAND, local_means(layout, offsets, live, 4.0) / _DRIFT)
+        excess = _excess(sampled, layout.piece, layout.periodic, coefficients, None)
         hot = excess > 1.0
         if not hot.any():
             break
-        spread = _spread_maximum(layout, np.where(hot, excess, 0.0))
-        factor = np.where(spread > 1.0, np.clip(np.maximum(spread, 1.0) ** -0.7, 0.5, 0.95), 1.0)
-        stiffness = np.maximum(limit_growth(layout, stiffness * factor, _GROWTH), _SOFTEST)
+        stiffness = limit_growth(layout, _softened(stiffness, excess, layout.piece, layout.periodic), _GROWTH)
+        stiffness = np.maximum(stiffness, _SOFTEST)
+        if len(layout) > _WINDOWED and windows < _WINDOWS:
+            chosen = np.flatnonzero(_concerned(layout, stiffness, hot))
+            if len(chosen) < _NARROWER * len(layout):
+                stiffness = _relax_windows(sampled, stiffness, pins, coefficients, chosen)
+                stiffness = np.maximum(limit_growth(layout, stiffness, _GROWTH), _SOFTEST)
+                windows += 1
+        coefficients = system.solve(stiffness)
     return Fit(sampled, coefficients, stiffness)
 
 
-def _spread_maximum(layout: Layout, values: FloatArray) -> FloatArray:
-    """Return the largest value among neighbours at most 3 intervals away in the same piece."""
-    out = values.copy()
+def _relax_windows(
+    sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, coefficients: FloatArray, chosen: IntArray
+) -> FloatArray:
+    """Return the stiffness after softening inside windows, the coefficients around them held."""
+    layout = sampled.layout
+    stiffness = stiffness.copy()
+    system: System | None = None
+    for _ in range(_ROUNDS):
+        if system is None:
+            system = System(layout, sampled.points, sampled.live, pins, chosen)
+            chosen, runs = system.chosen, system.runs
+            core = _core(layout, chosen, runs)
+            position = np.cumsum(layout.h[chosen])
+        coefficients = system.solve(stiffness, coefficients)
+        excess = np.where(core, _excess(sampled, runs, False, coefficients, chosen), 0.0)
+        if not (excess > 1.0).any():
+            break
+        softer = _softened(stiffness[chosen], excess, runs, False)
+        stiffness[chosen] = np.maximum(_limited(softer, _GROWTH * position + 1e4 * runs), _SOFTEST)
+        hot = np.zeros(len(layout), dtype=np.bool_)
+        hot[chosen[excess > 1.0]] = True
+        narrower = np.sort(chosen[_concerned(layout, stiffness, hot)[chosen]])
+        if len(narrower) < _NARROWER * len(chosen):
+            chosen, system = narrower, None
+    return stiffness
+
+
+def _excess(
+    sampled: Sampled, runs: IntArray, wrap: bool, coefficients: FloatArray, chosen: IntArray | None
+) -> FloatArray:
+    """Return the largest of offset and local mean over their limits, for every interval chosen."""
+    offsets = normal_offsets(sampled, coefficients, chosen)
+    live = sampled.live if chosen is None else sampled.live[chosen]
+    return np.maximum(worst_of(offsets) / BAND, local_means(runs, wrap, offsets, live, 4.0) / _DRIFT)
+
+
+def _softened(stiffness: FloatArray, excess: FloatArray, runs: IntArray, wrap: bool) -> FloatArray:
+    """Return the stiffness lowered where the excess of an interval at most 3 away in the same run passes 1."""
+    values = np.maximum(excess, 1.0)
+    most = values.copy()
     for shift in range(1, _SPREAD + 1):
-        if layout.periodic:
-            out = np.maximum(out, np.maximum(np.roll(values, shift), np.roll(values, -shift)))
+        if wrap:
+            most = np.maximum(most, np.maximum(np.roll(values, shift), np.roll(values, -shift)))
             continue
-        same = layout.piece[shift:] == layout.piece[:-shift]
-        out[shift:] = np.where(same, np.maximum(out[shift:], values[:-shift]), out[shift:])
-        out[:-shift] = np.where(same, np.maximum(out[:-shift], values[shift:]), out[:-shift])
-    return out
+        same = runs[shift:] == runs[:-shift]
+        most[shift:] = np.where(same, np.maximum(most[shift:], values[:-shift]), most[shift:])
+        most[:-shift] = np.where(same, np.maximum(most[:-shift], values[shift:]), most[:-shift])
+    return np.asarray(stiffness * np.where(most > 1.0, np.clip(most**-0.7, 0.5, 0.95), 1.0))
+
+
+def _concerned(layout: Layout, stiffness: FloatArray, hot: BoolArray) -> BoolArray:
+    """Return the intervals that a change of stiffness at hot ones can reach noticeably.
+
+    The influence of a change decays with the integral of ds / l; what is within 5 of a hot interval is kept, and 16
+    intervals in any case.
+    """
+    depth = np.cumsum(layout.h / stiffness)
+    total = depth[-1]
+    depth = depth + (total + 10.0) * layout.piece
+    places = depth[hot]
+    before = np.maximum.accumulate(np.where(hot, depth, places[-1] - total if layout.periodic else -np.inf))
+    after = np.where(hot, depth, places[0] + total if layout.periodic else np.inf)
+    after = np.minimum.accumulate(after[::-1])[::-1]
+    return (np.minimum(depth - before, after - depth) <= _REACH) | spread(layout, hot, _LEAST_REACH)
+
+
+def _core(layout: Layout, chosen: IntArray, runs: IntArray) -> BoolArray:
+    """Return the intervals of windows far enough from held neighbours to be judged."""
+    index = np.arange(len(chosen))
+    starts = np.concatenate([[0], 1 + np.flatnonzero(np.diff(runs))])
+    stops = np.append(starts[1:], len(chosen)) - 1
+    at_start = (layout.local[chosen[starts]] == 0) & (not layout.periodic)
+    at_stop = (layout.local[chosen[stops]] == layout.counts[layout.piece[chosen[stops]]] - 1) & (not layout.periodic)
+    behind = np.where(at_start, len(layout), 0)[runs] + index - starts[runs]
+    ahead = np.where(at_stop, len(layout), 0)[runs] + stops[runs] - index
+    return np.minimum(behind, ahead) >= _MARGIN
 
 
 def spread(layout: Layout, flags: BoolArray, reach: int) -> BoolArray:
