@@ -11,16 +11,46 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline, join
 from geometry.economy.spline_fit import Basis, Fit, measure
-from geometry.economy.spline_knots import State, add_where_over, level, place, refit, remove, smoothed, spacing
+from geometry.economy.spline_knots import (
+    State,
+    add_where_over,
+    bent,
+    level,
+    place,
+    refit,
+    remove,
+    smoothed,
+    spacing,
+    uniform,
+)
 from geometry.economy.spline_shape import Guard
 from geometry.economy.spline_source import Source, cut, sample, straight, turned_to_corner
 
 __all__ = ["fewest_knots"]
 
-_PER_SPAN = 8  # samples a span of the source while fitting
+_PER_SPAN = 4  # samples a span of the source while fitting
 _CHECK = 16  # samples a span of the source for the last check
 _AIM = 0.985  # share of the chord error that the fit may use; the rest covers what lies between samples
-_FINER = (1.0, 4.0, 16.0, 64.0)  # knots are laid for the chord error over these, in turn, until a piece is fair
+_LINE = 0.05  # share of the chord error within which a piece counts as drawn straight
+_WAYS = (
+    ("even", 1.0),
+    ("line", 0.0),
+    ("even", 2.0),
+    ("thin", 1.0),
+    ("even", 3.0),
+    ("even", 4.0),
+    ("even", 5.0),
+    ("even", 6.0),
+    ("even", 8.0),
+    ("even", 11.0),
+    ("thin", 4.0),
+    ("thin", 16.0),
+    ("thin", 64.0),
+)  # tried in turn until a piece is near enough and fair: equal spans, or knots for a finer chord error thinned
+_HOPEFUL = 4.0  # ratio up to which levelling may still bring a fit within the chord error
+_BENT = (0.01, 0.03)  # pull of the source's curvature where a thinned fit is not fair
+_PASS = 0.995  # share of the chord error within which a piece is accepted
+_DENSER = 2  # times that knots are laid a third more densely in pieces that start out unfair
 _EXTRA = 1.25  # knots to begin with, over what the spacing field asks for
 
 
@@ -49,29 +79,33 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     source = sample(rotated, _PER_SPAN)
     if not (np.all(np.isfinite(source.along)) and np.all(source.lengths > 0.0)):
         return spline
-    line = straight(source, chord_error)
     dense = sample(rotated, _CHECK)
     old = cut(rotated)
     new: list[Spline] = list(old)
+    line = straight(source, _LINE * chord_error)
     waiting = ~line
-    for finer in _FINER:
+    for way, amount in _WAYS:
         if not waiting.any():
             break
-        part, dense_part = source.only(waiting), dense.only(waiting)
-        state = _search(part, chord_error, finer)
+        if way == "line":
+            line |= waiting & straight(source, chord_error)
+            waiting &= ~line
+            continue
+        tried, state = _attempt(source, waiting, chord_error, way, amount)
         if state is None:
-            break
-        good = _accept(part, dense_part, state, chord_error)
+            continue
+        part = source.only(tried)
+        good = _accept(part, dense.only(tried), state, chord_error)
         if source.periodic:
             if good[0]:
                 better = _clamped(state.fit, source.high[0])
                 return better.moved(origin) if len(better.control) < len(spline.control) else spline
             continue
-        for i, at in enumerate(np.flatnonzero(waiting).tolist()):
+        for i, at in enumerate(np.flatnonzero(tried).tolist()):
             if good[i]:
                 better = _piece(state.fit, i, part)
                 new[at] = better if len(better.control) < len(old[at].control) else old[at]
-        waiting[np.flatnonzero(waiting)[good]] = False
+        waiting[np.flatnonzero(tried)[good]] = False
     for i in np.flatnonzero(line).tolist():
         new[i] = _line(old[i], source.lengths[i])
     if all(a is b for a, b in zip(new, old, strict=True)):
@@ -87,17 +121,75 @@ def _at_home(piece: Spline, home: Spline) -> Spline:
     return Spline(piece.knots, control, piece.degree)
 
 
-def _search(source: Source, chord_error: float, finer: float) -> State | None:
+def _attempt(
+    source: Source, pieces: BoolArray, chord_error: float, way: str, amount: float
+) -> tuple[BoolArray, State | None]:
+    """Fit some of the pieces in one of the ways; return which were fitted, shape (pieces,), and their state."""
+    if way == "even":
+        return _evenly(source, pieces, chord_error, int(amount))
+    return pieces, _thinned(source.only(pieces), chord_error, amount)
+
+
+def _evenly(source: Source, pieces: BoolArray, chord_error: float, number: int) -> tuple[BoolArray, State | None]:
+    """Fit with a number of equal spans a piece those pieces for which that looks hopeful at the first fit."""
+    pieces = pieces & (source.spans > number)
+    if not pieces.any() or (source.periodic and number < source.degree + 2):
+        return pieces, None
+    part = source.only(pieces)
+    allowed = np.full(len(part.along), _AIM * chord_error)
+    state = refit(part, Basis(part, uniform(part, np.full(len(part.low), number))), part.along, part.step, allowed)
+    if state is None:
+        return pieces, None
+    hopeful = np.maximum.reduceat(state.ratio, part.first[:-1]) <= _HOPEFUL
+    if not hopeful.any():
+        return pieces, None
+    if not hopeful.all():
+        kept = hopeful[part.piece]
+        chosen = pieces.copy()
+        chosen[np.flatnonzero(pieces)[~hopeful]] = False
+        pieces, part, allowed, u = chosen, source.only(chosen), allowed[kept], state.u[kept]
+        basis = Basis(part, uniform(part, np.full(len(part.low), number)))
+        state = refit(part, basis, u, part.step, allowed)
+    for _ in range(3):
+        if state is not None and state.ratio.max() > 1.0:
+            state = level(part, state, allowed)
+    return pieces, state
+
+
+def _thinned(source: Source, chord_error: float, finer: float) -> State | None:
     """Place knots, finer than the chord error asks for by a factor, then thin them."""
     allowed = np.full(len(source.along), _AIM * chord_error)
     closest = 0.5 * source.lengths / source.spans
     guard = Guard(source, chord_error)
-    inner = place(source, smoothed(source, spacing(source, allowed / finer), 0.75), _EXTRA)
-    state = refit(source, Basis(source, inner), source.along, source.step, allowed)
+    need = smoothed(source, spacing(source, allowed / finer), 0.75)
+    state = _laid(source, need, allowed, closest)
+    for _ in range(_DENSER):
+        if state is None:
+            return None
+        worse = guard.check(state.fit, state.u).worse
+        if not worse.any():
+            break
+        need = np.where(worse[source.piece], 0.75 * need, need)
+        state = _laid(source, need, allowed, closest)
     if state is None:
         return None
+    state = remove(source, state, allowed, guard)
     state = _mend(source, state, allowed, closest)
-    return remove(source, state, allowed, guard)
+    for share in _BENT:
+        worse = guard.check(state.fit, state.u).worse
+        if not worse.any():
+            break
+        trial = bent(source, state, allowed, worse, share)
+        if trial is None or trial.ratio.max() > 1.0:
+            break
+        state = trial
+    return state
+
+
+def _laid(source: Source, need: FloatArray, allowed: FloatArray, closest: FloatArray) -> State | None:
+    """Fit with knots laid by a spacing field, some more than it asks for."""
+    state = refit(source, Basis(source, place(source, need, _EXTRA)), source.along, source.step, allowed)
+    return None if state is None else _mend(source, state, allowed, closest)
 
 
 def _mend(source: Source, state: State, allowed: FloatArray, closest: FloatArray) -> State:
@@ -117,13 +209,28 @@ def _mend(source: Source, state: State, allowed: FloatArray, closest: FloatArray
 
 
 def _accept(source: Source, dense: Source, state: State, chord_error: float) -> BoolArray:
-    """Tell which pieces are close enough at dense samples, and as fair as they were, shape (pieces,)."""
+    """Tell which pieces are close enough at dense samples, and as fair as they were, shape (pieces,).
+
+    A point of the fit between two samples is at most half their distance along the fit away from one of them; so
+    where that is a good deal more than along the source, half of the surplus is added to the distances.
+    """
     u = _carried(source, dense, state.u)
     distance = np.zeros(len(u))
     for _ in range(3):
         u, distance = measure(dense, state.fit, u)
-    worst = np.maximum.reduceat(distance, dense.first[:-1])
-    return (worst <= chord_error) & ~Guard(dense, chord_error).check(state.fit, u).worse
+    inside = dense.piece[1:] == dense.piece[:-1]
+    ahead = np.where(inside, np.diff(u), 0.0)
+    speed = [_speed(state.fit, v) for v in (u[:-1], u[:-1] + 0.5 * ahead, u[:-1] + (1.0 - 1e-9) * ahead)]
+    run = ahead * (speed[0] + 4.0 * speed[1] + speed[2]) / 6.0
+    surplus = 0.5 * np.maximum(run - 1.25 * np.where(inside, np.diff(dense.along), 0.0), 0.0)
+    between = np.append(np.maximum(distance[1:], distance[:-1]) + surplus, 0.0)
+    worst = np.maximum.reduceat(np.where(np.append(inside, False), between, distance), dense.first[:-1])
+    return (worst <= _PASS * chord_error) & ~Guard(dense, chord_error, 1.2).check(state.fit, u).worse
+
+
+def _speed(fit: Fit, u: FloatArray) -> FloatArray:
+    slope = fit.at(*fit.basis.locate(u), 1)[1]
+    return np.sqrt((slope * slope).sum(axis=0))
 
 
 def _carried(source: Source, dense: Source, u: FloatArray) -> FloatArray:

@@ -9,14 +9,16 @@ import numpy as np
 from scipy.linalg.lapack import dptsv
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
-from geometry.economy.spline_fit import Basis, Fit, measure, solve
-from geometry.economy.spline_shape import Counts, Guard
+from geometry.economy.spline_fit import Basis, Bend, Fit, measure, solve
+from geometry.economy.spline_shape import Guard, Verdict
 from geometry.economy.spline_source import Source
 
-__all__ = ["State", "add_where_over", "level", "place", "refit", "remove", "spacing"]
+__all__ = ["State", "add_where_over", "bent", "level", "place", "refit", "remove", "smoothed", "spacing", "uniform"]
 
-TRIES, WORTH = 2, 4.0
 _SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
+_LEVELLINGS = 2  # refits with levelled weights before knots are put back
+_HOPELESS = 4.0  # ratio over which levelling is not tried
+_REACH = 5  # knots taken out farther than this from what went wrong, in knots, are not blamed for it
 _SLIDE_FIRST = 0.05  # the same while parameters are still those of the source
 
 
@@ -35,9 +37,11 @@ class State:
         return self.fit.basis.inner
 
 
-def refit(source: Source, basis: Basis, u: FloatArray, weight: FloatArray, allowed: FloatArray) -> State | None:
+def refit(
+    source: Source, basis: Basis, u: FloatArray, weight: FloatArray, allowed: FloatArray, bend: Bend | None = None
+) -> State | None:
     """Fit once and move the parameters one step on."""
-    fit = solve(source, basis, u, weight, _SLIDE)
+    fit = solve(source, basis, u, weight, _SLIDE, bend)
     if fit is None:
         return None
     new, distance = measure(source, fit, u)
@@ -59,6 +63,26 @@ def level(source: Source, state: State, allowed: FloatArray) -> State | None:
     return refit(source, state.fit.basis, state.u, np.maximum(weight, 1e-300), allowed)
 
 
+def bent(source: Source, state: State, allowed: FloatArray, pieces: BoolArray, share: float) -> State | None:
+    """Fit again with even weights in some pieces, and second derivatives there that follow the source's curvature.
+
+    Args:
+        share: of the square of a span that a residual of the second derivative is multiplied by.
+    """
+    basis, here = state.fit.basis, pieces[source.piece]
+    after: State | None = state
+    for _ in range(3):
+        if after is None:
+            break
+        span, t = basis.locate(after.u)
+        slope = after.fit.at(span, t, 1)[1]
+        weight = np.where(here, source.step, after.weight)
+        height = share * basis.width[span] ** 2
+        bend = Bend(np.where(here, weight * height**2, 0.0), np.sqrt((slope * slope).sum(axis=0)))
+        after = refit(source, basis, after.u, weight, allowed, bend)
+    return after
+
+
 def _span_peaks(basis: Basis, span: IntArray, ratio: FloatArray) -> FloatArray:
     """Return the largest ratio over each span and its neighbours in the same piece, shape (s,)."""
     runs = np.flatnonzero(np.diff(span, prepend=-1))
@@ -71,7 +95,7 @@ def _span_peaks(basis: Basis, span: IntArray, ratio: FloatArray) -> FloatArray:
     return wide
 
 
-def _uniform(source: Source, number: IntArray) -> FloatArray:
+def uniform(source: Source, number: IntArray) -> FloatArray:
     """Return interior knots that cut piece i into number[i] equal spans."""
     if source.periodic:
         return np.arange(number[0]) * (source.high[0] / number[0])
@@ -95,7 +119,7 @@ def spacing(source: Source, allowed: FloatArray) -> FloatArray:
     finest = np.maximum(source.spans, least)
     open_ = np.ones(len(need), dtype=bool)
     while True:
-        basis = Basis(source, _uniform(source, number))
+        basis = Basis(source, uniform(source, number))
         fit = solve(source, basis, source.along, source.step, _SLIDE_FIRST)
         if fit is not None:
             span, t = basis.locate(source.along)
@@ -243,7 +267,7 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
     refusing are local, so the number of rounds does not grow with the length of the profile.
     """
     frozen = np.zeros(len(state.inner), dtype=bool)
-    counts = guard.check(state.fit, state.u).counts
+    verdict = guard.check(state.fit, state.u)
     least = source.degree + 2 if source.periodic else 0
     for turn in range(rounds):
         inner = state.inner
@@ -258,11 +282,11 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
         if not out.any():
             break
         tried = out.copy()
-        good = _without(source, state, out, allowed, guard, counts)
+        good = _without(source, state, out, allowed, guard, verdict)
         if good is None:
             frozen |= tried
             continue
-        state, counts = good
+        state, verdict = good
         frozen |= tried & ~out
         if turn < 30:
             near = out.copy()
@@ -275,34 +299,47 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
 
 
 def _without(
-    source: Source, state: State, out: BoolArray, allowed: FloatArray, guard: Guard, base: Counts
-) -> tuple[State, Counts] | None:
+    source: Source, state: State, out: BoolArray, allowed: FloatArray, guard: Guard, base: Verdict
+) -> tuple[State, Verdict] | None:
     """Refit without some knots; `out` loses those that have to stay. None if all have to.
 
     Args:
-        base: turning points of the state, which are let pass.
+        base: fairness of the state, which is let pass.
 
     Returns:
-        The new state and its turning points.
+        The new state and its fairness.
     """
     inner = state.inner
     for _ in range(5):
         trial = refit(source, Basis(source, inner[~out]), state.u, state.weight, allowed)
         if trial is None:
             return None
-        for _ in range(TRIES):
-            if trial.ratio.max() <= 1.0 or trial.ratio.max() > WORTH:
+        for _ in range(_LEVELLINGS):
+            if trial.ratio.max() <= 1.0 or trial.ratio.max() > _HOPELESS:
                 break
             trial = level(source, trial, allowed) or trial
-        wrong = trial.ratio > 1.0
-        if not wrong.any():
+        blamed = _blamed(inner, out, state.u[trial.ratio > 1.0])
+        if not blamed.any():
             verdict = guard.check(trial.fit, trial.u, base)
-            wrong = verdict.where
-            if not wrong.any():
-                return trial, verdict.counts
-        gone = np.flatnonzero(out)
-        middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
-        out[gone[np.searchsorted(middle, state.u[wrong])]] = False
+            blamed = _blamed(inner, out, state.u[verdict.where])
+            if not blamed.any():
+                return trial, verdict
+        out[blamed] = False
         if not out.any():
             break
     return None
+
+
+def _blamed(inner: FloatArray, out: BoolArray, wrong: FloatArray) -> BoolArray:
+    """Tell which of the knots taken out are nearest to places that went wrong, if within a few knots of them.
+
+    Args:
+        wrong: parameters of those places, ascending.
+    """
+    blamed = np.zeros(len(inner), dtype=bool)
+    gone = np.flatnonzero(out)
+    if gone.size and wrong.size:
+        middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
+        nearest = gone[np.searchsorted(middle, wrong)]
+        blamed[nearest[np.abs(np.searchsorted(inner, wrong) - nearest) <= _REACH]] = True
+    return blamed

@@ -1,7 +1,6 @@
 """Fairness of a rewritten spline against its source: inflections and curvature extrema, per smooth piece."""
 
 from dataclasses import dataclass
-from itertools import pairwise
 
 import numpy as np
 
@@ -9,14 +8,29 @@ from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.economy.spline_fit import Fit
 from geometry.economy.spline_source import Source, cross, turning
 
-__all__ = ["Guard", "counter_runs", "turning_points"]
+__all__ = ["Guard", "Turns", "Verdict", "turning_points"]
 
 SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no inflection
+TURN_LEVELS = (1.0, 8.0)  # a fit must not make more of what is small either, so counts hold at larger thresholds too
+EXTREMA_LEVELS = (1.0,)
 PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
 
 
-Counts = list[IntArray]
-"""Turning points per piece, one array for each quantity that is checked."""
+@dataclass(frozen=True, eq=False)
+class Turns:
+    """Turning points of one quantity at one threshold.
+
+    Attributes:
+        at: their samples, ascending, shape (k,).
+        top: whether each is a maximum, shape (k,).
+    """
+
+    at: IntArray
+    top: BoolArray
+
+    def per_piece(self, first: IntArray) -> IntArray:
+        """Return their number in every piece."""
+        return np.diff(np.searchsorted(self.at, first))
 
 
 @dataclass(frozen=True, eq=False)
@@ -25,13 +39,13 @@ class Verdict:
 
     Attributes:
         worse: pieces with more extrema or inflections than allowed, shape (pieces,).
-        where: samples of such pieces where the fit runs against the trend of the source, shape (n,).
-        counts: turning points per piece, for each quantity.
+        where: extrema and inflections of such pieces that have no counterpart, shape (n,).
+        turns: turning points of the fit, for each quantity and threshold.
     """
 
     worse: BoolArray
     where: BoolArray
-    counts: Counts
+    turns: list[Turns]
 
 
 class Guard:
@@ -43,7 +57,13 @@ class Guard:
     inflections.
     """
 
-    def __init__(self, source: Source, chord_error: float) -> None:
+    def __init__(self, source: Source, chord_error: float, slack: float = 1.0) -> None:
+        """Count the turning points of a source.
+
+        Args:
+            slack: factor on the thresholds for what is compared with it; over 1, a fit that was held to the
+                same thresholds at other samples is not refused for rounding.
+        """
         self._source, self._limit = source, 0.1 / chord_error
         starts = source.first[:-1]
         k = np.clip(source.curvature, -self._limit, self._limit)
@@ -53,16 +73,19 @@ class Guard:
         self._turn = np.full(len(starts), SMALLEST_TURN)
         self._checks: list[_Check] = []
         if source.degree > 2:
-            self._checks.append(_Check(k, self._prominence, source.first, source.periodic))
+            for factor in EXTREMA_LEVELS:
+                self._checks.append(_Check(k, factor * self._prominence, source.first, source.periodic, slack))
         if len(source.point) == 2:
-            self._checks.append(_Check(turning(source.tangent, source.first), self._turn, source.first, False))
+            angle = turning(source.tangent, source.first)
+            for factor in TURN_LEVELS:
+                self._checks.append(_Check(angle, factor * self._turn, source.first, False, slack))
 
-    def check(self, fit: Fit, u: FloatArray, base: Counts | None = None) -> Verdict:
+    def check(self, fit: Fit, u: FloatArray, base: Verdict | None = None) -> Verdict:
         """Tell which pieces of a fit are less fair than the source's, and at which samples.
 
         Args:
             u: parameters on the fit that belong to the samples of the source, shape (n,).
-            base: counts that are let pass where they are above the source's.
+            base: what is let pass where it has more turning points than the source.
         """
         source = self._source
         span, t = fit.basis.locate(u)
@@ -73,44 +96,52 @@ class Guard:
         if source.degree > 2:
             speed = np.sqrt((g1 * g1).sum(axis=0))
             k = np.clip(cross(g1, g2) / np.maximum(speed, 1e-300) ** 3, -self._limit, self._limit)
-            values.append(k)
+            values += [k] * len(EXTREMA_LEVELS)
         if len(source.point) == 2:
-            values.append(turning(g1, source.first))
-        counts = []
+            values += [turning(g1, source.first)] * len(TURN_LEVELS)
+        turns = []
         for i, (check, value) in enumerate(zip(self._checks, values, strict=True)):
-            counts.append(check.compare(value, None if base is None else base[i], worse, where))
-        return Verdict(worse, where, counts)
+            turns.append(check.compare(value, None if base is None else base.turns[i], worse, where))
+        return Verdict(worse, where, turns)
 
 
 class _Check:
     """Turning points of one quantity along the source, against which those of a fit are held."""
 
-    def __init__(self, values: FloatArray, threshold: FloatArray, first: IntArray, cyclic: bool) -> None:
-        self.threshold, self.first, self.cyclic = threshold, first, cyclic
-        self.points = turning_points(values, first, threshold, cyclic)
-        self.count = self._per_piece(self.points)
+    def __init__(self, values: FloatArray, threshold: FloatArray, first: IntArray, cyclic: bool, slack: float) -> None:
+        self.threshold, self.first, self.cyclic = slack * threshold, first, cyclic
+        self.turns = turning_points(values, first, threshold, cyclic)
+        self.count = self.turns.per_piece(first)
 
-    def _per_piece(self, points: IntArray) -> IntArray:
-        return np.diff(np.searchsorted(points, self.first))
+    def compare(self, values: FloatArray, base: Turns | None, worse: BoolArray, where: BoolArray) -> Turns:
+        """Mark pieces with more turning points than allowed, and those of them that have no counterpart.
 
-    def compare(self, values: FloatArray, base: IntArray | None, worse: BoolArray, where: BoolArray) -> IntArray:
-        """Mark pieces with more turning points than allowed, and the samples that run against the source's trend."""
-        points = turning_points(values, self.first, self.threshold, self.cyclic)
-        count = self._per_piece(points)
-        most = self.count if base is None else np.maximum(self.count, base)
+        Counterparts are sought in the source, or in the base where that has more turning points.
+        """
+        turns = turning_points(values, self.first, self.threshold, self.cyclic)
+        count, most = turns.per_piece(self.first), self.count
+        if base is not None:
+            most = np.maximum(most, base.per_piece(self.first))
         for i in np.flatnonzero(count > most).tolist():
             worse[i] = True
-            a, b = int(self.first[i]), int(self.first[i + 1])
-            old, new = (p[(p >= a) & (p < b)] - a for p in (self.points, points))
-            against = counter_runs(values[a:b], old.tolist(), float(self.threshold[i]))
-            if not against.any():
-                against[new] = True
-            where[a:b] |= against
-        return count
+            a, b = self.first[i], self.first[i + 1]
+            known = self.turns if base is None or most[i] == self.count[i] else base
+            for top in (False, True):
+                old, new = (t.at[(t.at >= a) & (t.at < b) & (t.top == top)] for t in (known, turns))
+                where[_unmatched(old, new)] = True
+        return turns
 
 
-def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, cyclic: bool) -> IntArray:
-    """Return the samples where a rise of at least a threshold turns into such a fall or back, ascending.
+def _unmatched(old: IntArray, new: IntArray) -> IntArray:
+    """Return those of the new samples that are not the nearest to any of the old ones."""
+    if not (old.size and new.size):
+        return new
+    nearest = np.searchsorted(0.5 * (new[1:] + new[:-1]), old)
+    return np.delete(new, nearest)
+
+
+def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, cyclic: bool) -> Turns:
+    """Return the samples where a rise of at least a threshold turns into such a fall or back.
 
     Args:
         values: shape (n,).
@@ -121,10 +152,12 @@ def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, c
     if cyclic:
         shift = int(np.argmax(values))
         loop = np.concatenate([values[shift:], values[: shift + 1]])
-        points = turning_points(loop, np.array([0, len(loop)]), threshold, False)
-        if points.size:
-            points = np.append(0, points)
-        return np.sort((points + shift) % len(values))
+        turns = turning_points(loop, np.array([0, len(loop)]), threshold, False)
+        if not turns.at.size:
+            return turns
+        at = (np.append(0, turns.at) + shift) % len(values)
+        order = np.argsort(at)
+        return Turns(at[order], np.append(True, turns.top)[order])
     step = np.sign(np.diff(values))
     step[first[1:-1] - 1] = 0.0
     moving = np.flatnonzero(step)
@@ -134,6 +167,7 @@ def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, c
     fresh[np.searchsorted(index, first[:-1])] = True
     limit = threshold[np.searchsorted(first, index, side="right") - 1]
     found: list[int] = []
+    tops: list[bool] = []
     direction, high, low, high_at, low_at, start = 0, 0.0, 0.0, 0, 0, 0
     rows = zip(index.tolist(), values[index].tolist(), limit.tolist(), fresh.tolist(), strict=True)
     for at, value, least, new in rows:
@@ -147,22 +181,11 @@ def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, c
         if direction >= 0 and value <= high - least:
             if high_at > start:
                 found.append(high_at)
+                tops.append(True)
             direction, low, low_at = -1, value, at
         elif direction <= 0 and value >= low + least:
             if low_at > start:
                 found.append(low_at)
+                tops.append(False)
             direction, high, high_at = 1, value, at
-    return np.array(found, dtype=np.intp)
-
-
-def counter_runs(values: FloatArray, points: list[int], threshold: float) -> BoolArray:
-    """Tell at which samples `values` run back by a threshold against their trend between given points, shape (n,)."""
-    out = np.zeros(len(values), dtype=bool)
-    edges = [0, *[i for i in points if 0 < i < len(values) - 1], len(values) - 1]
-    for low, high in pairwise(edges):
-        v = values[low : high + 1]
-        v = v if v[-1] >= v[0] else -v
-        fall = np.maximum.accumulate(v) - v
-        rise = v - np.minimum.accumulate(v[::-1])[::-1]
-        out[low : high + 1] |= np.maximum(fall, rise) >= threshold
-    return out
+    return Turns(np.array(found, dtype=np.intp), np.array(tops, dtype=bool))

@@ -172,10 +172,10 @@ def sample(spline: Spline, per_span: int) -> Source:
     )  # fmt: skip
 
 
-def straight(source: Source, chord_error: float) -> BoolArray:
-    """Tell which pieces are straight to within a share of the chord error, shape (pieces,).
+def straight(source: Source, within: float) -> BoolArray:
+    """Tell which pieces are straight, shape (pieces,).
 
-    Straight means: no sample farther than chord_error / 20 from the chord, and no step against the chord.
+    Straight means: no sample farther than `within` from the chord, and no step back along it.
     """
     if source.periodic:
         return np.zeros(1, dtype=bool)
@@ -189,8 +189,4 @@ def straight(source: Source, chord_error: float) -> BoolArray:
     off = np.linalg.norm(away - run * unit[:, piece], axis=0)
     back = np.append(np.where(piece[1:] == piece[:-1], np.diff(run), 0.0), 0.0)
     worst = np.maximum.reduceat(off, source.first[:-1])
-    return (
-        (worst <= 0.05 * chord_error)
-        & (np.minimum.reduceat(back, source.first[:-1]) >= -1e-9 * length)
-        & (length > 0.0)
-    )
+    return (worst <= within) & (np.minimum.reduceat(back, source.first[:-1]) >= -1e-9 * length) & (length > 0.0)
