@@ -48,9 +48,12 @@ def fair_rows(record: FairRecord) -> list[tuple[str, ...]]:
 
 
 def _row(profile: ProfileRecord) -> tuple[str, ...]:
-    given = f"{profile.vertices_in} vertices, {'closed' if profile.closed else 'open'}"
+    given = profile.source
+    if profile.vertices_in:
+        given += f", {_counted(profile.vertices_in, 'vertex', 'vertices')}"
+    given += "" if profile.closed else ", open"
     if profile.left_as_drawn is not None or profile.deviation is None:
-        return (profile.id, profile.layer, profile.entity, f"as drawn: {profile.left_as_drawn}", "", "", "", "", "")
+        return (profile.id, profile.layer, given, "left as drawn", "", "", "", "", "")
     mean = profile.deviation.mean_signed
     change = ""
     if profile.fairness is not None:
@@ -72,12 +75,13 @@ def _written(profile: ProfileRecord) -> str:
     if profile.control_points:
         return f"{profile.entity}, {profile.control_points} control points"
     if profile.arcs:
-        return f"{profile.entity}, {_counted(profile.arcs, 'arc')}, {_counted(profile.lines, 'line')}"
-    return f"{profile.entity}, {profile.vertices_out} vertices"
+        parts = [_counted(profile.arcs, "arc")] + ([_counted(profile.lines, "line")] if profile.lines else [])
+        return profile.entity if profile.entity == "CIRCLE" else ", ".join([profile.entity, *parts])
+    return f"{profile.entity}, {_counted(profile.vertices_out, 'vertex', 'vertices')}"
 
 
-def _counted(number: int, noun: str) -> str:
-    return f"{number} {noun}" if number == 1 else f"{number} {noun}s"
+def _counted(number: int, noun: str, nouns: str | None = None) -> str:
+    return f"{number} {noun if number == 1 else nouns or noun + 's'}"
 
 
 def fair_sentence(record: FairRecord) -> str:

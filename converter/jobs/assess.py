@@ -65,7 +65,7 @@ def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessmen
     if tolerance is not None:
         return Assessment(outline, tolerance, found, "as stated")
     if found.tolerance <= 0.0:
-        hint = "; lay a curve through them by `fairbatten spring`" if found.kind == "stations" else ""
+        hint = "; state a tolerance to fair them as an outline all the same" if found.kind == "stations" else ""
         return Assessment(outline, 0.0, found, found.reason + hint, as_drawn=True)
     return Assessment(outline, found.tolerance, found, found.reason)
 

@@ -7,7 +7,6 @@ from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
-from geometry.signed import deviation_statistics
 
 import converter
 from converter.drawing import AnyCurve, Drawing, Profile, Written, read_drawing, replace, save, supports
@@ -22,6 +21,7 @@ from geometry.bspline import Spline
 from geometry.deviation import hausdorff
 from geometry.fairness import fairness
 from geometry.polyline import Polyline
+from geometry.signed import deviation_statistics
 
 __all__ = ["FairSettings", "fair_drawing"]
 
@@ -150,7 +150,7 @@ def _fair_profile(
     record = _record(profile, need, written, result)
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
     if need.jaggedness is not None and need.jaggedness.kind == "stations":
-        record.warnings.append(f"{need.jaggedness.reason}; `fairbatten spring` lays a curve through them")
+        record.warnings.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
     return record
 
 
@@ -175,7 +175,8 @@ def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
         profile.layer,
         profile.closed,
         profile.vertices_in,
-        "/".join(sorted(set(profile.types))),
+        _kinds(profile),
+        _kinds(profile),
         None,
         need.reason,
         _jaggedness(need),
@@ -190,6 +191,10 @@ def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
     if need.unusable:
         record.warnings.append(f"passed through unchanged: {reason}")
     return record
+
+
+def _kinds(profile: Profile) -> str:
+    return "/".join(sorted(set(profile.types)))
 
 
 def _jaggedness(need: Assessment) -> dict[str, float | str] | None:
@@ -211,6 +216,7 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
         profile.layer,
         profile.closed,
         profile.vertices_in,
+        _kinds(profile),
         written.type,
         tolerance,
         need.reason,

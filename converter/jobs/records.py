@@ -31,6 +31,7 @@ class ProfileRecord:
     layer: str
     closed: bool
     vertices_in: int
+    source: str
     entity: str
     tolerance: float | None
     tolerance_reason: str
