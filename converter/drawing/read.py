@@ -1,6 +1,5 @@
 """Reading a drawing: the document, the profiles in its model space, and an account of all the rest."""
 
-import logging
 from collections import Counter
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -88,7 +87,6 @@ def read_drawing(
 
 def _open(path: Path) -> tuple[Any, list[str]]:
     """Return the document and what had to be repaired."""
-    logging.getLogger("ezdxf").setLevel(logging.ERROR)  # its notes are not addressed to our users
     try:
         size = path.stat().st_size
     except OSError as error:
