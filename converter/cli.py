@@ -4,6 +4,7 @@ Commands are imported only when they are called, so that `--help` and `--version
 """
 
 import importlib
+import io
 import os
 import sys
 from collections.abc import Sequence
@@ -64,6 +65,8 @@ def main(arguments: Sequence[str] | None = None) -> NoReturn:
 
 def _run(arguments: list[str]) -> int:
     _quieten_libraries()
+    if isinstance(sys.stdout, io.TextIOWrapper):
+        sys.stdout.reconfigure(errors="backslashreplace")  # names from a drawing may not fit the terminal's encoding
     try:
         result = _invoke(arguments)
         sys.stdout.flush()

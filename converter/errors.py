@@ -17,7 +17,9 @@ class ConverterError(Exception):
     """Base of every error of the converter; its text is the whole message, on one line."""
 
     def __init__(self, message: str) -> None:
-        super().__init__(" ".join(message.split()))  # one plain argument, so the error can cross a process pool
+        line = " ".join(message.split())
+        line = "".join(sign if sign.isprintable() else "?" for sign in line)  # pieces of damaged files get in here
+        super().__init__(line)  # one plain argument, so the error can cross a process pool
 
 
 class ReadError(ConverterError):

@@ -130,6 +130,17 @@ def test_a_unit_in_a_unitless_drawing_says_what_to_do(tmp_path):
     assert "states no units" in run("inspect", tmp_path / "in.dxf").stdout
 
 
+def test_names_that_the_terminal_cannot_show_are_no_error(tmp_path):
+    doc = ezdxf.new("R2010", units=4)
+    doc.modelspace().add_line((0, 0), (1, 0), dxfattribs={"layer": "Žłab 漢"})
+    doc.saveas(tmp_path / "in.dxf")
+    environment = {**os.environ, "PYTHONPATH": str(ROOT), "PYTHONIOENCODING": "ascii", "PYTHONUTF8": "0"}
+    words = [sys.executable, "-m", "converter", "inspect", str(tmp_path / "in.dxf")]
+    result = subprocess.run(words, capture_output=True, text=True, env=environment, cwd=ROOT, timeout=60)
+    assert (result.returncode, result.stderr) == (0, "")
+    assert "\\u6f22" in result.stdout
+
+
 def test_a_reader_that_goes_away_is_no_error(drawing):
     environment = {**os.environ, "PYTHONPATH": str(ROOT)}
     words = [sys.executable, "-m", "converter", "inspect", str(drawing), "--json"]

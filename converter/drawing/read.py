@@ -1,5 +1,6 @@
 """Reading a drawing: the document, the profiles in its model space, and an account of all the rest."""
 
+import struct
 from collections import Counter
 from collections.abc import Iterable, Sequence
 from pathlib import Path
@@ -118,15 +119,19 @@ def _open(path: Path) -> tuple[Any, list[str]]:
 def _recover(path: Path, first: Exception) -> tuple[Any, list[str]]:
     from ezdxf import recover
 
+    reason = str(first) or type(first).__name__
+    if isinstance(first, OSError):
+        reason = "it does not begin as a DXF file does"
+    elif isinstance(first, struct.error):
+        reason = "its binary data end early or are mixed up"
     try:
         document, auditor = recover.readfile(path)
     except Exception as error:  # any failure of the tolerant parser means the same to the user
-        reason = str(first) or str(error) or type(first).__name__
         raise ReadError(f"{path}: is not a DXF drawing that can be read ({reason}); export it again as DXF") from error
     if not len(document.entitydb) or not _has_section(path):
-        raise ReadError(f"{path}: is not a DXF drawing ({first}); export it again as DXF")
+        raise ReadError(f"{path}: is not a DXF drawing ({reason}); export it again as DXF")
     repairs = [f"repaired: {error.message}" for error in (*auditor.fixes, *auditor.errors)]
-    return document, [f"the file is damaged ({first}) and was read as far as possible", *repairs]
+    return document, [f"the file is damaged ({reason}) and was read as far as possible", *repairs]
 
 
 def _has_section(path: Path) -> bool:

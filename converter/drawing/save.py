@@ -9,7 +9,7 @@ import numpy as np
 
 from converter.drawing.model import Drawing
 from converter.drawing.write import add_polyline, put_in_place
-from converter.errors import VersionError
+from converter.errors import OutputError, VersionError
 from converter.files import check_output, write_whole
 
 __all__ = ["VERSIONS", "save"]
@@ -52,16 +52,25 @@ def save(drawing: Drawing, path: Path, version: str | None = None, force: bool =
     document.dxfversion = VERSIONS[name]
     if name == "R12" and drawing.version != "R12":
         document.header["$HANDLING"] = 1  # R12 writes handles only on demand, later versions always
-    write_whole(path, lambda stream: _write(document, stream), force, [drawing.path])
+    write_whole(path, lambda stream: _write(drawing, stream), force, [drawing.path])
     drawing.order = {str(entity.dxf.handle): index for index, entity in enumerate(document.modelspace())}
     return said
 
 
-def _write(document: Any, stream: BinaryIO) -> None:
+def _write(drawing: Drawing, stream: BinaryIO) -> None:
+    document = drawing.document
     text = io.TextIOWrapper(stream, encoding=document.output_encoding, errors="dxfreplace", newline="\n")
-    document.write(text)
-    text.flush()
-    text.detach()
+    try:
+        document.write(text)
+        text.flush()
+    except (OSError, MemoryError):
+        raise
+    except Exception as error:  # what a damaged drawing provokes in the library: we could not say more than it does
+        kind = type(error).__name__
+        reason = f"{drawing.path}: the drawing holds data that cannot be written again ({kind}: {error})"
+        raise OutputError(f"{reason}; repair it first") from error
+    finally:
+        text.detach()
 
 
 def _convert(document: Any, name: str) -> list[str]:

@@ -159,7 +159,8 @@ def _extents(drawing: Drawing) -> dict[str, list[float]] | None:
 def _entities(drawing: Drawing) -> dict[str, dict[str, int]]:
     layers: dict[str, Counter[str]] = {}
     for entity in drawing.document.modelspace():
-        layers.setdefault(str(entity.dxf.get("layer", "0")), Counter())[entity.dxftype()] += 1
+        layer = str(entity.dxf.layer) if entity.dxf.hasattr("layer") else "0"
+        layers.setdefault(layer, Counter())[entity.dxftype()] += 1
     return {layer: dict(sorted(counts.items())) for layer, counts in sorted(layers.items())}
 
 
