@@ -132,7 +132,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
     """
     check = check_band(trace, fit, nodes)
     best = (fit, nodes, check)
-    stiffness, dead = fit.stiffness, fit.sampled.dead.copy()
+    stiffness, straightness, dead = fit.stiffness, fit.straightness, fit.sampled.dead.copy()
     layout = fit.sampled.layout
     for turn in range(_ROUNDS):
         if check.worst <= LIMIT:
@@ -148,10 +148,11 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         soft = spread(layout, out, 4)
         stiffness = np.where(soft, np.minimum(0.6 * stiffness, 4.0 * 0.8**turn), stiffness)
         stiffness = np.maximum(limit_growth(layout, stiffness, 0.5), 0.3)
+        straightness = None if straightness is None else np.where(soft, 0.0, straightness)
         old = fit.sampled
         sampled = Sampled(layout, old.own, old.points, old.bounds, old.own_nodes, old.fit_nodes, dead)
         system = System(layout, old.points, sampled.live, nodes.pins)
-        fit = Fit(sampled, system.solve(stiffness), stiffness)
+        fit = Fit(sampled, system.solve(stiffness, None, straightness), stiffness, straightness)
         check = check_band(trace, fit, nodes)
         if check.worst < best[2].worst:
             best = (fit, nodes, check)

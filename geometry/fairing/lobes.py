@@ -11,43 +11,64 @@ from geometry.fairing.layout import Layout
 from geometry.fairing.samples import normal_offsets
 from geometry.fairing.stiffness import BAND, Fit, local_means, spread, worst_of
 from geometry.fairing.system import System
+from geometry.fairing.trace import ragged_ranges
 
 __all__ = ["remove_lobes"]
 
 _FLAT = 0.003  # curvature that is not counted, per tolerance
 _HEIGHT = 0.5
 _STIFFER, _STIFFEST = 1.5, 60.0
+_STRAIGHT, _STRAIGHTER = 0.25, 1.4  # share of a lobe's length to begin with, and growth from round to round
 _MEAN_4, _MEAN_8 = 0.35, 0.30
 _ROUNDS = 12
 
 
 def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
-    """Return the fit with small lobes of curvature flattened; a 3-D one, whose curvature has no sign, as it is."""
+    """Return the fit with small lobes of curvature flattened; a 3-D one, whose curvature has no sign, as it is.
+
+    Lobes are stiffened first, with a margin on either side; those that this leaves are then drawn straight.
+    """
     sampled, layout = fit.sampled, fit.sampled.layout
     if sampled.points.shape[-1] != 2:
         return fit
-    base = fit.stiffness
     system = System(layout, sampled.points, sampled.live, pins)
     allowed = np.maximum(_excess(fit, fit.coefficients) + 1e-9, 1.0)
-    stiffness, coefficients = base.copy(), fit.coefficients
-    frozen = np.zeros(len(layout), dtype=bool)
-    for _ in range(_ROUNDS):
-        chosen = _stretches(layout, coefficients) & ~frozen & (stiffness < _STIFFEST)
-        if not chosen.any():
-            break
-        stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
-        coefficients = system.solve(stiffness)
-        for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
-            broken = _excess(fit, coefficients) > factor * allowed
-            if not broken.any():
+    frozen = np.zeros(len(layout), dtype=np.bool_)
+    stiffness, straightness = fit.stiffness, np.zeros(len(layout))
+    best = fit
+    for straighten in (False, True):
+        frozen[:] = False
+        coefficients = best.coefficients
+        for _ in range(_ROUNDS):
+            start, stop = _small_lobes(layout, coefficients)
+            margin = 0 * start if straighten else np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
+            chosen = _covered(layout, start - margin, stop + margin) & ~frozen
+            if straighten:
+                length = np.zeros(len(layout))
+                owner, member, _ = ragged_ranges(start, stop)
+                length[member] = np.maximum(1.0, _STRAIGHT * (stop - start)[owner] * layout.h[member])
+                straightness = np.where(chosen, np.maximum(_STRAIGHTER * straightness, length), straightness)
+            else:
+                chosen &= stiffness < _STIFFEST
+                stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
+            if not chosen.any():
                 break
-            back = spread(layout, broken, reach)
-            stiffness = np.where(back, base, stiffness)
-            frozen |= back
-            coefficients = system.solve(stiffness)
-    if (_excess(fit, coefficients) > 1.02 * allowed).any():
-        return fit
-    return Fit(sampled, coefficients, stiffness)
+            coefficients = system.solve(stiffness, straightness=straightness)
+            for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
+                broken = _excess(fit, coefficients) > factor * allowed
+                if not broken.any():
+                    break
+                back = spread(layout, broken, reach)
+                if straighten:
+                    straightness = np.where(back, 0.0, straightness)
+                else:
+                    stiffness = np.where(back, fit.stiffness, stiffness)
+                frozen |= back
+                coefficients = system.solve(stiffness, straightness=straightness)
+        if (_excess(fit, coefficients) > 1.02 * allowed).any():
+            break
+        best = Fit(sampled, coefficients, stiffness, straightness)
+    return best
 
 
 def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:
@@ -63,8 +84,8 @@ def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:
     )
 
 
-def _stretches(layout: Layout, coefficients: FloatArray) -> BoolArray:
-    """Return the intervals of small lobes that have a neighbour lobe, and as wide a margin beside them."""
+def _small_lobes(layout: Layout, coefficients: FloatArray) -> tuple[IntArray, IntArray]:
+    """Return [start, stop) of the small lobes that have a neighbour lobe in their piece, in intervals."""
     middle = np.arange(len(layout))
     t = np.full(len(layout), 0.5)
     first, second = (layout.evaluate(coefficients, middle, t, k) for k in (1, 2))
@@ -81,19 +102,24 @@ def _stretches(layout: Layout, coefficients: FloatArray) -> BoolArray:
     else:
         same = pieces[1:] == pieces[:-1]
         neighbour = np.concatenate([same, [False]]) | np.concatenate([[False], same])
-    chosen = np.flatnonzero(neighbour & (height < _HEIGHT))
-    margin = np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
-    change = np.zeros(len(layout) + 1)
+    small = neighbour & (height < _HEIGHT)
+    return start[small], stop[small]
+
+
+def _covered(layout: Layout, start: IntArray, stop: IntArray) -> BoolArray:
+    """Return the intervals in ranges [start, stop), cut at the ends of the piece that the middle of a range lies in."""
+    size = len(layout)
+    change = np.zeros(3 * size + 1)
     if layout.periodic:
-        out = np.zeros(len(layout), dtype=bool)
-        for k in chosen:
-            out[np.mod(np.arange(start[k] - margin[k], stop[k] + margin[k]), len(layout))] = True
-        return out
-    low = np.maximum(start - margin, layout.starts[pieces])[chosen]
-    high = np.minimum(stop + margin, layout.starts[pieces] + layout.counts[pieces])[chosen]
-    np.add.at(change, low, 1.0)
-    np.add.at(change, high, -1.0)
-    return np.cumsum(change[:-1]) > 0.5
+        np.add.at(change, start + size, 1.0)
+        np.add.at(change, stop + size, -1.0)
+        inside = (np.cumsum(change[:-1]) > 0.5).reshape(3, size)
+        return np.asarray(inside.any(axis=0))
+    piece = layout.piece[(start + stop) // 2]
+    first = layout.starts[piece]
+    np.add.at(change, np.maximum(start, first), 1.0)
+    np.add.at(change, np.minimum(stop, first + layout.counts[piece]), -1.0)
+    return np.asarray(np.cumsum(change[:size]) > 0.5)
 
 
 def _runs(layout: Layout, sign: FloatArray) -> tuple[IntArray, IntArray]:

@@ -28,11 +28,12 @@ _REACH, _LEAST_REACH, _MARGIN = 5.0, 16, 12
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """Samples, the coefficients fitted to them, and the stiffness of every interval."""
+    """Samples, the coefficients fitted to them, and the stiffness (and straightness, if any) of every interval."""
 
     sampled: Sampled
     coefficients: FloatArray
     stiffness: FloatArray
+    straightness: FloatArray | None = None
 
 
 def start_stiffness(layout: Layout) -> FloatArray:

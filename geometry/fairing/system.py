@@ -145,12 +145,15 @@ class System:
                     self._band[b - a, at + a] += _PIN * row[a] * row[b]
                 self._right[at + a] += _PIN * row[a] * pins[piece, side]
 
-    def solve(self, stiffness: FloatArray, current: FloatArray | None = None) -> FloatArray:
+    def solve(
+        self, stiffness: FloatArray, current: FloatArray | None = None, straightness: FloatArray | None = None
+    ) -> FloatArray:
         """Return the coefficients of the whole layout.
 
         Args:
             stiffness: length l of every interval of the layout, shape (m,).
             current: coefficients of the whole layout; a window changes its own part of them.
+            straightness: length b of every interval, shape (m,), of a penalty b^4 times the integral of |x''|^2.
 
         Returns:
             Shape (m + degree * p, d); a periodic piece repeats its first `degree` ones at the end.
@@ -165,6 +168,10 @@ class System:
         plane[self._first] = penalty
         band = self._band.copy()
         self._spread(band, plane, _THIRD)
+        if straightness is not None and layout.degree == 3:
+            square = straightness[self.chosen] ** 2
+            plane[self._first] = square * square / self._h**3
+            self._spread(band, plane, _SECOND)
         if self._whole and layout.periodic:
             return self._solve_cyclic(band, self._right.copy())
         band, right = band[:, : self._count], self._right[: self._count]
