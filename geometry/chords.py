@@ -303,8 +303,8 @@ def _arc_chords(chain: ArcChain) -> Chords:
     return Chords(elements, index, low, high, start, end, elements.error(index, low, high, end - start))
 
 
-def even_delta(chords: Chords, spare: int = 64) -> float:
-    """Return an error that about doubles the number of chords at most, however their errors differ.
+def even_delta(chords: Chords, spare: int = 300) -> float:
+    """Return an error that about doubles the number of chords at most, and adds `spare`, however their errors differ.
 
     Cutting to delta makes about sqrt(e / delta) parts of a chord with error e, so the sum over all chords is their
     number + `spare` where delta = (sum of sqrt(e) / (number + spare))^2. Drawing units; 0 for a polyline.

@@ -205,7 +205,8 @@ class _Search:
             limit = self.limit()
             stay = upper > limit
             if self.every:
-                stay &= np.maximum(intervals.d0, intervals.d1) <= limit
+                # no cut brings a bound under what an end already has
+                stay &= np.maximum(intervals.d0, intervals.d1) + self.both[intervals.owner] <= limit
             if self.decided() or np.count_nonzero(stay) > most:
                 stay[:] = False
             self.close(intervals.owner, upper, ~stay)

@@ -17,7 +17,7 @@ import numpy as np
 
 from geometry.bspline import Spline
 from geometry.curve import Curve
-from geometry.deviation import hausdorff, within
+from geometry.deviation import exceeding, hausdorff, within
 from geometry.polyline import Polyline
 
 
@@ -65,7 +65,9 @@ def cost(task: Callable[[], object]) -> float:
 def main() -> None:
     """Print the table."""
     largest = int(sys.argv[1]) if len(sys.argv) > 1 else 100_000
-    print("vertices spans | sampled ms | within yes, near, no | hausdorff tol/100, 1e-6 (ratios to sampled)")
+    print(
+        "vertices spans | sampled ms | within yes, near, no | hausdorff tol/100, 1e-6 | exceeding (ratios to sampled)"
+    )
     for vertices, spans in ((12, 6), (100, 40), (500, 150), (500, 500), (10_000, 3_333), (100_000, 33_333)):
         if vertices > largest:
             continue
@@ -79,6 +81,7 @@ def main() -> None:
             lambda s=spline, o=outline, t=true: within(o, s, 0.9 * t),
             lambda s=spline, o=outline, t=true: hausdorff(o, s, t / 100.0),
             lambda s=spline, o=outline: hausdorff(o, s, 1e-6),
+            lambda s=spline, o=outline, t=true: (exceeding(o, s, 0.8 * t), exceeding(s, o, 0.8 * t)),
         ]
         times = [cost(task) for task in tasks]
         print(f"{vertices:8d} {spans:5d} | {plain:10.2f} | " + " ".join(f"{t:.2f} ms ({t / plain:.2f})" for t in times))
