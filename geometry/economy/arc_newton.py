@@ -112,7 +112,8 @@ def _shape(batch: _Batch) -> _Shape:
     angle_0 = batch.angle[batch.start]
     angle_1 = batch.angle[batch.end] + batch.wrap * batch.track.turn
     chord = batch.joint[batch.end] - batch.joint[batch.start]
-    length = np.maximum(np.abs(chord), 1e-300)
+    chord = np.where(chord == 0.0, 1e-150, chord)
+    length = np.abs(chord)
     middle = 0.5 * (angle_0 + angle_1)
     turned = chord * np.exp(-1j * middle)
     off = np.arctan2(turned.imag, turned.real)
@@ -132,6 +133,7 @@ def _distances(batch: _Batch, shape: _Shape) -> tuple[FloatArray, ComplexArray, 
     return a / (1.0 + np.sqrt(np.maximum(1.0 + bend * a, 0.0))), points, seen
 
 
+@np.errstate(over="ignore", invalid="ignore")  # a chain that runs away is dropped
 def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[float]) -> list[Polished]:
     """Lower the largest error of chains, make their tangents continuous and measure them.
 
@@ -169,7 +171,7 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
             if not len(active):
                 break
             batch = _batch(track, [_chain(batch, k) for k in np.flatnonzero(~done).tolist()])
-    return measure_chains(track, _closed_up(track, best))
+    return measure_chains(track, _closed_up(track, best), chord_error)
 
 
 def _chain(batch: _Batch, index: int) -> Chain:
@@ -289,9 +291,11 @@ def _move(batch: _Batch, x: FloatArray, near: FloatArray) -> BoolArray:
     x[broken[batch.owner]] = 0.0
     batch.joint = batch.joint + (1j * x[:, 1] + x[:, 2]) * np.exp(1j * batch.angle)
     batch.angle = batch.angle + x[:, 0]
-    centre, angle, bend = batch.track.frames(batch.s)
-    q = (batch.joint - centre) * np.exp(-1j * angle)
-    foot = batch.s + q.real / np.maximum(1.0 - bend * q.imag, 0.2)
+    centre, slope, bend = batch.track.motion(batch.s)
+    q, squared = batch.joint - centre, slope.real**2 + slope.imag**2
+    down = squared - q.real * bend.real - q.imag * bend.imag
+    ahead = q.real * slope.real + q.imag * slope.imag
+    foot = batch.s + ahead / np.maximum(down, 0.2 * squared + 1e-30)
     batch.s = np.where(batch.pinned, batch.s, foot)
     advance = batch.s[batch.end] + batch.wrap * batch.track.period - batch.s[batch.start]
     stuck = np.minimum.reduceat(advance, np.searchsorted(batch.arc_owner, np.arange(chains))) <= 0.0
@@ -321,7 +325,8 @@ def chain_bulges(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, 
     return joints, bulges, np.abs(shape.defect)
 
 
-def measure_chains(track: Track, chains: list[Chain]) -> list[Polished]:
+@np.errstate(over="ignore", invalid="ignore")
+def measure_chains(track: Track, chains: list[Chain], chord_error: float) -> list[Polished]:
     """Measure chains against the curve, both ways."""
     batch = _batch(track, chains)
     shape = _shape(batch)
@@ -334,7 +339,7 @@ def measure_chains(track: Track, chains: list[Chain]) -> list[Polished]:
     keep = good[owner]
     if keep.any():
         start, end = batch.joint[batch.start], batch.joint[batch.end]
-        errors[keep] = two_sided(track, start[keep], end[keep], bulges[keep], s[keep], owner[keep], CHECKS)
+        errors[keep] = two_sided(track, start[keep], end[keep], bulges[keep], s[keep], owner[keep], chord_error, CHECKS)
     out = []
     for k, chain in enumerate(chains):
         mine = owner == k

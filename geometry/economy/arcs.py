@@ -11,6 +11,7 @@ from geometry.economy.arc_newton import Polished, chain_bulges, measure_chains, 
 from geometry.economy.arc_start import Chain, arc_demand, start_chain
 from geometry.economy.biarcs import biarc_chain
 from geometry.economy.check import distance_to_arcs
+from geometry.economy.cuts import cut_at, sharp_nodes
 from geometry.economy.track import ComplexArray, Track, track_of
 from geometry.errors import GeometryError
 
@@ -23,6 +24,7 @@ GROW_ROUNDS = 12
 STRENGTH = 31.0  # chord errors that a joint's strength has where arcs are as long as they can be
 FIRM, EXACT = 0.985, 0.02  # shares of the chord error at which polishing stops
 ROUND = 2.5  # arcs asked for under which a closed curve may be a circle
+SHARP = 1e-3  # radius, in chord errors, under which a bend is a corner
 DEFECT = 1e-9  # radians a joint may kink
 
 
@@ -31,7 +33,8 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
 
     Between corners the chain is tangent continuous, its joints need not lie on the curve; a closed spline without a
     corner gives a closed chain that is tangent continuous at the seam too. A smooth piece within the chord error of
-    its chord becomes one line. A circle comes back as two semicircles (`full_circle`).
+    its chord becomes one line. A circle comes back as two semicircles (`full_circle`). A bend of 0.3 radians or more with a radius
+    under a thousandth of the chord error counts as a corner.
 
     Args:
         spline: degree 1 to 3, planar.
@@ -48,6 +51,15 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
     if not (chord_error > 0.0 and np.isfinite(chord_error)):
         raise GeometryError(f"chord error {chord_error:g} is not a positive number")
     track = track_of(spline)
+    track = cut_at(track, sharp_nodes(track, SHARP * chord_error))
+    out = _chain_of(track, chord_error, thorough)
+    while track.chained and len(out.bulges) < 2:  # a loop smaller than the chord error must not fold to nothing
+        chord_error *= 0.25
+        out = _chain_of(track, chord_error, thorough)
+    return out
+
+
+def _chain_of(track: Track, chord_error: float, thorough: bool) -> ArcChain:
     straight = _straight_pieces(track, chord_error)
     chains: list[Chain | None] = [None] * len(track.first)
     drivers: dict[int, Driver] = {}
@@ -100,7 +112,8 @@ def _grown(
     track: Track, piece: int, demand: tuple[FloatArray, FloatArray], chord_error: float, thorough: bool
 ) -> Generator[Trial, Polished, Polished | None]:
     """Start from the demand and add joints where the error is, until the chain fits; None when it never does."""
-    least = 4 if track.closed else 1
+    ends = track.node_points[[track.first[piece], track.last[piece]]]
+    least = 4 if track.closed else 1 if abs(ends[1] - ends[0]) > 4.0 * chord_error else 2
     estimate = float(demand[1][-1])
     if track.closed and estimate < ROUND:
         result = yield start_chain(track, piece, demand, 2, 0.25), FIRM
@@ -178,7 +191,7 @@ def _by_biarcs(track: Track, piece: int, demand: tuple[FloatArray, FloatArray], 
     count = max(4, int(np.ceil(0.5 * demand[1][-1])))
     chain = start_chain(track, piece, demand, count, 0.0)
     s = np.append(chain.s, chain.s[0] + track.period) if track.closed else chain.s
-    return measure_chains(track, [biarc_chain(track, piece, s, chord_error)])[0]
+    return measure_chains(track, [biarc_chain(track, piece, s, chord_error)], chord_error)[0]
 
 
 def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Trial, Polished, Polished]:
@@ -220,7 +233,7 @@ def _weak_joints(
     else:
         x, y, jump = chord[:-1], chord[1:], np.diff(bend)
         number = 1 + np.arange(chain.count - 1)
-    strength = np.where(barred[number], np.inf, np.abs(jump) * (x * y / (x + y)) ** 2)
+    strength = np.where(barred[number], np.inf, np.abs(jump) * (x * y / np.maximum(x + y, 1e-300)) ** 2)
     order = np.argsort(strength)
     if strength[order[0]] >= most:
         return np.zeros(0, dtype=np.intp)

@@ -11,14 +11,15 @@ __all__ = ["biarc_chain"]
 
 ROUNDS = 40
 SAMPLES = 16
+MOST_SWEEP = 2.0  # radians an arc may turn
 
 
 def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> Chain:
     """Return a chain of arcs within a chord error of a smooth piece, from the given joints on.
 
-    Every stretch between two joints gets two arcs that meet the curve's points and tangents at both ends and each other;
-    a stretch that is over the chord error is halved. The error of a stretch falls with the cube of its length; stretches
-    shorter than a thousandth of the chord error are left as they are.
+    Every stretch between two joints gets two arcs that meet the curve's points and tangents at both ends and each
+    other; a stretch that is over the chord error, or turns too far, is halved. The error of a stretch falls with the
+    cube of its length, so this ends soon; stretches under a billionth of the track are left as they are.
 
     Args:
         track: the curve.
@@ -36,8 +37,10 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
         start, end = _interleaved(joint[:-1], middle), _interleaved(middle, joint[1:])
         bulges = np.tan(0.25 * sweep.ravel())
         spans = np.stack([_interleaved(s[:-1], half), _interleaved(half, s[1:])], axis=1)
-        error = two_sided(track, start, end, bulges, spans, np.zeros(len(bulges), dtype=np.intp), SAMPLES)
-        over = (error.reshape(-1, 2).max(axis=1) > chord_error) & (np.diff(s) > 1e-3 * chord_error)
+        error = two_sided(track, start, end, bulges, spans, np.zeros(len(bulges), dtype=np.intp), chord_error, SAMPLES)
+        wild = (np.abs(sweep).max(axis=1) > MOST_SWEEP) | (np.abs(sweep.sum(axis=1) - np.diff(angle)) > 1e-6)
+        over = wild | ~(error.reshape(-1, 2).max(axis=1) <= chord_error)
+        over &= np.diff(s) > 1e-9 * track.s[-1]
         if not over.any():
             break
         s = np.insert(s, 1 + np.flatnonzero(over), half[over])

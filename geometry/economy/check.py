@@ -10,7 +10,7 @@ import numpy as np
 from geometry.arrays import FloatArray, IntArray
 from geometry.economy.track import ComplexArray, Track
 
-__all__ = ["arc_samples", "distance_to_arcs", "feet", "two_sided"]
+__all__ = ["arc_samples", "distance_to_arcs", "nearby_distance", "two_sided"]
 
 
 def two_sided(
@@ -20,6 +20,7 @@ def two_sided(
     bulges: FloatArray,
     s: FloatArray,
     group: IntArray,
+    limit: float,
     samples: int = 16,
 ) -> FloatArray:
     """Return, per line or arc, the largest sampled distance between it and its stretch of the track.
@@ -30,6 +31,7 @@ def two_sided(
         bulges: of the lines and arcs, shape (n,).
         s: arc length on the track that belongs to the start and the end of each, shape (n, 2).
         group: chain that each belongs to, shape (n,); only neighbours of the same chain are looked at.
+        limit: distance over which a sample of the chain is looked at again from many places of the track.
         samples: on every stretch, each way; the nodes of the track on it are looked at besides.
     """
     n = len(bulges)
@@ -51,8 +53,16 @@ def two_sided(
         piece = np.searchsorted(track.s[track.first], 0.5 * (s[:, 0] + s[:, 1]), side="right") - 1
         low = np.maximum(low, track.s[track.first][piece][:, None])
         high = np.minimum(high, track.s[track.last][piece][:, None])
-    to_curve = np.abs(points - track.points(feet(track, points, guess, low, high)))
-    worst = np.maximum(to_chain.max(axis=1), to_curve.max(axis=1))
+    to_curve = nearby_distance(track, points, guess, low, high).max(axis=1)
+    to_chain = to_chain.max(axis=1)
+    doubt = np.flatnonzero(to_curve > limit)  # a wrong foot, may be: look again from the nearest of many places
+    if doubt.size:
+        tried = low[doubt] + (high - low)[doubt] * np.linspace(0.0, 1.0, 4 * samples + 1)
+        away = np.abs(points[doubt][:, :, None] - track.points(tried)[:, None, :])
+        guess = np.take_along_axis(tried, np.argmin(away, axis=2), axis=1)
+        again = nearby_distance(track, points[doubt], guess, low[doubt], high[doubt], 8).max(axis=1)
+        to_curve[doubt] = np.minimum(to_curve[doubt], again)
+    worst = np.maximum(to_chain, to_curve)
     node, owner = _nodes_inside(track, s)
     at = track.node_points[node]
     off = distance_to_arcs(at, start[owner], end[owner], bulges[owner])
@@ -76,16 +86,23 @@ def _nodes_inside(track: Track, s: FloatArray) -> tuple[IntArray, IntArray]:
     return node, owner[node]
 
 
-def feet(
+def nearby_distance(
     track: Track, points: ComplexArray, guess: FloatArray, low: FloatArray, high: FloatArray, steps: int = 3
 ) -> FloatArray:
-    """Return arc lengths near the feet of points on the track, by Newton's method held between two bounds."""
-    s = guess
+    """Return distances from points to points of the track near their feet, by Newton's method held between bounds.
+
+    Never less than the true distance, since it is that to a point of the track.
+    """
+    s, best = guess, np.full(points.shape, np.inf)
     for _ in range(steps):
-        centre, angle, bend = track.frames(s)
-        q = (points - centre) * np.exp(-1j * angle)
-        s = np.clip(s + q.real / np.maximum(1.0 - bend * q.imag, 0.2), low, high)
-    return s
+        centre, slope, bend = track.motion(s)
+        q = points - centre
+        best = np.minimum(best, np.abs(q))
+        squared = slope.real**2 + slope.imag**2
+        down = squared - q.real * bend.real - q.imag * bend.imag
+        ahead = q.real * slope.real + q.imag * slope.imag
+        s = np.clip(s + ahead / np.maximum(down, 0.2 * squared + 1e-30), low, high)
+    return np.minimum(best, np.abs(points - track.points(s)))
 
 
 def arc_samples(start: ComplexArray, end: ComplexArray, bulge: FloatArray, share: FloatArray) -> ComplexArray:
@@ -116,7 +133,7 @@ def distance_to_arcs(points: ComplexArray, start: ComplexArray, end: ComplexArra
     sweep = 2.0 * half
     inside_arc = np.mod(turned * np.sign(sweep), 2.0 * np.pi) <= np.abs(sweep)
     along = ((points - start) * np.conj(unit)).real
-    inside_line = (along >= 0.0) & (along <= length)
+    inside_line = (along >= 0.0) & (along <= length) & (np.abs(chord) > 0.0)
     inside = np.where(np.abs(half) < 1e-9, inside_line, inside_arc)
     ends = np.minimum(np.abs(points - start), np.abs(points - end))
     return np.where(inside, radial, ends)

@@ -7,6 +7,7 @@ import numpy as np
 from geometry.arrays import FloatArray
 from geometry.bspline import Spline
 from geometry.economy.check import two_sided
+from geometry.economy.cuts import cut_at, sharp_nodes
 from geometry.economy.gates import PER_LINK, Gates, Limits, place_gates
 from geometry.economy.links import Vertices, lay_free_links, lay_on_curve_links
 from geometry.economy.space_lines import fewest_space_vertices
@@ -17,6 +18,15 @@ from geometry.polyline import Polyline
 __all__ = ["fewest_vertices"]
 
 TURN_ROUNDS = 12
+# gates a link, share of the chord error and whether on the curve, tried in turn
+_TRIES = (
+    (PER_LINK, 1.0, False),
+    (PER_LINK, 1.0, False),
+    (PER_LINK, 1.0, True),
+    (2 * PER_LINK, 0.95, True),
+    (4 * PER_LINK, 0.5, True),
+    (4 * PER_LINK, 0.05, True),
+)
 MANY = 5_000  # links over which the check takes fewer samples of each
 
 
@@ -55,11 +65,14 @@ def fewest_vertices(
     if spline.dimension == 3:
         return fewest_space_vertices(spline, limits)
     track = track_of(spline)
-    for per_link, share in ((PER_LINK, 1.0), (2 * PER_LINK, 0.98), (4 * PER_LINK, 0.8)):
-        tried = replace(limits, chord_error=share * chord_error)
+    for attempt, (per_link, share, on_curve_now) in enumerate(_TRIES):
+        if attempt == 1:  # a vertex in the middle of every bend that turns on the spot
+            track = cut_at(track, sharp_nodes(track, 2.0 * chord_error))
+        tried = replace(limits, chord_error=share * chord_error, on_curve=on_curve or on_curve_now)
         gates = place_gates(track, tried, per_link)
         vertices = _within_turn(gates, track, tried)
-        if _worst(gates, track, vertices) <= chord_error:
+        enough = not track.chained or len(vertices.point) > 2  # a loop must not fold to nothing
+        if enough and _worst(gates, track, vertices, chord_error) <= chord_error:
             return _polyline(gates, track, vertices)
     return spline.flatten(chord_error)
 
@@ -114,7 +127,7 @@ def _path(gates: Gates, track: Track, vertices: Vertices) -> ComplexArray:
     return np.append(vertices.point, vertices.point[0] if track.chained else gates.end[-1])
 
 
-def _worst(gates: Gates, track: Track, vertices: Vertices) -> float:
+def _worst(gates: Gates, track: Track, vertices: Vertices, limit: float) -> float:
     """Return the largest sampled distance between track and polyline."""
     block_end = np.append(vertices.block[1:] != vertices.block[:-1], True)
     here = gates.s[vertices.gate]
@@ -123,7 +136,7 @@ def _worst(gates: Gates, track: Track, vertices: Vertices) -> float:
     path = _path(gates, track, vertices)
     s = np.stack([here, there], axis=1)
     group = np.zeros(len(here), dtype=np.intp)
-    return float(two_sided(track, path[:-1], path[1:], np.zeros(len(here)), s, group, samples).max())
+    return float(two_sided(track, path[:-1], path[1:], np.zeros(len(here)), s, group, limit, samples).max())
 
 
 def _polyline(gates: Gates, track: Track, vertices: Vertices) -> Polyline:

@@ -21,6 +21,7 @@ ComplexArray = NDArray[np.complex128]
 
 CELLS = 8  # least table cells a knot span
 CELL_TURN = 0.1  # radians a table cell may turn before its span is cut finer
+CELL_QUICKENING = 0.5  # change of the logarithm of speed in a cell before its span is cut finer
 MOST_CELLS = 4096  # most table cells a knot span
 SMOOTH_TURN = 1e-4  # radians: a knot of full multiplicity that turns less is no corner
 
@@ -108,6 +109,13 @@ class Track:
         angle = near + _argument(slope * np.exp(-1j * near)) + winding * self.turn
         return point, angle, _curvature(slope, bend)
 
+    def motion(self, s: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
+        """Return points and their first two derivatives by the arc length of the table, each the shape of s."""
+        node, t, _ = self.locate(s)
+        rate = self.step[node] / (self.s[node + 1] - self.s[node])
+        point, slope, bend = _derivatives(self.power[self.span[node]], t)
+        return point, slope * rate, bend * rate**2
+
     def to_xy(self, z: ComplexArray) -> FloatArray:
         """Return complex points as drawing coordinates, shape (n, 2)."""
         return np.stack([z.real, z.imag], axis=-1) + self.origin
@@ -141,10 +149,9 @@ def smooth_runs(spline: Spline) -> tuple[FloatArray, IntArray, bool]:
     kept = legs.max(axis=1) > 1e-13 * size
     if not kept.any():
         raise GeometryError("the spline has no length; all its control points coincide")
-    for index in np.flatnonzero(corner & ~kept):  # a corner stays a corner when the span behind it goes
-        later = np.flatnonzero(kept[index:])
-        if later.size:
-            corner[index + later[0]] = True
+    # a corner stays one when the span behind it goes; and where a span has shrunk to a point the tangent may jump
+    for index in np.flatnonzero(~kept).tolist():
+        corner[(index + 1) % len(corner)] = True
     beziers, corner = beziers[kept], corner[kept]
     seam = not (spline.closed and spline.smooth_seam)
     before, after = _end_directions(beziers)
@@ -175,9 +182,11 @@ def track_of(spline: Spline) -> Track:
         _, slope, bend = _derivatives(power[span], t)
         angle = _unwrapped(slope, power, span, t)
         turns = np.abs(np.remainder(np.diff(angle) + np.pi, 2.0 * np.pi) - np.pi) * (step[:-1] > 0.0)
+        speed = np.abs(slope)
+        quickening = np.abs(np.diff(np.log(np.maximum(speed, 1e-3 * speed.max())))) * (step[:-1] > 0.0)
         worst = np.zeros(len(power))
-        np.maximum.at(worst, span[:-1], turns)
-        finer = np.where(worst > CELL_TURN, np.ceil(cells * np.minimum(worst / CELL_TURN, 16.0)), cells)
+        np.maximum.at(worst, span[:-1], np.maximum(turns / CELL_TURN, quickening / CELL_QUICKENING))
+        finer = np.where(worst > 1.0, np.ceil(cells * np.minimum(worst, 16.0)), cells)
         finer = np.minimum(finer, MOST_CELLS).astype(np.intp)
         if np.array_equal(finer, cells):
             break
