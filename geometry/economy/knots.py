@@ -19,6 +19,7 @@ from geometry.economy.spline_knots import (
     place,
     refit,
     remove,
+    respaced,
     smoothed,
     spacing,
     uniform,
@@ -45,11 +46,12 @@ _WAYS = (
     ("even", 11.0),
     ("thin", 4.0),
     ("thin", 16.0),
-    ("thin", 64.0),
+    ("own", 0.0),
 )  # tried in turn until a piece is near enough and fair: equal spans, or knots for a finer chord error thinned
 _HOPEFUL = 4.0  # ratio up to which levelling may still bring a fit within the chord error
 _BENT = (0.01, 0.03)  # pull of the source's curvature where a thinned fit is not fair
 _PASS = 0.995  # share of the chord error within which a piece is accepted
+RESP = 2
 _DENSER = 2  # times that knots are laid a third more densely in pieces that start out unfair
 _EXTRA = 1.25  # knots to begin with, over what the spacing field asks for
 
@@ -88,7 +90,7 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
         if not waiting.any():
             break
         if way == "line":
-            line |= waiting & straight(source, chord_error)
+            line |= waiting & straight(source, 0.97 * chord_error)
             waiting &= ~line
             continue
         tried, state = _attempt(source, waiting, chord_error, way, amount)
@@ -157,24 +159,23 @@ def _evenly(source: Source, pieces: BoolArray, chord_error: float, number: int) 
 
 
 def _thinned(source: Source, chord_error: float, finer: float) -> State | None:
-    """Place knots, finer than the chord error asks for by a factor, then thin them."""
+    """Lay knots, finer than the chord error asks for by a factor (0: as close as the source's own), then thin them."""
     allowed = np.full(len(source.along), _AIM * chord_error)
     closest = 0.5 * source.lengths / source.spans
     guard = Guard(source, chord_error)
-    need = smoothed(source, spacing(source, allowed / finer), 0.75)
-    state = _laid(source, need, allowed, closest)
-    for _ in range(_DENSER):
-        if state is None:
-            return None
-        worse = guard.check(state.fit, state.u).worse
-        if not worse.any():
-            break
-        need = np.where(worse[source.piece], 0.75 * need, need)
-        state = _laid(source, need, allowed, closest)
+    if finer:
+        state = _laid(source, guard, allowed, closest, finer)
+    else:
+        state = refit(source, Basis(source, uniform(source, source.spans)), source.along, source.step, allowed)
     if state is None:
         return None
     state = remove(source, state, allowed, guard)
     state = _mend(source, state, allowed, closest)
+    for _ in range(RESP):
+        again = respaced(source, state, allowed, guard)
+        if again is None or again.ratio.max() > 1.0:
+            break
+        state = again
     for share in _BENT:
         worse = guard.check(state.fit, state.u).worse
         if not worse.any():
@@ -186,10 +187,24 @@ def _thinned(source: Source, chord_error: float, finer: float) -> State | None:
     return state
 
 
-def _laid(source: Source, need: FloatArray, allowed: FloatArray, closest: FloatArray) -> State | None:
-    """Fit with knots laid by a spacing field, some more than it asks for."""
-    state = refit(source, Basis(source, place(source, need, _EXTRA)), source.along, source.step, allowed)
-    return None if state is None else _mend(source, state, allowed, closest)
+def _laid(
+    source: Source, guard: Guard, allowed: FloatArray, closest: FloatArray, finer: float
+) -> State | None:
+    """Lay knots by the spacing field, some more than it asks for, and more again in pieces that come out unfair."""
+    need = smoothed(source, spacing(source, allowed / finer), 0.75)
+    state: State | None = None
+    for turn in range(_DENSER + 1):
+        state = refit(source, Basis(source, place(source, need, _EXTRA)), source.along, source.step, allowed)
+        if state is None:
+            break
+        state = _mend(source, state, allowed, closest)
+        if turn == _DENSER:
+            break
+        worse = guard.check(state.fit, state.u).worse
+        if not worse.any():
+            break
+        need = np.where(worse[source.piece], 0.75 * need, need)
+    return state
 
 
 def _mend(source: Source, state: State, allowed: FloatArray, closest: FloatArray) -> State:

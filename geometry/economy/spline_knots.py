@@ -18,6 +18,9 @@ __all__ = ["State", "add_where_over", "bent", "level", "place", "refit", "remove
 _SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
 _LEVELLINGS = 2  # refits with levelled weights before knots are put back
 _HOPELESS = 4.0  # ratio over which levelling is not tried
+SPARE = 0.3
+BARREN = 6
+DIST, DIST2 = 5, 8
 _REACH = 5  # knots taken out farther than this from what went wrong, in knots, are not blamed for it
 _SLIDE_FIRST = 0.05  # the same while parameters are still those of the source
 
@@ -171,14 +174,20 @@ def smoothed(source: Source, need: FloatArray, reach: float) -> FloatArray:
 
 def place(source: Source, need: FloatArray, share: float) -> FloatArray:
     """Return interior knots at equal steps of the knot coordinate, `share` times as many as the field asks for."""
-    f = _coordinate(source, need)
-    last = source.first[1:] - 1
-    total = f[last]
+    total = _coordinate(source, need)[source.first[1:] - 1]
     if source.periodic:
         total = total + (source.high[0] - source.along[-1]) / need[-1]
-    most = np.maximum(source.spans, 1)
-    least = source.degree + 1 if source.periodic else 1
-    number = np.clip(np.ceil(total * share - 1e-9).astype(np.intp), least, np.maximum(most, least))
+    least = least_spans(source)
+    number = np.clip(np.ceil(total * share - 1e-9).astype(np.intp), least, np.maximum(source.spans, least))
+    return place_number(source, need, number)
+
+
+def place_number(source: Source, need: FloatArray, number: IntArray) -> FloatArray:
+    """Return interior knots at equal steps of the knot coordinate, for given numbers of spans."""
+    f = _coordinate(source, need)
+    total = f[source.first[1:] - 1]
+    if source.periodic:
+        total = total + (source.high[0] - source.along[-1]) / need[-1]
     scaled = f * (number / np.maximum(total, 1e-300))[source.piece]
     if source.periodic:
         ends = np.append(scaled, number[0])
@@ -193,6 +202,72 @@ def _whole(number: IntArray, offset: IntArray) -> FloatArray:
     before = np.cumsum(number - 1) - (number - 1)
     index = np.arange(len(piece)) - before[piece] + 1
     return offset[piece] + index + 1e-3 * piece
+
+
+def respaced(source: Source, state: State, allowed: FloatArray, guard: Guard) -> State | None:
+    """Lay the knots anew so that all spans err alike, with fewer of them where the errors leave room.
+
+    The error of a span goes with its width to the power degree + 1, so pieces whose spans err by ratios r need
+    sum r^(1 / (degree + 1)) spans. Pieces that come out over or less fair keep their knots.
+    Returns None if nothing was gained.
+    """
+    order = 1.0 / (source.degree + 1)
+    pieces = len(source.low)
+    old, trial = state, state
+    before = number_of_spans(source, state)
+    need, number = _need(source, state, order)
+    number = np.minimum(number, before - 1)
+    if np.all(number < least_spans(source)):
+        return None
+    number = np.maximum(number, least_spans(source))
+    for turn in range(3):
+        again = refit(source, Basis(source, place_number(source, need, number)), trial.u, source.step, allowed)
+        for _ in range(2):
+            again = None if again is None else level(source, again, allowed)
+        if again is None:
+            return None
+        trial = again
+        peak = np.maximum.reduceat(trial.ratio, source.first[:-1])
+        if np.all((peak <= 1.0) | (peak > 3.0)) or turn == 2:
+            break
+        need, _ = _need(source, trial, order)
+    good = (peak <= 1.0) & (number < before) & ~guard.check(trial.fit, trial.u).worse
+    if not good.any():
+        return None
+    if good.all():
+        return trial
+    inner = np.sort(np.concatenate([trial.inner[good[_pieces(source, trial.inner)]], old.inner[~good[_pieces(source, old.inner)]]]))
+    here = good[source.piece]
+    return refit(source, Basis(source, inner), np.where(here, trial.u, old.u), np.where(here, trial.weight, old.weight), allowed)
+
+
+def _pieces(source: Source, u: FloatArray) -> IntArray:
+    return np.maximum(np.searchsorted(source.low, u, side="right") - 1, 0)
+
+
+def least_spans(source: Source) -> int:
+    """Return the fewest spans that a piece can have."""
+    return source.degree + 2 if source.periodic else 1
+
+
+def number_of_spans(source: Source, state: State) -> IntArray:
+    """Return how many spans every piece of a fit has."""
+    if source.periodic:
+        return np.array([len(state.inner)])
+    return 1 + np.bincount(_pieces(source, state.inner), minlength=len(source.low))
+
+
+def _need(source: Source, state: State, order: float) -> tuple[FloatArray, IntArray]:
+    """Return the spacing that would make all spans of a fit err by just what is allowed, and the spans it takes."""
+    basis = state.fit.basis
+    span, _ = basis.locate(state.u)
+    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    peak = np.full(len(basis.start), 1e-4)
+    peak[span[runs]] = np.maximum(np.maximum.reduceat(state.ratio, runs), 1e-4)
+    share = np.clip(peak, 0.02, 50.0) ** order
+    a, b = basis.inside
+    number = np.bincount(basis.piece[a:b], weights=share[a:b], minlength=len(source.low))
+    return (basis.width / share)[span], np.ceil(number + SPARE).astype(np.intp)
 
 
 def add_where_over(source: Source, state: State, closest: FloatArray) -> FloatArray | None:
@@ -269,12 +344,13 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
     frozen = np.zeros(len(state.inner), dtype=bool)
     verdict = guard.check(state.fit, state.u)
     least = source.degree + 2 if source.periodic else 0
+    barren = 0
     for turn in range(rounds):
         inner = state.inner
         if frozen.all() or len(inner) <= least:
             break
         piece = np.maximum(np.searchsorted(source.low, inner, side="right") - 1, 0)
-        distance = 5 if turn < 6 else 8
+        distance = DIST if turn < 6 else DIST2
         value = np.where(frozen, np.inf, significance(state))
         out = _apart(value, np.arange(len(inner)) + distance * piece, distance)
         if source.periodic and len(inner) - out.sum() < least:
@@ -285,7 +361,11 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
         good = _without(source, state, out, allowed, guard, verdict)
         if good is None:
             frozen |= tried
+            barren += 1
+            if barren == BARREN:
+                break
             continue
+        barren = 0
         state, verdict = good
         frozen |= tried & ~out
         if turn < 30:

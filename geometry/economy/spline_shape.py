@@ -13,6 +13,9 @@ __all__ = ["Guard", "Turns", "Verdict", "turning_points"]
 SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no inflection
 TURN_LEVELS = (1.0, 8.0)  # a fit must not make more of what is small either, so counts hold at larger thresholds too
 EXTREMA_LEVELS = (1.0,)
+LEAST_HEIGHT = (
+    0.025  # share of the chord error: a bend that stands off its chord by this counts however little it turns
+)
 PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
 
 
@@ -74,11 +77,11 @@ class Guard:
         self._checks: list[_Check] = []
         if source.degree > 2:
             for factor in EXTREMA_LEVELS:
-                self._checks.append(_Check(k, factor * self._prominence, source.first, source.periodic, slack))
+                self._checks.append(_Check(k, factor * self._prominence, source, source.periodic, slack, np.inf))
         if len(source.point) == 2:
-            angle = turning(source.tangent, source.first)
+            angle, tall = turning(source.tangent, source.first), 8.0 * LEAST_HEIGHT * chord_error
             for factor in TURN_LEVELS:
-                self._checks.append(_Check(angle, factor * self._turn, source.first, False, slack))
+                self._checks.append(_Check(angle, factor * self._turn, source, False, slack, factor * tall))
 
     def check(self, fit: Fit, u: FloatArray, base: Verdict | None = None) -> Verdict:
         """Tell which pieces of a fit are less fair than the source's, and at which samples.
@@ -108,17 +111,20 @@ class Guard:
 class _Check:
     """Turning points of one quantity along the source, against which those of a fit are held."""
 
-    def __init__(self, values: FloatArray, threshold: FloatArray, first: IntArray, cyclic: bool, slack: float) -> None:
-        self.threshold, self.first, self.cyclic = slack * threshold, first, cyclic
-        self.turns = turning_points(values, first, threshold, cyclic)
-        self.count = self.turns.per_piece(first)
+    def __init__(
+        self, values: FloatArray, threshold: FloatArray, source: Source, cyclic: bool, slack: float, tall: float
+    ) -> None:
+        self.threshold, self.first, self.cyclic = slack * threshold, source.first, cyclic
+        self.along, self.tall = source.along, slack * tall
+        self.turns = turning_points(values, source.first, threshold, cyclic, source.along, tall)
+        self.count = self.turns.per_piece(source.first)
 
     def compare(self, values: FloatArray, base: Turns | None, worse: BoolArray, where: BoolArray) -> Turns:
         """Mark pieces with more turning points than allowed, and those of them that have no counterpart.
 
         Counterparts are sought in the source, or in the base where that has more turning points.
         """
-        turns = turning_points(values, self.first, self.threshold, self.cyclic)
+        turns = turning_points(values, self.first, self.threshold, self.cyclic, self.along, self.tall)
         count, most = turns.per_piece(self.first), self.count
         if base is not None:
             most = np.maximum(most, base.per_piece(self.first))
@@ -140,14 +146,26 @@ def _unmatched(old: IntArray, new: IntArray) -> IntArray:
     return np.delete(new, nearest)
 
 
-def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, cyclic: bool) -> Turns:
+def turning_points(
+    values: FloatArray,
+    first: IntArray,
+    threshold: FloatArray,
+    cyclic: bool,
+    along: FloatArray | None = None,
+    tall: float = np.inf,
+) -> Turns:
     """Return the samples where a rise of at least a threshold turns into such a fall or back.
+
+    For tangent angles, rise times the length over which it happens is some 8 times the height of the bend, and a
+    bend may count by that too.
 
     Args:
         values: shape (n,).
         first: first sample of every piece, and n; the ends of pieces are no turning points.
         threshold: for every piece, shape (pieces,), positive.
         cyclic: whether the (only) piece closes; `values` then repeats from its start.
+        along: arc lengths, shape (n,); with `tall`, not for cyclic values.
+        tall: rise times length from which on a rise counts even if it is under the threshold.
     """
     if cyclic:
         shift = int(np.argmax(values))
@@ -168,24 +186,27 @@ def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, c
     limit = threshold[np.searchsorted(first, index, side="right") - 1]
     found: list[int] = []
     tops: list[bool] = []
-    direction, high, low, high_at, low_at, start = 0, 0.0, 0.0, 0, 0, 0
-    rows = zip(index.tolist(), values[index].tolist(), limit.tolist(), fresh.tolist(), strict=True)
-    for at, value, least, new in rows:
+    x = np.zeros(len(index)) if along is None else along[index]
+    direction, high, low, start, high_at, low_at, high_x, low_x, start_x = 0, 0.0, 0.0, 0.0, 0, 0, 0.0, 0.0, 0.0
+    rows = zip(index.tolist(), values[index].tolist(), x.tolist(), limit.tolist(), fresh.tolist(), strict=True)
+    for at, value, here, least, new in rows:
         if new:
-            direction, high, low, high_at, low_at, start = 0, value, value, at, at, at
+            direction, high, low, start, high_at, low_at = 0, value, value, value, at, at
+            high_x = low_x = start_x = here
             continue
         if direction >= 0 and value > high:
-            high, high_at = value, at
+            high, high_at, high_x = value, at, here
         if direction <= 0 and value < low:
-            low, low_at = value, at
-        if direction >= 0 and value <= high - least:
-            if high_at > start:
+            low, low_at, low_x = value, at, here
+        fall, rise = high - value, value - low
+        if direction >= 0 and (fall >= least or fall * (here - high_x) >= tall):
+            if direction or high - start >= least or (high - start) * (high_x - start_x) >= tall:
                 found.append(high_at)
                 tops.append(True)
-            direction, low, low_at = -1, value, at
-        elif direction <= 0 and value >= low + least:
-            if low_at > start:
+            direction, low, low_at, low_x = -1, value, at, here
+        elif direction <= 0 and (rise >= least or rise * (here - low_x) >= tall):
+            if direction or start - low >= least or (start - low) * (low_x - start_x) >= tall:
                 found.append(low_at)
                 tops.append(False)
-            direction, high, high_at = 1, value, at
+            direction, high, high_at, high_x = 1, value, at, here
     return Turns(np.array(found, dtype=np.intp), np.array(tops, dtype=bool))
