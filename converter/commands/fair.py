@@ -61,6 +61,12 @@ _VERSIONS = ("R12", "R2000", "R2004", "R2007", "R2010", "R2013", "R2018")
     help="Take every vertex that turns by more as a corner: 0 all that turn, 180 none.  [default: find true corners]",
 )
 @option(
+    "--corners-on",
+    metavar="NAME",
+    heading=_CURVE,
+    help="Put a corner at every POINT on this layer that lies on a profile.",
+)
+@option(
     "--chord-error",
     type=LengthType(),
     heading=_CURVE,
@@ -92,6 +98,7 @@ def fair(
     force: bool,
     quiet: bool,
     corner_angle: float | None,
+    corners_on: str | None,
     chord_error: Length | None,
     degree: str,
     redraw: bool,
@@ -110,6 +117,7 @@ def fair(
         degree=int(degree),
         chord_error=chord_error,
         corner_angle=corner_angle,
+        corners_on=corners_on,
         redraw=redraw,
         layers=layers,
         gap=gap,

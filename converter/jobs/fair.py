@@ -14,6 +14,7 @@ from converter.errors import LengthError
 from converter.files import check_output
 from converter.jobs.assess import Assessment, assess
 from converter.jobs.forms import Form, Result, best_curve, corner_turns, outline_corners
+from converter.jobs.marks import Marks, read_marks
 from converter.jobs.records import DeviationRecord, FairRecord, ProfileRecord
 from converter.units import Length
 from geometry.arcs import ArcChain
@@ -39,6 +40,7 @@ class FairSettings:
         degree: of splines, 2 or 3.
         chord_error: share of the tolerance that writing few entities may spend; None takes a tenth.
         corner_angle: degrees above which a vertex is a corner; None finds the true corners.
+        corners_on: layer whose POINT entities mark corners; None for none.
         redraw: whether true curves (CIRCLE, ARC, ELLIPSE, SPLINE) are drawn afresh too.
         layers: layers to take profiles from; empty for all.
         gap: ends nearer than this are joined; None takes 1e-6 of the extent.
@@ -52,6 +54,7 @@ class FairSettings:
     degree: int = 3
     chord_error: Length | None = None
     corner_angle: float | None = None
+    corners_on: str | None = None
     redraw: bool = False
     layers: tuple[str, ...] = ()
     gap: Length | None = None
@@ -101,12 +104,14 @@ def fair_drawing(
     record.seconds["read"] = time.perf_counter() - clock
     clock = time.perf_counter()
     count = len(drawing.profiles)
+    marks = read_marks(drawing, settings.corners_on)
     for done, profile in enumerate(list(drawing.profiles), start=1):
-        record.profiles.append(_fair_profile(drawing, profile, tolerance, chord_error, version, settings))
+        record.profiles.append(_fair_profile(drawing, profile, tolerance, chord_error, version, marks, settings))
         if progress is not None:
             progress(done, count)
     record.seconds["fair"] = time.perf_counter() - clock
     clock = time.perf_counter()
+    record.warnings += marks.unused()
     record.warnings += [*drawing.warnings, *save(drawing, output, settings.version, settings.force)]
     record.passed_through = dict(drawing.passed_through)
     record.skipped = [{"handle": s.handle, "type": s.type, "reason": s.reason} for s in drawing.skipped]
@@ -129,15 +134,17 @@ def _fair_profile(
     tolerance: float | None,
     chord_error: float | None,
     version: str,
+    marks: Marks,
     settings: FairSettings,
 ) -> ProfileRecord:
     need = assess(profile, tolerance, settings.redraw)
     if need.as_drawn or need.outline is None:
         return _as_drawn(profile, need, need.reason)
     form, said = _possible_form(settings.form, profile, version)
-    corners = outline_corners(
-        need.outline, need.tolerance, None if settings.corner_angle is None else math.radians(settings.corner_angle)
-    )
+    angle = None if settings.corner_angle is None else math.radians(settings.corner_angle)
+    local = marks.in_frame(profile)
+    corners, used = outline_corners(need.outline, need.tolerance, angle, local)
+    marks.used |= used
     allowed = chord_error if chord_error is not None else _CHORD_SHARE * need.tolerance
     result = best_curve(
         need.outline, corners, need.tolerance, min(allowed, 0.9 * need.tolerance), form, settings.degree, need.slack
@@ -149,6 +156,8 @@ def _fair_profile(
     written = replace(drawing, profile, result.curve, version)
     record = _record(profile, need, written, result)
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
+    if result.crosses:
+        record.warnings.append("the curve crosses or touches itself: two walls are closer than the tolerance")
     if need.jaggedness is not None and need.jaggedness.kind == "stations":
         record.warnings.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
     return record

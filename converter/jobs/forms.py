@@ -6,18 +6,20 @@ from typing import Literal
 import numpy as np
 
 from geometry.arcs import ArcChain
-from geometry.arrays import FloatArray
+from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline
-from geometry.corners import Corners, corners_by_angle, find_corners
+from geometry.corners import Corners, corners_by_angle, find_corners, pin_corners
 from geometry.deviation import TwoSided, hausdorff
 from geometry.errors import GeometryError
 from geometry.fairing import Faired, fair_outline
 from geometry.polyline import Polyline
+from geometry.simple import is_simple
 
 __all__ = ["Form", "Result", "best_curve", "corner_turns", "outline_corners"]
 
 Form = Literal["spline", "arcs", "lines"]
 
+_SIMPLE = 1e-3  # of the tolerance: flattening for the search for crossings
 _WIDTH = 1.0 / 200.0  # of the tolerance: how far certified and measured may lie apart
 _CAREFUL = (1.0, 0.9, 0.75, 0.5)  # shares of the tolerance given to the fairing, one after the other
 _ECONOMY = (1.0, 0.3, 0.1)  # shares of the chord error given to the economy
@@ -32,27 +34,34 @@ class Result:
         faired: the fair spline that it stands for.
         deviation: certified distance between outline and curve, slack included.
         within: whether the certified distance keeps the tolerance.
+        crosses: whether the curve crosses or touches itself though the outline does not.
     """
 
     curve: Spline | ArcChain | Polyline
     faired: Faired
     deviation: TwoSided
     within: bool
+    crosses: bool
 
 
-def outline_corners(outline: Polyline, tolerance: float, angle: float | None) -> Corners:
-    """Return the corners of an outline.
+def outline_corners(
+    outline: Polyline, tolerance: float, angle: float | None, marks: FloatArray
+) -> tuple[Corners, BoolArray]:
+    """Return the corners of an outline, and which marks belong to it.
 
     Args:
         outline: cleaned, 2-D or 3-D.
-        tolerance: drawing units.
+        tolerance: drawing units; marks farther from the outline do not belong to it.
         angle: turn, radians, above which a vertex is a corner; None finds the true corners.
+        marks: points that the user has marked as corners, shape (n, 2 or 3).
     """
     if angle is not None:
-        return corners_by_angle(outline, angle)
-    if outline.dimension == 2:
-        return find_corners(outline, tolerance)
-    return _spatial_corners(outline, tolerance)
+        found = corners_by_angle(outline, angle)
+    elif outline.dimension == 2:
+        found = find_corners(outline, tolerance)
+    else:
+        found = _spatial_corners(outline, tolerance)
+    return pin_corners(found, outline, marks, tolerance)
 
 
 def _spatial_corners(outline: Polyline, tolerance: float) -> Corners:
@@ -104,9 +113,9 @@ def best_curve(
             if curve is None:
                 continue
             result = _certified(outline, curve, faired, tolerance, slack)
-            if best is None or result.deviation.certified < best.deviation.certified:
+            if best is None or (result.crosses, result.deviation.certified) < (best.crosses, best.deviation.certified):
                 best = result
-            if result.within:
+            if result.within and not result.crosses:
                 return result
     return best
 
@@ -115,7 +124,15 @@ def _certified(
     outline: Polyline, curve: Spline | ArcChain | Polyline, faired: Faired, tolerance: float, slack: float
 ) -> Result:
     deviation = hausdorff(outline, curve, _WIDTH * tolerance)
-    return Result(curve, faired, deviation, deviation.certified + slack <= tolerance)
+    within = deviation.certified + slack <= tolerance
+    crosses = within and outline.dimension == 2 and _crosses(outline, curve, tolerance)
+    return Result(curve, faired, deviation, within, crosses)
+
+
+def _crosses(outline: Polyline, curve: Spline | ArcChain | Polyline, tolerance: float) -> bool:
+    """Tell whether a curve crosses or touches itself though the outline does not (two walls closer than the band)."""
+    drawn = curve.flatten(_SIMPLE * tolerance)
+    return not is_simple(drawn) and is_simple(outline)
 
 
 def _economised(spline: Spline, chord_error: float, form: Form) -> Spline | ArcChain | Polyline | None:
