@@ -148,7 +148,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         soft = spread(layout, out, 4)
         stiffness = np.where(soft, np.minimum(0.6 * stiffness, 4.0 * 0.8**turn), stiffness)
         stiffness = np.maximum(limit_growth(layout, stiffness, 0.5), 0.3)
-        straightness = None if straightness is None else np.where(soft, 0.0, straightness)
+        straightness = np.where(soft, 0.0, straightness)
         old = fit.sampled
         sampled = Sampled(layout, old.own, old.points, old.bounds, old.own_nodes, old.fit_nodes, dead)
         system = System(layout, old.points, sampled.live, nodes.pins)

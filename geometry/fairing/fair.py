@@ -13,6 +13,7 @@ from geometry.fairing.layout import Layout
 from geometry.fairing.lobes import remove_lobes
 from geometry.fairing.samples import by_own_length, reparametrised
 from geometry.fairing.stiffness import Fit, relax, start_stiffness
+from geometry.fairing.straight import straight_pieces, straightness_of
 from geometry.fairing.system import System
 from geometry.fairing.trace import Trace
 from geometry.polyline import Polyline
@@ -20,6 +21,7 @@ from geometry.polyline import Polyline
 __all__ = ["Faired", "fair_outline"]
 
 _CORNER_REACH = 0.97  # a corner may lie this far from the trace
+_SETTLE = 0.5  # a corner may move this far when its sides pull
 _ONE_SIDED = 6.0  # stiffness of the first fits
 _INSERTIONS = 8
 _CLEAR = (0.0, 1.05, -1.05, 2.1, -2.1, 3.2, -3.2, 4.3, -4.3)
@@ -118,9 +120,12 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
     coefficients = System(sampled.layout, sampled.points, sampled.live, None).solve(first)
     nodes = _nodes(trace, own, found, sampled.layout, coefficients)
     sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
-    fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins)
+    straight = straight_pieces(sampled)
+    fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins, straightness_of(sampled, straight))
+    nodes = _settled(trace, fit, nodes)
     again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
-    fit = relax(again, _carried(fit, again.layout), nodes.pins)
+    straight &= np.bincount(fit.sampled.layout.piece, fit.straightness, len(straight)) > 0.0
+    fit = relax(again, _carried(fit, again.layout), nodes.pins, straightness_of(again, straight))
     fit = remove_lobes(fit, nodes.pins)
     return repair(trace, fit, nodes)
 
@@ -142,6 +147,28 @@ def _nodes(trace: Trace, own: FloatArray, found: FloatArray, layout: Layout, coe
     fixed[1:-1] = False
     ends = np.concatenate([[0.0], own, [trace.length]])
     return Nodes(np.concatenate([trace.path[:1], points, trace.path[-1:]]), ends, fixed, False)
+
+
+def _settled(trace: Trace, fit: Fit, nodes: Nodes) -> Nodes:
+    """Return the corners moved to where the two sides pull equally hard, as far as the band allows."""
+    pins = nodes.pins
+    if pins is None or nodes.fixed.all():
+        return nodes
+    sampled = fit.sampled
+    force, second = System(sampled.layout, sampled.points, sampled.live, pins).end_forces(
+        fit.stiffness, fit.straightness
+    )
+    if nodes.closed:
+        pull, hold = force[:, 0] + np.roll(force[:, 1], 1, axis=0), second[:, 0] + np.roll(second[:, 1], 1)
+    else:
+        pull, hold = np.zeros_like(nodes.points), np.ones(len(nodes.points))
+        pull[1:-1], hold[1:-1] = force[1:, 0] + force[:-1, 1], second[1:, 0] + second[:-1, 1]
+    move = -pull / np.maximum(hold, 1e-9)[:, None]
+    size = np.sqrt((move * move).sum(axis=1))
+    move *= np.minimum(1.0, _SETTLE / np.maximum(size, 1e-12))[:, None]
+    points = nodes.points + move
+    allowed = ~nodes.fixed & (trace.distance(points, nodes.own, CORNER_SEARCH) <= _CORNER_REACH)
+    return nodes.moved(np.where(allowed[:, None], points, nodes.points))
 
 
 def _carried(fit: Fit, layout: Layout) -> FloatArray:

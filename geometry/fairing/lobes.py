@@ -9,7 +9,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import normal_offsets
-from geometry.fairing.stiffness import BAND, Fit, local_means, spread, worst_of
+from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, local_means, spread, worst_of
 from geometry.fairing.system import System
 from geometry.fairing.trace import ragged_ranges
 
@@ -19,7 +19,6 @@ _FLAT = 0.003  # curvature that is not counted, per tolerance
 _HEIGHT = 0.5
 _STIFFER, _STIFFEST = 1.5, 60.0
 _STRAIGHT, _STRAIGHTER = 0.25, 1.4  # share of a lobe's length to begin with, and growth from round to round
-_MEAN_4, _MEAN_8 = 0.35, 0.30
 _ROUNDS = 12
 
 
@@ -34,7 +33,7 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
     system = System(layout, sampled.points, sampled.live, pins)
     allowed = np.maximum(_excess(fit, fit.coefficients) + 1e-9, 1.0)
     frozen = np.zeros(len(layout), dtype=np.bool_)
-    stiffness, straightness = fit.stiffness, np.zeros(len(layout))
+    stiffness, straightness = fit.stiffness, fit.straightness
     best = fit
     for straighten in (False, True):
         frozen[:] = False
@@ -60,7 +59,7 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
                     break
                 back = spread(layout, broken, reach)
                 if straighten:
-                    straightness = np.where(back, 0.0, straightness)
+                    straightness = np.where(back, fit.straightness, straightness)
                 else:
                     stiffness = np.where(back, fit.stiffness, stiffness)
                 frozen |= back
@@ -78,8 +77,8 @@ def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:
     return np.maximum.reduce(
         [
             worst_of(offsets) / BAND,
-            local_means(layout.piece, layout.periodic, offsets, live, 4.0) / _MEAN_4,
-            local_means(layout.piece, layout.periodic, offsets, live, 8.0) / _MEAN_8,
+            local_means(layout.piece, layout.periodic, offsets, live, 4.0) / MEAN_4,
+            local_means(layout.piece, layout.periodic, offsets, live, 8.0) / MEAN_8,
         ]
     )
 

@@ -14,9 +14,21 @@ from geometry.fairing.samples import Sampled, normal_offsets
 from geometry.fairing.system import System
 from geometry.fairing.trace import near
 
-__all__ = ["BAND", "Fit", "limit_growth", "local_means", "relax", "spread", "start_stiffness", "worst_of"]
+__all__ = [
+    "BAND",
+    "MEAN_4",
+    "MEAN_8",
+    "Fit",
+    "limit_growth",
+    "local_means",
+    "relax",
+    "spread",
+    "start_stiffness",
+    "worst_of",
+]
 
 BAND = 0.93  # offset of a sample that counts as leaving the band
+MEAN_4, MEAN_8 = 0.35, 0.30  # local means, of 4 and 8 intervals, that a fit preferred for its shape may have
 _DRIFT = 0.15  # local mean offset that counts as biased
 _STIFFEST, _SOFTEST = 40.0, 0.6
 _GROWTH = 0.1
@@ -28,12 +40,12 @@ _REACH, _LEAST_REACH, _MARGIN = 5.0, 16, 12
 
 @dataclass(frozen=True, slots=True)
 class Fit:
-    """Samples, the coefficients fitted to them, and the stiffness (and straightness, if any) of every interval."""
+    """Samples, the coefficients fitted to them, and the stiffness and straightness of every interval."""
 
     sampled: Sampled
     coefficients: FloatArray
     stiffness: FloatArray
-    straightness: FloatArray | None = None
+    straightness: FloatArray
 
 
 def start_stiffness(layout: Layout) -> FloatArray:
@@ -96,7 +108,7 @@ def _limited(values: FloatArray, ramp: FloatArray) -> FloatArray:
     return np.asarray(np.minimum.accumulate((forward + ramp)[::-1])[::-1] - ramp)
 
 
-def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None) -> Fit:
+def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, straightness: FloatArray) -> Fit:
     """Soften a fit until it keeps the band and its size.
 
     On a long profile only windows about the places that ask for it are solved again, so that a stretch costs its own
@@ -106,30 +118,44 @@ def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None) -> F
         sampled: samples and layout.
         stiffness: of every interval, shape (m,); it only falls.
         pins: points where pieces start and end, shape (p, 2, d); None for a periodic piece.
+        straightness: of every interval, shape (m,); a piece that breaks the band loses it.
     """
     layout, live = sampled.layout, sampled.live
     system = System(layout, sampled.points, live, pins)
     windows = 0
-    coefficients = system.solve(stiffness)
+    coefficients = system.solve(stiffness, None, straightness)
     for _ in range(_ROUNDS):
-        excess = _excess(sampled, layout.piece, layout.periodic, coefficients, None)
+        excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
         hot = excess > 1.0
         if not hot.any():
             break
+        straightness = _unbent(layout, straightness, hot)
         stiffness = limit_growth(layout, _softened(stiffness, excess, layout.piece, layout.periodic), _GROWTH)
         stiffness = np.maximum(stiffness, _SOFTEST)
         if len(layout) > _WINDOWED and windows < _WINDOWS:
             chosen = np.flatnonzero(_concerned(layout, stiffness, hot))
             if len(chosen) < _NARROWER * len(layout):
-                stiffness = _relax_windows(sampled, stiffness, pins, coefficients, chosen)
+                stiffness = _relax_windows(sampled, stiffness, pins, straightness, coefficients, chosen)
                 stiffness = np.maximum(limit_growth(layout, stiffness, _GROWTH), _SOFTEST)
                 windows += 1
-        coefficients = system.solve(stiffness)
-    return Fit(sampled, coefficients, stiffness)
+        coefficients = system.solve(stiffness, None, straightness)
+    return Fit(sampled, coefficients, stiffness, straightness)
+
+
+def _unbent(layout: Layout, straightness: FloatArray, hot: BoolArray) -> FloatArray:
+    """Return the straightness without the pieces that hold a hot interval."""
+    lost = np.zeros(len(layout.lengths), dtype=np.bool_)
+    lost[layout.piece[hot & (straightness > 0.0)]] = True
+    return np.asarray(np.where(lost[layout.piece], 0.0, straightness))
 
 
 def _relax_windows(
-    sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, coefficients: FloatArray, chosen: IntArray
+    sampled: Sampled,
+    stiffness: FloatArray,
+    pins: FloatArray | None,
+    straightness: FloatArray,
+    coefficients: FloatArray,
+    chosen: IntArray,
 ) -> FloatArray:
     """Return the stiffness after softening inside windows, the coefficients around them held."""
     layout = sampled.layout
@@ -141,8 +167,8 @@ def _relax_windows(
             chosen, runs = system.chosen, system.runs
             core = _core(layout, chosen, runs)
             position = np.cumsum(layout.h[chosen])
-        coefficients = system.solve(stiffness, coefficients)
-        excess = np.where(core, _excess(sampled, runs, False, coefficients, chosen), 0.0)
+        coefficients = system.solve(stiffness, coefficients, straightness)
+        excess = np.where(core, _excess(sampled, runs, False, coefficients, straightness, chosen), 0.0)
         if not (excess > 1.0).any():
             break
         softer = _softened(stiffness[chosen], excess, runs, False)
@@ -156,12 +182,19 @@ def _relax_windows(
 
 
 def _excess(
-    sampled: Sampled, runs: IntArray, wrap: bool, coefficients: FloatArray, chosen: IntArray | None
+    sampled: Sampled,
+    runs: IntArray,
+    wrap: bool,
+    coefficients: FloatArray,
+    straightness: FloatArray,
+    chosen: IntArray | None,
 ) -> FloatArray:
     """Return the largest of offset and local mean over their limits, for every interval chosen."""
     offsets = normal_offsets(sampled, coefficients, chosen)
     live = sampled.live if chosen is None else sampled.live[chosen]
-    return np.maximum(worst_of(offsets) / BAND, local_means(runs, wrap, offsets, live, 4.0) / _DRIFT)
+    straight = (straightness if chosen is None else straightness[chosen]) > 0.0
+    drift = np.where(straight, MEAN_4, _DRIFT)
+    return np.maximum(worst_of(offsets) / BAND, local_means(runs, wrap, offsets, live, 4.0) / drift)
 
 
 def _softened(stiffness: FloatArray, excess: FloatArray, runs: IntArray, wrap: bool) -> FloatArray:

@@ -159,6 +159,50 @@ class System:
             Shape (m + degree * p, d); a periodic piece repeats its first `degree` ones at the end.
         """
         layout = self._layout
+        band = self._penalised(stiffness, straightness)
+        if self._whole and layout.periodic:
+            return self._solve_cyclic(band, self._right.copy())
+        band, right = band[:, : self._count], self._right[: self._count]
+        if self._whole:
+            solution = _banded(band, right)
+        else:
+            assert current is not None
+            solution = current.copy()
+            solution[self._index] += self._change(band, right, current[self._index])
+            if layout.periodic:
+                solution[len(layout) :] = solution[: layout.degree]
+        return solution if self._pins is None else self._exact_ends(solution, self._pins)
+
+    def end_forces(self, stiffness: FloatArray, straightness: FloatArray) -> tuple[FloatArray, FloatArray]:
+        """Return how hard the fit pulls at its pins.
+
+        Args:
+            stiffness, straightness: lengths l and b of every interval, shape (m,).
+
+        Returns:
+            Half the derivative of the sum of squares by the pins, shape (p, 2, d), and half its second derivative
+            by each pin, the other ends held, shape (p, 2).
+        """
+        assert self._whole
+        assert self._pins is not None
+        pins, pieces = self._pins, len(self._layout.lengths)
+        row, ends = self._ends()
+        right = np.hstack([self._right[: self._count], np.zeros((self._count, 2))])
+        for piece, at, side in ends:
+            for a in range(len(row)):
+                right[at + a, -2 + side] += _PIN * row[a]
+            del piece
+        solution = _banded(self._penalised(stiffness, straightness)[:, : self._count], right)
+        force, second = np.zeros_like(pins), np.zeros((pieces, 2))
+        for piece, at, side in ends:
+            reached = sum(row[a] * solution[at + a] for a in range(len(row)))
+            force[piece, side] = _PIN * (pins[piece, side] - reached[:, :-2])
+            second[piece, side] = _PIN * (1.0 - reached[:, -2 + side])
+        return force, second
+
+    def _penalised(self, stiffness: FloatArray, straightness: FloatArray | None = None) -> FloatArray:
+        """Return the matrix with its penalty, as a lower band."""
+        layout = self._layout
         ratio = stiffness[self.chosen] / self._h
         square = ratio * ratio
         penalty = square * square * square * self._h
@@ -172,18 +216,7 @@ class System:
             square = straightness[self.chosen] ** 2
             plane[self._first] = square * square / self._h**3
             self._spread(band, plane, _SECOND)
-        if self._whole and layout.periodic:
-            return self._solve_cyclic(band, self._right.copy())
-        band, right = band[:, : self._count], self._right[: self._count]
-        if self._whole:
-            solution = _banded(band, right)
-        else:
-            assert current is not None
-            solution = current.copy()
-            solution[self._index] += self._change(band, right, current[self._index])
-            if layout.periodic:
-                solution[len(layout) :] = solution[: layout.degree]
-        return solution if self._pins is None else self._exact_ends(solution, self._pins)
+        return band
 
     def _change(self, band: FloatArray, right: FloatArray, current: FloatArray) -> FloatArray:
         """Return the change of a window's coefficients, 0 for those that are held."""
