@@ -38,13 +38,13 @@ def test_walls_nearer_than_the_tolerance_do_not_cross():
 
 
 def test_corner_turns_are_those_of_the_outline():
-    outline = Polyline(noisy(dense(BRACKET), 2.0, 0.1, 1), True)
-    corners, _ = outline_corners(outline, 0.5, None, NO_MARKS)
-    result = best_curve(outline, corners, 0.5, 0.05, "spline", 3, 0.0)
+    outline = Polyline(staircase(turned(dense(BRACKET), 17)), True)
+    corners, _ = outline_corners(outline, 1.0, None, NO_MARKS)
+    result = best_curve(outline, corners, 1.0, 0.1, "spline", 3, 0.0)
     places, turns = corner_turns(result.faired.spline)
     assert len(places) == len(BRACKET)
-    assert np.degrees(turns.sum()) == pytest.approx(360.0, abs=40.0)  # the sides between are nearly straight
-    assert np.degrees(np.sort(np.abs(turns)))[-1] == pytest.approx(90.0, abs=8.0)
+    assert np.degrees(turns.sum()) == pytest.approx(360.0, abs=2.0)  # all the turning of a polygon is at its corners
+    np.testing.assert_allclose(np.degrees(np.sort(turns)), [-71.57, 71.57, 90, 90, 90, 90], atol=3.0)  # atan(3)
 
 
 def test_corners_of_an_outline_in_space_are_found_in_its_plane():
