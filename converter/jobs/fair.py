@@ -13,7 +13,7 @@ from converter.drawing import AnyCurve, Drawing, Profile, Written, read_drawing,
 from converter.errors import LengthError
 from converter.files import check_output
 from converter.jobs.assess import Assessment, assess
-from converter.jobs.forms import Form, Result, best_curve, corner_turns, outline_corners
+from converter.jobs.forms import Form, best_curve, corner_turns, outline_corners
 from converter.jobs.marks import Marks, read_marks
 from converter.jobs.records import DeviationRecord, FairRecord, ProfileRecord
 from converter.units import Length
@@ -142,19 +142,20 @@ def _fair_profile(
         return _as_drawn(profile, need, need.reason)
     form, said = _possible_form(settings.form, profile, version)
     angle = None if settings.corner_angle is None else math.radians(settings.corner_angle)
-    local = marks.in_frame(profile)
-    corners, used = outline_corners(need.outline, need.tolerance, angle, local)
+    origin = need.outline.points[0]  # a given point: far from the origin of the drawing nothing is rounded by this
+    outline = need.outline.moved(-origin)
+    corners, used = outline_corners(outline, need.tolerance, angle, marks.in_frame(profile) - origin)
     marks.used |= used
     allowed = chord_error if chord_error is not None else _CHORD_SHARE * need.tolerance
     result = best_curve(
-        need.outline, corners, need.tolerance, min(allowed, 0.9 * need.tolerance), form, settings.degree, need.slack
+        outline, corners, need.tolerance, min(allowed, 0.9 * need.tolerance), form, settings.degree, need.slack
     )
     if result is None:
         record = _as_drawn(profile, need, "no fair curve keeps the tolerance")
         record.warnings.append("no fair curve keeps the tolerance, so the profile is left as drawn; state a larger one")
         return record
-    written = replace(drawing, profile, result.curve, version)
-    record = _record(profile, need, written, result)
+    written = replace(drawing, profile, result.curve.moved(origin), version)
+    record = _record(profile, need, written, result.faired.spline.moved(origin))
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
     if result.crosses:
         record.warnings.append("the curve crosses or touches itself: two walls are closer than the tolerance")
@@ -212,14 +213,14 @@ def _jaggedness(need: Assessment) -> dict[str, float | str] | None:
     return {"kind": need.jaggedness.kind, "size": need.jaggedness.size, "recommended": need.jaggedness.tolerance}
 
 
-def _record(profile: Profile, need: Assessment, written: Written, result: Result) -> ProfileRecord:
+def _record(profile: Profile, need: Assessment, written: Written, fair: Spline) -> ProfileRecord:
     """Return the record of a faired profile; the certificate is of the curve as the file will hold it."""
     outline, curve, tolerance = need.outline, written.curve, need.tolerance
     assert outline is not None
     deviation = hausdorff(outline, curve, _WIDTH * tolerance)
     certified = deviation.certified + need.slack
     statistics = deviation_statistics(curve, outline, tolerance)
-    points, turns = corner_turns(result.faired.spline)
+    points, turns = corner_turns(fair)
     record = ProfileRecord(
         profile.id,
         profile.layer,
