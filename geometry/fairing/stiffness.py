@@ -29,7 +29,7 @@ __all__ = [
 
 BAND = 0.93  # offset of a sample that counts as leaving the band
 MEAN_4, MEAN_8 = 0.35, 0.30  # local means, of 4 and 8 intervals, that a fit preferred for its shape may have
-_DRIFT = 0.15  # local mean offset that counts as biased
+_DRIFT = 0.12  # local mean offset that counts as biased
 _STIFFEST, _SOFTEST = 40.0, 0.6
 _GROWTH = 0.1
 _SPREAD = 3
