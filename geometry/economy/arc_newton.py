@@ -1,7 +1,7 @@
-"""Polish chains of arcs: equal errors, joints free to slide, tangents exactly continuous, by one banded Newton method.
+"""Polish chains of arcs: equal errors, sliding joints, continuous tangents, by one banded Newton method.
 
-Unknown at every joint are its tangent angle, a shift across and a slide along. Arc i from joint i to i + 1 with chord c,
-chord angle chi and half turn a = (angle_{i+1} - angle_i) / 2 is tangent at both ends when
+Unknown at every joint are its tangent angle, a shift across and a slide along. Arc i from joint i to i + 1 with chord
+c, chord angle chi and half turn a = (angle_{i+1} - angle_i) / 2 is tangent at both ends when
 g = angle_i + angle_{i+1} - 2 chi = 0. The p-norm of the signed distances from samples of the curve to their arcs is
 lowered under these constraints, p rising, all chains at once; each step is one banded linear system.
 """

@@ -105,10 +105,7 @@ def start_chain(track: Track, piece: int, demand: tuple[FloatArray, FloatArray],
     stations, running = demand
     length = stations[-1] - stations[0]
     rising = running + 1e-6 * max(float(running[-1]), 1.0) * (stations - stations[0]) / length
-    if track.closed:
-        share = (np.arange(count) + phase) / count
-    else:
-        share = np.arange(count + 1) / count
+    share = (np.arange(count) + phase) / count if track.closed else np.arange(count + 1) / count
     s = np.interp(share * rising[-1], rising, stations)
     if not track.closed:
         s[0], s[-1] = stations[0], stations[-1]

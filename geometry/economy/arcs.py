@@ -5,7 +5,7 @@ from collections.abc import Generator
 import numpy as np
 
 from geometry.arcs import ArcChain, full_circle
-from geometry.arrays import FloatArray, IntArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.bspline import Spline
 from geometry.economy.arc_newton import Polished, chain_bulges, measure_chains, polish
 from geometry.economy.arc_start import Chain, arc_demand, start_chain
@@ -20,6 +20,7 @@ __all__ = ["fewest_arcs"]
 Trial = tuple[Chain, float]  # a chain to polish, and the share of the chord error to stop at
 Driver = Generator[Trial, Polished, Chain]
 
+LENGTH = 100.0  # size that a curve is brought near before arcs are laid
 GROW_ROUNDS = 12
 STRENGTH = 31.0  # chord errors that a joint's strength has where arcs are as long as they can be
 FIRM, EXACT = 0.985, 0.02  # shares of the chord error at which polishing stops
@@ -33,8 +34,8 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
 
     Between corners the chain is tangent continuous, its joints need not lie on the curve; a closed spline without a
     corner gives a closed chain that is tangent continuous at the seam too. A smooth piece within the chord error of
-    its chord becomes one line. A circle comes back as two semicircles (`full_circle`). A bend of 0.3 radians or more with a radius
-    under a thousandth of the chord error counts as a corner.
+    its chord becomes one line. A circle comes back as two semicircles (`full_circle`). A bend of 0.3 radians or more
+    with a radius under a thousandth of the chord error counts as a corner.
 
     Args:
         spline: degree 1 to 3, planar.
@@ -50,13 +51,19 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
     """
     if not (chord_error > 0.0 and np.isfinite(chord_error)):
         raise GeometryError(f"chord error {chord_error:g} is not a positive number")
-    track = track_of(spline)
-    track = cut_at(track, sharp_nodes(track, SHARP * chord_error))
-    out = _chain_of(track, chord_error, thorough)
+    # in lengths near a common one, so that the count does not depend on the unit; by a power of two: nothing rounds
+    size = float(np.abs(spline.control - spline.control[0]).max())
+    unit = 2.0 ** round(np.log2(LENGTH / size)) if size > 0.0 else 1.0
+    local = Spline(
+        spline.knots, (spline.control - spline.control[0]) * unit, spline.degree, spline.closed, spline.smooth_seam
+    )
+    track, error = track_of(local), chord_error * unit
+    track = cut_at(track, sharp_nodes(track, SHARP * error))
+    out = _chain_of(track, error, thorough)
     while track.chained and len(out.bulges) < 2:  # a loop smaller than the chord error must not fold to nothing
-        chord_error *= 0.25
-        out = _chain_of(track, chord_error, thorough)
-    return out
+        error *= 0.25
+        out = _chain_of(track, error, thorough)
+    return ArcChain(out.points / unit + spline.control[0], out.bulges, out.closed)
 
 
 def _chain_of(track: Track, chord_error: float, thorough: bool) -> ArcChain:
@@ -81,7 +88,7 @@ def _polished(track: Track, chord_error: float, trials: list[Trial]) -> list[Pol
     return polish(track, chord_error, [trial[0] for trial in trials], [trial[1] for trial in trials])
 
 
-def _straight_pieces(track: Track, chord_error: float) -> np.ndarray[tuple[int, ...], np.dtype[np.bool_]]:
+def _straight_pieces(track: Track, chord_error: float) -> BoolArray:
     """Return which open pieces lie within the chord error of their chord."""
     if track.closed:
         return np.zeros(1, dtype=np.bool_)
@@ -99,8 +106,12 @@ def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driv
     accepted = yield from _grown(track, piece, demand, chord_error, thorough)
     if accepted is None:
         accepted = _by_biarcs(track, piece, demand, chord_error)
-    accepted = yield from _shrunk(accepted, chord_error, thorough)
-    accepted = yield from _with_lines(accepted, chord_error, thorough)
+    for _ in range(3):  # what has settled into true lines and arcs may shrink again
+        accepted = yield from _shrunk(accepted, chord_error, thorough)
+        count = accepted.chain.count
+        accepted = yield from _with_lines(accepted, chord_error, thorough)
+        if not len(_weak_joints(accepted.chain, np.zeros(count + 1, dtype=np.bool_), chord_error, chord_error)):
+            break
     return accepted.chain
 
 
@@ -214,10 +225,8 @@ def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator
     return accepted
 
 
-def _weak_joints(
-    chain: Chain, barred: np.ndarray[tuple[int, ...], np.dtype[np.bool_]], most: float, sure: float
-) -> IntArray:
-    """Return the joints to take out, the weakest first: that one if under `most`, others, none adjacent, if under `sure`.
+def _weak_joints(chain: Chain, barred: BoolArray, most: float, sure: float) -> IntArray:
+    """Return the joints to take out, the weakest first: that if under `most`, others, none adjacent, if under `sure`.
 
     The strength of a joint is its jump of curvature times (x y / (x + y))^2 with x, y the chords beside it: about eight
     times the distance by which one arc over both would miss them.

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from geometry.arrays import FloatArray
+from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, bezier_evaluate
 from geometry.economy.track import smooth_runs
 
@@ -40,8 +40,8 @@ def least_arcs(spline: Spline, chord_error: float) -> float:
     """Return the theoretical least number of lines and arcs of a G1 chain within a chord error of a planar spline.
 
     The error of the best G1 chain with free joints is h^3 |k'| / 124.6 on arcs of length h, so that a smooth piece
-    takes 0.2002 e^(-1/3) times the integral of |dk/ds|^(1/3) arcs as e goes to 0. This counts that integral, at least 1,
-    for every smooth piece. A curve whose curvature wiggles inside the band may take far fewer.
+    takes 0.2002 e^(-1/3) times the integral of |dk/ds|^(1/3) arcs as e goes to 0. This counts that integral, at least
+    1, for every smooth piece. A curve whose curvature wiggles inside the band may take far fewer.
 
     Args:
         spline: planar.
@@ -58,5 +58,5 @@ def least_arcs(spline: Spline, chord_error: float) -> float:
     return _counted(density @ _WEIGHTS, starts)
 
 
-def _counted(per_span: FloatArray, starts: np.ndarray[tuple[int, ...], np.dtype[np.intp]]) -> float:
+def _counted(per_span: FloatArray, starts: IntArray) -> float:
     return float(np.maximum(np.add.reduceat(per_span, starts), 1.0).sum())

@@ -160,14 +160,15 @@ def _cap(
 ) -> IntArray:
     """Return the column of the last gate within the caps, where they bind before the band does, else -1."""
     capped = np.full(len(point), -1)
-    over = np.zeros(fan.left.shape, dtype=np.bool_)
+    columns = fan.left.shape[1]
+    over: BoolArray = np.zeros(fan.left.shape, dtype=np.bool_)
     if limits.max_step is not None:
         reach = limits.max_step - (0.0 if limits.on_curve else gates.width)  # a vertex lies that near its gate's centre
         over |= np.abs(gates.centre[fan.index] - point[:, None]) > max(reach, 0.25 * limits.max_step)
     if allowance is not None and limits.max_turn is not None:
         over |= allowance[fan.index] - allowance[np.maximum(ahead - 1, 0)][:, None] > limits.max_turn
     if over.any():
-        at = np.maximum(np.where(over.any(axis=1), np.argmax(over, axis=1), over.shape[1]), 1)
+        at = np.maximum(np.where(over.any(axis=1), np.argmax(over, axis=1), columns), 1)
         capped = np.where((at <= first) & over.any(axis=1), at - 1, -1)
     return capped
 
@@ -198,7 +199,7 @@ def _better_places(
     limits: Limits,
     allowance: FloatArray | None,
 ) -> tuple[ComplexArray, IntArray, _Cast]:
-    """Try other vertices along the same line and keep, row by row, the one from which the next link reaches farthest."""
+    """Try other vertices along the same line; keep, row by row, that from which the next link reaches farthest."""
     point, ahead, following = present
     rows = np.flatnonzero(doubtful)
     some = _subset(view, doubtful)
@@ -294,6 +295,7 @@ def _chord_gap(gates: Gates, fan: _Fan, aim: ComplexArray, column: IntArray) -> 
 
 def _collected(taken: list[tuple[ComplexArray, IntArray, IntArray]]) -> Vertices:
     """Return the vertices gathered step by step in order of blocks."""
-    point, gate, block = (np.concatenate(part) for part in zip(*taken, strict=True))
+    point = np.concatenate([step[0] for step in taken])
+    gate, block = np.concatenate([step[1] for step in taken]), np.concatenate([step[2] for step in taken])
     order = np.argsort(block, kind="stable")
     return Vertices(point[order], gate[order], block[order])

@@ -2,7 +2,7 @@
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline, bezier_evaluate
 from geometry.economy.gates import PER_LINK, PER_PIECE, Limits
 from geometry.economy.track import smooth_runs
