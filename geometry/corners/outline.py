@@ -12,6 +12,7 @@ for the penalty; the filter is its transfer function on an infinite even grid.
 from dataclasses import dataclass
 
 import numpy as np
+from scipy.fft import next_fast_len
 
 from geometry.arrays import FloatArray
 from geometry.polyline import Polyline, points_at
@@ -95,7 +96,7 @@ def even_outline(polyline: Polyline, scale: float) -> EvenOutline:
     total, closed = float(alongs[-1]), polyline.closed
 
     def grid(length: float) -> int:
-        return max(16, round(length / scale * _PER_SCALE))
+        return int(next_fast_len(max(16, round(length / scale * _PER_SCALE)), real=True))
 
     count = grid(total)
     own = np.linspace(0.0, total, count + 1)
