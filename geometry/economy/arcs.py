@@ -210,7 +210,7 @@ def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator
     barred = np.zeros(len(accepted.chain.joint), dtype=np.bool_)
     failures, share = 0, 1.0
     while failures < (3 if thorough else 2):
-        weak = _weak_joints(accepted.chain, barred, (14.0 if thorough else 4.0) * chord_error, chord_error)
+        weak = _weak_joints(accepted.chain, barred, (14.0 if thorough else 8.0) * chord_error, chord_error)
         if not len(weak):
             break
         weak = weak[: max(1, int(np.ceil(share * len(weak))))]
