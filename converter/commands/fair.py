@@ -1,15 +1,13 @@
 """The command `fair`."""
 
 from pathlib import Path
-from typing import Any
+from typing import TYPE_CHECKING, Any
 
 import click
 
 from converter.console import print_table
 from converter.errors import ConverterError
 from converter.files import check_output
-from converter.jobs.fair import FairSettings, fair_drawing
-from converter.jobs.records import FairRecord
 from converter.options import (
     OUTPUT,
     GroupedCommand,
@@ -22,6 +20,9 @@ from converter.options import (
 from converter.report import CAUTION, FAIR_HEADINGS, fair_rows, fair_sentence, write_json
 from converter.units import Length
 from geometry.errors import GeometryError
+
+if TYPE_CHECKING:
+    from converter.jobs.records import FairRecord
 
 __all__ = ["fair"]
 
@@ -111,6 +112,8 @@ def fair(
     What needs no fairing (circles, arcs, splines, clean polygons) and everything that is not a profile stays as it
     is. Exit code 1 means that a profile misses its tolerance; the summary and the record name it.
     """
+    from converter.jobs.fair import FairSettings, fair_drawing  # slow to import, and the help needs none of it
+
     settings = FairSettings(
         tolerance=tolerance if isinstance(tolerance, Length) else None,
         form=form,
@@ -182,7 +185,7 @@ def _outputs(
     return [out_dir / name for name in names]
 
 
-def _print(record: FairRecord) -> None:
+def _print(record: "FairRecord") -> None:
     print(f"{record.input} -> {record.output}, units: {record.units}")
     for warning in record.warnings:
         print(f"note: {warning}")

@@ -3,13 +3,16 @@
 import json
 from collections import Counter
 from pathlib import Path
+from typing import TYPE_CHECKING
 
 import click
 
 from converter.console import print_table
-from converter.jobs.inspect import InspectedProfile, InspectRecord, InspectSettings, inspect_drawing
 from converter.options import GroupedCommand, gap_option, layer_option, option, units_option
 from converter.units import Length
+
+if TYPE_CHECKING:
+    from converter.jobs.inspect import InspectedProfile, InspectRecord
 
 __all__ = ["inspect"]
 
@@ -28,6 +31,8 @@ def inspect(drawing: Path, as_json: bool, layers: tuple[str, ...], gap: Length |
 
     Nothing is changed or written.
     """
+    from converter.jobs.inspect import InspectSettings, inspect_drawing  # slow to import, and the help needs none of it
+
     record = inspect_drawing(drawing, InspectSettings(layers, gap, units))
     if as_json:
         print(json.dumps(record.as_json(), indent=1, allow_nan=False))
@@ -35,7 +40,7 @@ def inspect(drawing: Path, as_json: bool, layers: tuple[str, ...], gap: Length |
     _print(record)
 
 
-def _print(record: InspectRecord) -> None:
+def _print(record: "InspectRecord") -> None:
     print(f"{record.input}: DXF {record.dxf_version}, units: {record.units}")
     if record.extents is not None:
         size = " x ".join(f"{value:.6g}" for value in record.extents["size"][: 3 if record.extents["size"][2] else 2])
@@ -51,7 +56,7 @@ def _print(record: InspectRecord) -> None:
     print(f"next: {record.suggestion}  ({record.reason})" if record.suggestion else f"next: {record.reason}")
 
 
-def _print_entities(record: InspectRecord) -> None:
+def _print_entities(record: "InspectRecord") -> None:
     rows = [(layer, kind, str(count)) for layer, kinds in record.entities.items() for kind, count in kinds.items()]
     if rows:
         print()
@@ -63,7 +68,7 @@ def _print_entities(record: InspectRecord) -> None:
         print(f"not usable: {item['type']} {item['handle']}: {item['reason']}")
 
 
-def _print_profiles(profiles: list[InspectedProfile]) -> None:
+def _print_profiles(profiles: list["InspectedProfile"]) -> None:
     print()
     headings = (
         "profile",
@@ -91,7 +96,7 @@ def _print_profiles(profiles: list[InspectedProfile]) -> None:
         print(f"and {len(profiles) - _SHOWN} more ({kinds}); --json lists them all")
 
 
-def _row(profile: InspectedProfile) -> tuple[str, ...]:
+def _row(profile: "InspectedProfile") -> tuple[str, ...]:
     source = " ".join(kind if count == 1 else f"{count} {kind}" for kind, count in profile.sources.items())
     lengths = ("", "", "")
     if profile.segments is not None:
@@ -109,7 +114,7 @@ def _row(profile: InspectedProfile) -> tuple[str, ...]:
     )
 
 
-def _print_defects(record: InspectRecord) -> None:
+def _print_defects(record: "InspectRecord") -> None:
     found = []
     for gap in record.near_gaps[:_GAPS_SHOWN]:
         x, y, _ = gap["place"]
