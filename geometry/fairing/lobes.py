@@ -9,7 +9,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import normal_offsets
-from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, local_means, spread, worst_of
+from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, concerned, local_means, spread, worst_of
 from geometry.fairing.system import System
 from geometry.fairing.trace import ragged_ranges
 
@@ -52,7 +52,7 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
                 stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
             if not chosen.any():
                 break
-            coefficients = system.solve(stiffness, straightness=straightness)
+            coefficients = _resolved(system, fit, pins, coefficients, stiffness, straightness, chosen)
             for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
                 broken = _excess(fit, coefficients) > factor * allowed
                 if not broken.any():
@@ -63,11 +63,30 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
                 else:
                     stiffness = np.where(back, fit.stiffness, stiffness)
                 frozen |= back
-                coefficients = system.solve(stiffness, straightness=straightness)
+                coefficients = _resolved(system, fit, pins, coefficients, stiffness, straightness, back)
+        coefficients = system.solve(stiffness, None, straightness)  # windows were solved with their surroundings held
         if (_excess(fit, coefficients) > 1.02 * allowed).any():
             break
         best = Fit(sampled, coefficients, stiffness, straightness)
     return best
+
+
+def _resolved(
+    system: System,
+    fit: Fit,
+    pins: FloatArray | None,
+    coefficients: FloatArray,
+    stiffness: FloatArray,
+    straightness: FloatArray,
+    changed: BoolArray,
+) -> FloatArray:
+    """Return the coefficients after a change of stiffness, of windows about it where the profile is long."""
+    sampled = fit.sampled
+    chosen = concerned(sampled.layout, stiffness, changed)
+    if chosen is None:
+        return system.solve(stiffness, None, straightness)
+    window = System(sampled.layout, sampled.points, sampled.live, pins, chosen)
+    return window.solve(stiffness, coefficients, straightness)
 
 
 def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:

@@ -19,6 +19,7 @@ __all__ = [
     "MEAN_4",
     "MEAN_8",
     "Fit",
+    "concerned",
     "limit_growth",
     "local_means",
     "relax",
@@ -34,7 +35,7 @@ _STIFFEST, _SOFTEST = 40.0, 0.6
 _GROWTH = 0.1
 _SPREAD = 3
 _ROUNDS = 40
-_WINDOWED, _WINDOWS, _NARROWER = 600, 4, 0.6
+_WINDOWED, _NARROWER = 600, 0.6
 _REACH, _LEAST_REACH, _MARGIN = 5.0, 16, 12
 
 
@@ -120,24 +121,29 @@ def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, stra
         pins: points where pieces start and end, shape (p, 2, d); None for a periodic piece.
         straightness: of every interval, shape (m,); a piece that breaks the band loses it.
     """
-    layout, live = sampled.layout, sampled.live
-    system = System(layout, sampled.points, live, pins)
-    windows = 0
+    layout = sampled.layout
+    system = System(layout, sampled.points, sampled.live, pins)
     coefficients = system.solve(stiffness, None, straightness)
+    whole = True
     for _ in range(_ROUNDS):
         excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
         hot = excess > 1.0
         if not hot.any():
-            break
+            if whole:
+                break
+            coefficients, whole = system.solve(stiffness, None, straightness), True
+            continue
         straightness = _unbent(layout, straightness, hot)
         stiffness = limit_growth(layout, _softened(stiffness, excess, layout.piece, layout.periodic), _GROWTH)
         stiffness = np.maximum(stiffness, _SOFTEST)
-        if len(layout) > _WINDOWED and windows < _WINDOWS:
-            chosen = np.flatnonzero(_concerned(layout, stiffness, hot))
-            if len(chosen) < _NARROWER * len(layout):
-                stiffness = _relax_windows(sampled, stiffness, pins, straightness, coefficients, chosen)
-                stiffness = np.maximum(limit_growth(layout, stiffness, _GROWTH), _SOFTEST)
-                windows += 1
+        chosen = concerned(layout, stiffness, hot)
+        whole = chosen is None
+        if chosen is None:
+            coefficients = system.solve(stiffness, None, straightness)
+        else:
+            stiffness, coefficients = _relax_windows(sampled, stiffness, pins, straightness, coefficients, chosen)
+            stiffness = np.maximum(limit_growth(layout, stiffness, _GROWTH), _SOFTEST)
+    if not whole:
         coefficients = system.solve(stiffness, None, straightness)
     return Fit(sampled, coefficients, stiffness, straightness)
 
@@ -156,8 +162,8 @@ def _relax_windows(
     straightness: FloatArray,
     coefficients: FloatArray,
     chosen: IntArray,
-) -> FloatArray:
-    """Return the stiffness after softening inside windows, the coefficients around them held."""
+) -> tuple[FloatArray, FloatArray]:
+    """Return stiffness and coefficients after softening inside windows, the coefficients around them held."""
     layout = sampled.layout
     stiffness = stiffness.copy()
     system: System | None = None
@@ -175,10 +181,10 @@ def _relax_windows(
         stiffness[chosen] = np.maximum(_limited(softer, _GROWTH * position + 1e4 * runs), _SOFTEST)
         hot = np.zeros(len(layout), dtype=np.bool_)
         hot[chosen[excess > 1.0]] = True
-        narrower = np.sort(chosen[_concerned(layout, stiffness, hot)[chosen]])
+        narrower = np.sort(chosen[_reached(layout, stiffness, hot)[chosen]])
         if len(narrower) < _NARROWER * len(chosen):
             chosen, system = narrower, None
-    return stiffness
+    return stiffness, coefficients
 
 
 def _excess(
@@ -211,7 +217,15 @@ def _softened(stiffness: FloatArray, excess: FloatArray, runs: IntArray, wrap: b
     return np.asarray(stiffness * np.where(most > 1.0, np.clip(most**-0.7, 0.5, 0.95), 1.0))
 
 
-def _concerned(layout: Layout, stiffness: FloatArray, hot: BoolArray) -> BoolArray:
+def concerned(layout: Layout, stiffness: FloatArray, changed: BoolArray) -> IntArray | None:
+    """Return the intervals of windows about changed ones, or None where solving the whole is as good."""
+    if len(layout) <= _WINDOWED:
+        return None
+    chosen = np.flatnonzero(_reached(layout, stiffness, changed))
+    return chosen if len(chosen) < _NARROWER * len(layout) else None
+
+
+def _reached(layout: Layout, stiffness: FloatArray, hot: BoolArray) -> BoolArray:
     """Return the intervals that a change of stiffness at hot ones can reach noticeably.
 
     The influence of a change decays with the integral of ds / l; what is within 5 of a hot interval is kept, and 16
