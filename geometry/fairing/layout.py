@@ -94,7 +94,10 @@ class Layout:
         """Return points or derivatives by the piece's parameter at the samples of all or some intervals, (m, q, d)."""
         first, h = (self.first, self.h) if intervals is None else (self.first[intervals], self.h[intervals])
         table = self.tables[derivative]
-        columns = [coefficients[first + a] for a in range(self.degree + 1)]
+        if intervals is None and len(self.lengths) == 1:
+            columns = [coefficients[a : a + len(first)] for a in range(self.degree + 1)]
+        else:
+            columns = [coefficients[first + a] for a in range(self.degree + 1)]
         values = np.empty((len(first), PER_INTERVAL, coefficients.shape[1]))
         for q in range(PER_INTERVAL):
             values[:, q] = sum(table[q, a] * column for a, column in enumerate(columns))
@@ -113,3 +116,17 @@ class Layout:
         step = self.h[self.starts[piece]]
         local = np.clip((position / step).astype(np.intp), 0, self.counts[piece] - 1)
         return self.starts[piece] + local, position / step - local
+
+    def windows(self, intervals: IntArray) -> tuple[IntArray, IntArray]:
+        """Return intervals (given increasing) in the order of travel, and the run that each belongs to.
+
+        A run is a stretch of neighbouring intervals of one piece; on a loop it may pass the seam.
+        """
+        size = len(self)
+        if self.periodic and len(intervals) < size and intervals[0] == 0 and intervals[-1] == size - 1:
+            gap = int(np.argmax(np.diff(intervals) > 1)) + 1  # begin after a gap
+            intervals = np.roll(intervals, -gap)
+        step = np.diff(intervals)
+        joined = (step == 1) | (self.periodic & (step == 1 - size))
+        joined &= self.piece[intervals[1:]] == self.piece[intervals[:-1]]
+        return intervals, np.concatenate([[0], np.cumsum(~joined)])

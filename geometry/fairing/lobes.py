@@ -9,7 +9,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.layout import Layout
 from geometry.fairing.samples import normal_offsets
-from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, concerned, local_means, spread, worst_of
+from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, concerned, local_means, spread, window_core, worst_of
 from geometry.fairing.system import System
 from geometry.fairing.trace import ragged_ranges
 
@@ -27,88 +27,102 @@ def remove_lobes(fit: Fit, pins: FloatArray | None) -> Fit:
 
     Lobes are stiffened first, with a margin on either side; those that this leaves are then drawn straight.
     """
-    sampled, layout = fit.sampled, fit.sampled.layout
-    if sampled.points.shape[-1] != 2:
+    if fit.sampled.points.shape[-1] != 2:
         return fit
-    system = System(layout, sampled.points, sampled.live, pins)
-    allowed = np.maximum(_excess(fit, fit.coefficients) + 1e-9, 1.0)
-    frozen = np.zeros(len(layout), dtype=np.bool_)
-    stiffness, straightness = fit.stiffness, fit.straightness
+    work = _Flattening(fit, pins)
+    allowed = np.maximum(work.excess + 1e-9, 1.0)
     best = fit
     for straighten in (False, True):
-        frozen[:] = False
-        coefficients = best.coefficients
+        frozen = np.zeros(len(work.layout), dtype=np.bool_)
         for _ in range(_ROUNDS):
-            start, stop = _small_lobes(layout, coefficients)
-            margin = 0 * start if straighten else np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
-            chosen = _covered(layout, start - margin, stop + margin) & ~frozen
-            if straighten:
-                length = np.zeros(len(layout))
-                owner, member, _ = ragged_ranges(start, stop)
-                length[member] = np.maximum(1.0, _STRAIGHT * (stop - start)[owner] * layout.h[member])
-                straightness = np.where(chosen, np.maximum(_STRAIGHTER * straightness, length), straightness)
-            else:
-                chosen &= stiffness < _STIFFEST
-                stiffness = np.where(chosen, np.minimum(_STIFFER * stiffness, _STIFFEST), stiffness)
+            chosen = work.straighten(frozen) if straighten else work.stiffen(frozen)
             if not chosen.any():
                 break
-            coefficients = _resolved(system, fit, pins, coefficients, stiffness, straightness, chosen)
+            work.solve(chosen)
             for reach, factor in ((7, 1.0), (16, 1.02), (64, 1.02)):  # give back what breaks a limit, wider each time
-                broken = _excess(fit, coefficients) > factor * allowed
+                broken = work.excess > factor * allowed
                 if not broken.any():
                     break
-                back = spread(layout, broken, reach)
+                back = spread(work.layout, broken, reach)
                 if straighten:
-                    straightness = np.where(back, fit.straightness, straightness)
+                    work.straightness = np.where(back, fit.straightness, work.straightness)
                 else:
-                    stiffness = np.where(back, fit.stiffness, stiffness)
+                    work.stiffness = np.where(back, fit.stiffness, work.stiffness)
                 frozen |= back
-                coefficients = _resolved(system, fit, pins, coefficients, stiffness, straightness, back)
-        coefficients = system.solve(stiffness, None, straightness)  # windows were solved with their surroundings held
-        if (_excess(fit, coefficients) > 1.02 * allowed).any():
+                work.solve(back)
+        if (work.excess > 1.02 * allowed).any():
             break
-        best = Fit(sampled, coefficients, stiffness, straightness)
+        best = Fit(fit.sampled, work.coefficients, work.stiffness, work.straightness)
     return best
 
 
-def _resolved(
-    system: System,
-    fit: Fit,
-    pins: FloatArray | None,
-    coefficients: FloatArray,
-    stiffness: FloatArray,
-    straightness: FloatArray,
-    changed: BoolArray,
-) -> FloatArray:
-    """Return the coefficients after a change of stiffness, of windows about it where the profile is long."""
-    sampled = fit.sampled
-    chosen = concerned(sampled.layout, stiffness, changed)
-    if chosen is None:
-        return system.solve(stiffness, None, straightness)
-    window = System(sampled.layout, sampled.points, sampled.live, pins, chosen)
-    return window.solve(stiffness, coefficients, straightness)
+class _Flattening:
+    """A fit whose stiffness changes here and there; only what a change can reach is solved and judged again."""
+
+    def __init__(self, fit: Fit, pins: FloatArray | None) -> None:
+        self.sampled, self.layout, self.pins = fit.sampled, fit.sampled.layout, pins
+        self.system = System(self.layout, self.sampled.points, self.sampled.live, pins)
+        self.coefficients, self.stiffness, self.straightness = fit.coefficients, fit.stiffness, fit.straightness
+        every = np.arange(len(self.layout))
+        self.excess = self._judged(None, self.layout.piece, self.layout.periodic)
+        self.curvature, self.speed = self._bends(every)
+
+    def stiffen(self, frozen: BoolArray) -> BoolArray:
+        """Raise the stiffness of small lobes and of a margin beside them; return where."""
+        start, stop = _small_lobes(self.layout, self.curvature, self.speed)
+        margin = np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
+        chosen = _covered(self.layout, start - margin, stop + margin) & ~frozen & (self.stiffness < _STIFFEST)
+        self.stiffness = np.where(chosen, np.minimum(_STIFFER * self.stiffness, _STIFFEST), self.stiffness)
+        return chosen
+
+    def straighten(self, frozen: BoolArray) -> BoolArray:
+        """Raise the straightness of small lobes; return where."""
+        start, stop = _small_lobes(self.layout, self.curvature, self.speed)
+        length = np.zeros(len(self.layout))
+        owner, member, _ = ragged_ranges(start, stop)
+        length[member] = np.maximum(1.0, _STRAIGHT * (stop - start)[owner] * self.layout.h[member])
+        chosen = (length > 0.0) & ~frozen
+        self.straightness = np.where(chosen, np.maximum(_STRAIGHTER * self.straightness, length), self.straightness)
+        return chosen
+
+    def solve(self, changed: BoolArray) -> None:
+        """Solve again after a change, in windows about it where the profile is long."""
+        layout, sampled = self.layout, self.sampled
+        chosen = concerned(layout, self.stiffness, changed)
+        if chosen is None:
+            self.coefficients = self.system.solve(self.stiffness, None, self.straightness)
+            self.excess = self._judged(None, layout.piece, layout.periodic)
+            self.curvature, self.speed = self._bends(np.arange(len(layout)))
+            return
+        window = System(layout, sampled.points, sampled.live, self.pins, chosen)
+        self.coefficients = window.solve(self.stiffness, self.coefficients, self.straightness)
+        core = window_core(layout, window.chosen, window.runs)
+        self.excess[window.chosen[core]] = self._judged(window.chosen, window.runs, False)[core]
+        self.curvature[window.chosen], self.speed[window.chosen] = self._bends(window.chosen)
+
+    def _judged(self, chosen: IntArray | None, runs: IntArray, wrap: bool) -> FloatArray:
+        """Return the largest of the offsets and local means over their limits, for every interval chosen."""
+        offsets = normal_offsets(self.sampled, self.coefficients, chosen)
+        live = self.sampled.live if chosen is None else self.sampled.live[chosen]
+        return np.maximum.reduce(
+            [
+                worst_of(offsets) / BAND,
+                local_means(runs, wrap, offsets, live, 4.0) / MEAN_4,
+                local_means(runs, wrap, offsets, live, 8.0) / MEAN_8,
+            ]
+        )
+
+    def _bends(self, chosen: IntArray) -> tuple[FloatArray, FloatArray]:
+        """Return curvature and speed at the middle of intervals."""
+        t = np.array(0.5)
+        first, second = (self.layout.evaluate(self.coefficients, chosen, t, k) for k in (1, 2))
+        speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
+        return (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3, speed
 
 
-def _excess(fit: Fit, coefficients: FloatArray) -> FloatArray:
-    """Return the largest of the offsets and local means over their limits, for every interval."""
-    layout, live = fit.sampled.layout, fit.sampled.live
-    offsets = normal_offsets(fit.sampled, coefficients)
-    return np.maximum.reduce(
-        [
-            worst_of(offsets) / BAND,
-            local_means(layout.piece, layout.periodic, offsets, live, 4.0) / MEAN_4,
-            local_means(layout.piece, layout.periodic, offsets, live, 8.0) / MEAN_8,
-        ]
-    )
-
-
-def _small_lobes(layout: Layout, coefficients: FloatArray) -> tuple[IntArray, IntArray]:
+def _small_lobes(layout: Layout, curvature: FloatArray, speed: FloatArray) -> tuple[IntArray, IntArray]:
     """Return [start, stop) of the small lobes that have a neighbour lobe in their piece, in intervals."""
-    middle = np.arange(len(layout))
-    t = np.full(len(layout), 0.5)
-    first, second = (layout.evaluate(coefficients, middle, t, k) for k in (1, 2))
-    speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
-    curvature = (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3
+    curvature = curvature.copy()
     curvature[np.abs(curvature) < _FLAT] = 0.0
     start, stop = _runs(layout, np.sign(curvature))
     turning = np.concatenate([[0.0], np.cumsum(np.abs(curvature) * speed * layout.h)])

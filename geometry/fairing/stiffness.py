@@ -25,6 +25,7 @@ __all__ = [
     "relax",
     "spread",
     "start_stiffness",
+    "window_core",
     "worst_of",
 ]
 
@@ -113,7 +114,8 @@ def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, stra
     """Soften a fit until it keeps the band and its size.
 
     On a long profile only windows about the places that ask for it are solved again, so that a stretch costs its own
-    rounds only; the whole is solved again at the end.
+    rounds only. What lies around a window is held, which keeps the curve as smooth as before but no longer the exact
+    minimum; the band and the local means are always judged on the whole curve as it is.
 
     Args:
         sampled: samples and layout.
@@ -124,27 +126,24 @@ def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, stra
     layout = sampled.layout
     system = System(layout, sampled.points, sampled.live, pins)
     coefficients = system.solve(stiffness, None, straightness)
-    whole = True
+    excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
     for _ in range(_ROUNDS):
-        excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
         hot = excess > 1.0
         if not hot.any():
-            if whole:
-                break
-            coefficients, whole = system.solve(stiffness, None, straightness), True
-            continue
+            break
         straightness = _unbent(layout, straightness, hot)
         stiffness = limit_growth(layout, _softened(stiffness, excess, layout.piece, layout.periodic), _GROWTH)
         stiffness = np.maximum(stiffness, _SOFTEST)
         chosen = concerned(layout, stiffness, hot)
-        whole = chosen is None
         if chosen is None:
             coefficients = system.solve(stiffness, None, straightness)
+            excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
         else:
             stiffness, coefficients = _relax_windows(sampled, stiffness, pins, straightness, coefficients, chosen)
             stiffness = np.maximum(limit_growth(layout, stiffness, _GROWTH), _SOFTEST)
-    if not whole:
-        coefficients = system.solve(stiffness, None, straightness)
+            chosen, runs = layout.windows(chosen)
+            core = window_core(layout, chosen, runs)  # nothing has changed outside
+            excess[chosen[core]] = _excess(sampled, runs, False, coefficients, straightness, chosen)[core]
     return Fit(sampled, coefficients, stiffness, straightness)
 
 
@@ -171,7 +170,7 @@ def _relax_windows(
         if system is None:
             system = System(layout, sampled.points, sampled.live, pins, chosen)
             chosen, runs = system.chosen, system.runs
-            core = _core(layout, chosen, runs)
+            core = window_core(layout, chosen, runs)
             position = np.cumsum(layout.h[chosen])
         coefficients = system.solve(stiffness, coefficients, straightness)
         excess = np.where(core, _excess(sampled, runs, False, coefficients, straightness, chosen), 0.0)
@@ -241,7 +240,7 @@ def _reached(layout: Layout, stiffness: FloatArray, hot: BoolArray) -> BoolArray
     return (np.minimum(depth - before, after - depth) <= _REACH) | spread(layout, hot, _LEAST_REACH)
 
 
-def _core(layout: Layout, chosen: IntArray, runs: IntArray) -> BoolArray:
+def window_core(layout: Layout, chosen: IntArray, runs: IntArray) -> BoolArray:
     """Return the intervals of windows far enough from held neighbours to be judged."""
     index = np.arange(len(chosen))
     starts = np.concatenate([[0], 1 + np.flatnonzero(np.diff(runs))])

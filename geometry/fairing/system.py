@@ -74,13 +74,7 @@ class System:
         """Number the coefficients of the runs one behind another, and mark those that are held."""
         layout = self._layout
         size, degree = len(layout), layout.degree
-        if layout.periodic and len(intervals) < size and intervals[0] == 0 and intervals[-1] == size - 1:
-            gap = int(np.argmax(np.diff(intervals) > 1)) + 1  # begin after a gap, so that a run may pass the seam
-            intervals = np.roll(intervals, -gap)
-        step = np.diff(intervals)
-        joined = (step == 1) | (layout.periodic & (step == 1 - size))
-        joined &= layout.piece[intervals[1:]] == layout.piece[intervals[:-1]]
-        run = np.concatenate([[0], np.cumsum(~joined)])
+        intervals, run = layout.windows(intervals)
         self.chosen, self.runs = intervals, run
         self._first = np.arange(len(intervals)) + degree * run
         self._count = len(intervals) + degree * (int(run[-1]) + 1)
@@ -89,7 +83,7 @@ class System:
             self._index[self._first + a] = layout.first[intervals] + a
         if layout.periodic:
             self._index %= size
-        starts = np.flatnonzero(np.concatenate([[True], ~joined]))
+        starts = np.flatnonzero(np.diff(run, prepend=-1))
         stops = np.append(starts[1:], len(intervals)) - 1
         held = np.zeros(self._count, dtype=np.bool_)
         local, counts = layout.local[intervals], layout.counts[layout.piece[intervals]]
