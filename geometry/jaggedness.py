@@ -1,6 +1,6 @@
 """What kind of polyline this is: a pixel staircase, a chamfered one, hand noise, sparse stations, or clean.
 
-The recommended tolerance is one pixel pitch for staircases and four standard deviations for noise. The thresholds were
+The recommended tolerance is one pixel pitch for staircases and 4.8 standard deviations for noise. The thresholds were
 chosen on traced outlines of known kind; they are empirical.
 """
 
@@ -17,7 +17,7 @@ __all__ = ["Jaggedness", "Kind", "estimate", "is_clean_polygon"]
 Kind = Literal["staircase", "chamfered", "noise", "none", "stations"]
 
 _HEADING = np.radians(0.5)
-_NOISE_SIGMAS = 4.0
+_NOISE_SIGMAS = 4.8
 _NOISE_VERTICES = 20
 _STATION_SAGITTA = 1e-4  # of the extent: chords that leave a curve by more are no evidence of its shape
 
@@ -60,7 +60,7 @@ def estimate(polyline: Polyline) -> Jaggedness:
             "noise",
             sigma,
             _NOISE_SIGMAS * sigma,
-            f"the points scatter by {sigma:.3g} (standard deviation); 4 times that takes the scatter out",
+            f"the points scatter by {sigma:.3g} (standard deviation); {_NOISE_SIGMAS:g} times that takes the scatter out",
         )
     if _looks_like_stations(merged, edges, turns):
         reason = "the points are sparse and lie on a smooth curve: the chords between them are no evidence"
