@@ -261,10 +261,10 @@ def test_a_circle_traced_at_one_pixel_keeps_its_radius(tmp_path, radius, form):
     save_outline(tmp_path / "in.dxf", staircase(circle(float(radius), (0.3, 0.4))))
     record, output = faired(tmp_path / "in.dxf", form=form)
     written = entity(output, record.profiles[0].id)
-    if form == "arcs" and radius == 30:
+    if form == "arcs":
         assert written.dxftype() == "CIRCLE"
         assert written.dxf.radius == pytest.approx(radius, abs=0.15)
-        np.testing.assert_allclose(tuple(written.dxf.center)[:2], (0.3, 0.4), atol=0.15)
+        np.testing.assert_allclose(tuple(written.dxf.center)[:2], (0.3, 0.4), atol=0.25)
     away = np.linalg.norm(dense_points(written) - [0.3, 0.4], axis=1)
     assert away.mean() == pytest.approx(radius, abs=0.15)
     assert math.sqrt(record.profiles[0].area_out / math.pi) == pytest.approx(radius, abs=0.15)

@@ -5,9 +5,10 @@ from typing import Literal
 
 import numpy as np
 
-from geometry.arcs import ArcChain
+from geometry.arcs import ArcChain, full_circle
 from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline
+from geometry.circle import whole_circle
 from geometry.corners import Corners, corners_by_angle, find_corners, pin_corners
 from geometry.deviation import TwoSided, hausdorff
 from geometry.errors import GeometryError
@@ -58,7 +59,10 @@ def outline_corners(
     if angle is not None:
         found = corners_by_angle(outline, angle)
     elif outline.dimension == 2:
-        found = find_corners(outline, tolerance)
+        if whole_circle(outline, tolerance) is not None:  # small ones are short enough for corners to be seen in them
+            found = Corners(np.zeros(0), np.zeros((0, 2)), np.zeros(0))
+        else:
+            found = find_corners(outline, tolerance)
     else:
         found = _spatial_corners(outline, tolerance)
     return pin_corners(found, outline, marks, tolerance)
@@ -89,7 +93,8 @@ def best_curve(
     """Return the curve of a form that keeps the tolerance, certified; the best one found where none does.
 
     The fairing gets the whole tolerance at first and the economy the chord error; where the certified distance of
-    what comes out passes the tolerance, the economy and then the fairing get less.
+    what comes out passes the tolerance, the economy and then the fairing get less. A circle among arcs is taken
+    straight from the outline: the fair curve wavers about it by more than the chord error where the trace does.
 
     Args:
         outline: cleaned, the profile as a polyline.
@@ -104,10 +109,16 @@ def best_curve(
         None where no fair curve was found at all.
     """
     best: Result | None = None
+    circle = _circle(outline, tolerance) if form == "arcs" and not len(corners.along) else None
     for share in _CAREFUL:
         faired = fair_outline(outline, corners, share * tolerance, degree)
         if faired.as_given:
             continue
+        if circle is not None:
+            result = _certified(outline, circle, faired, tolerance, slack)
+            if result.within:
+                return result
+            circle = None
         for part in (*_ECONOMY, 0.0) if form == "spline" else _ECONOMY:
             curve = _economised(faired.spline, part * chord_error, form)
             if curve is None:
@@ -118,6 +129,15 @@ def best_curve(
             if result.within and not result.crosses:
                 return result
     return best
+
+
+def _circle(outline: Polyline, tolerance: float) -> ArcChain | None:
+    """Return the circle that an outline was traced from, in the outline's direction; None where it was none."""
+    found = whole_circle(outline, tolerance)
+    if found is None:
+        return None
+    chain = full_circle(*found)
+    return chain if outline.area() > 0.0 else chain.reversed()
 
 
 def _certified(
