@@ -116,6 +116,20 @@ def test_profiles_left_as_drawn_report_a_deviation_of_nothing(tmp_path):
     assert hole.length_in == hole.length_out == pytest.approx(2.0 * math.pi * 3.3)
 
 
+def test_a_chain_of_lines_and_arcs_is_left_and_its_area_reported(tmp_path):
+    doc = new_drawing()
+    doc.modelspace().add_line((0, 0), (20, 0))
+    doc.modelspace().add_arc((20, 5), 5, -90, 90)
+    doc.modelspace().add_line((0, 10), (20, 10))
+    doc.modelspace().add_arc((0, 5), 5, 90, 270)
+    doc.saveas(tmp_path / "in.dxf")
+    record, output = faired(tmp_path / "in.dxf")
+    (profile,) = record.profiles
+    assert "true curve" in profile.left_as_drawn
+    assert abs(profile.area_in) == abs(profile.area_out) == pytest.approx(200.0 + 25.0 * math.pi, rel=1e-5)
+    assert [e.dxftype() for e in ezdxf.readfile(output).modelspace()] == ["LINE", "ARC", "LINE", "ARC"]
+
+
 def test_redraw_takes_true_curves_too(tmp_path):
     doc = new_drawing()
     doc.modelspace().add_circle((20, 12), 30.0)

@@ -118,6 +118,16 @@ class Profile:
         """Return the arc length, drawing units."""
         return sum(part.length() for part in self.parts)
 
+    def area(self) -> float:
+        """Return the signed area in the plane of the profile, anticlockwise positive; 0 when open or not planar.
+
+        Of a single curve it is exact; a chain of several is flattened to 1e-6 of its size first.
+        """
+        if len(self.parts) == 1:
+            return self.parts[0].area()
+        low, high = self.world_bounds()
+        return self.flatten(1e-6 * float(np.linalg.norm(high - low))).area()
+
     def world_bounds(self) -> tuple[FloatArray, FloatArray]:
         """Return the least and greatest world coordinates, shapes (3,); those of a tilted curve to 1e-3 of its size."""
         low = np.full(3, np.inf)

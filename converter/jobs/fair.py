@@ -179,7 +179,7 @@ def _possible_form(form: Form, profile: Profile, version: str) -> tuple[Form, li
 def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
     """Return the record of a profile that is not touched."""
     length = profile.length()
-    area = profile.parts[0].area() if len(profile.parts) == 1 else 0.0
+    area = profile.area()
     record = ProfileRecord(
         profile.id,
         profile.layer,

@@ -176,7 +176,7 @@ def _inspected(profile: Profile) -> InspectedProfile:
         dimension=profile.dimension,
         vertices=profile.vertices_in,
         length=profile.length(),
-        area=_area(profile),
+        area=profile.area(),
         segments=None
         if lengths is None
         else {
@@ -203,13 +203,6 @@ def _crossings(profile: Profile) -> Any:
     except GeometryError:  # it has too few distinct points to cross itself in a way that means anything
         return None
     return self_crossings(outline)
-
-
-def _area(profile: Profile) -> float:
-    if len(profile.parts) == 1:
-        return profile.parts[0].area()
-    low, high = profile.world_bounds()
-    return profile.flatten(1e-6 * float(np.linalg.norm(high - low))).area()
 
 
 def _looks_like(assessment: Assessment) -> str:
