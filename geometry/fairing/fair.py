@@ -122,9 +122,11 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
     sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
     straight = straight_pieces(sampled)
     fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins, straightness_of(sampled, straight))
+    # a corner that was off may have cost a piece its straightness: it is asked for again where corners have settled
+    stiffness = np.where(straight[sampled.layout.piece], start_stiffness(sampled.layout), fit.stiffness)
+    fit = Fit(sampled, fit.coefficients, stiffness, straightness_of(sampled, straight))
     nodes = _settled(trace, fit, nodes)
     again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
-    straight &= np.bincount(fit.sampled.layout.piece, fit.straightness, len(straight)) > 0.0
     fit = relax(again, _carried(fit, again.layout), nodes.pins, straightness_of(again, straight))
     fit = remove_lobes(fit, nodes.pins)
     return repair(trace, fit, nodes)
