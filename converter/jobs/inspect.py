@@ -7,8 +7,6 @@ from dataclasses import asdict, dataclass, field
 from pathlib import Path
 from typing import Any
 
-import numpy as np
-
 import converter
 from converter.drawing import Drawing, Profile, read_drawing
 from converter.jobs.assess import Assessment, assess, outline_of
