@@ -18,6 +18,7 @@ import converter.cli
 ROOT = Path(__file__).parent.parent
 README = ROOT / "README.md"
 _BLOCK = re.compile(r"^```console\n(.*?)^```$", re.MULTILINE | re.DOTALL)
+_COUNTED = re.compile(r" (control points|arcs|lines|vertices)")
 _NUMBER = re.compile(r"[-+]?\d+\.?\d*(?:e[-+]?\d+)?")
 
 
@@ -85,18 +86,23 @@ def run_all(found, folder):
 def agrees(shown, printed):
     """Tell whether a shown line stands for a printed one.
 
-    Words must be the same. Numbers written with a point may differ by a twentieth or by 0.005, whichever is more,
-    since other processors and library releases round otherwise; whole numbers may differ by one in twenty. Spaces
-    count as one, since columns are as wide as their numbers.
+    Words and whole numbers must be the same, but other processors and library releases round otherwise: numbers
+    written with a point may differ by a twentieth or by 0.005, whichever is more, and how many control points, arcs,
+    lines, vertices and inflections come out by a fifth or by 2. Spaces count as one, since columns are as wide as their
+    numbers.
     """
     a, b = " ".join(shown.split()), " ".join(printed.split())
     if _NUMBER.sub("#", a) != _NUMBER.sub("#", b):
         return False
-    for one, other in zip(_NUMBER.findall(a), _NUMBER.findall(b), strict=True):
-        x, y = float(one), float(other)
-        slack = 0.05 * max(abs(x), abs(y)) + 1e-12
-        if "." in one or "e" in one or "." in other or "e" in other:
-            slack = max(slack, 0.005)
-        if abs(x - y) > slack:
-            return False
-    return True
+    return all(_near(one, other, a) for one, other in zip(_NUMBER.finditer(a), _NUMBER.finditer(b), strict=True))
+
+
+def _near(one, other, line):
+    if any("." in number or "e" in number for number in (one[0], other[0])):
+        share, least = 0.05, 0.005
+    elif _COUNTED.match(line, one.end()) or line.endswith("-> ", 0, one.start()):
+        share, least = 0.2, 2.0
+    else:
+        return one[0] == other[0]
+    x, y = float(one[0]), float(other[0])
+    return abs(x - y) <= max(share * max(abs(x), abs(y)), least)
