@@ -10,28 +10,16 @@ import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline, join
-from geometry.economy.spline_fit import Basis, Fit, measure
-from geometry.economy.spline_knots import (
-    State,
-    add_where_over,
-    bent,
-    level,
-    place,
-    refit,
-    remove,
-    respaced,
-    smoothed,
-    spacing,
-    uniform,
-)
-from geometry.economy.spline_shape import Guard
+from geometry.economy.spline_fit import Fit, measure
+from geometry.economy.spline_knots import State
+from geometry.economy.spline_shape import Guard, Verdict
 from geometry.economy.spline_source import Source, cut, sample, straight, turned_to_corner
+from geometry.economy.spline_ways import evenly, thinned
 
 __all__ = ["fewest_knots"]
 
 _PER_SPAN = 4  # samples a span of the source while fitting
 _CHECK = 16  # samples a span of the source for the last check
-_AIM = 0.985  # share of the chord error that the fit may use; the rest covers what lies between samples
 _LINE = 0.05  # share of the chord error within which a piece counts as drawn straight
 _WAYS = (
     ("even", 1.0),
@@ -45,15 +33,11 @@ _WAYS = (
     ("even", 8.0),
     ("even", 11.0),
     ("thin", 4.0),
-    ("thin", 16.0),
-    ("own", 0.0),
-)  # tried in turn until a piece is near enough and fair: equal spans, or knots for a finer chord error thinned
-_HOPEFUL = 4.0  # ratio up to which levelling may still bring a fit within the chord error
-_BENT = (0.01, 0.03)  # pull of the source's curvature where a thinned fit is not fair
+    ("last", 16.0),
+    ("last", 0.0),
+)  # tried in turn until a piece is near enough and fair: equal spans, or knots laid for a finer chord error by a
+# factor (0: as close as the source's own) and thinned; the last only where nothing else was even nearly as fair
 _PASS = 0.995  # share of the chord error within which a piece is accepted
-RESP = 2
-_DENSER = 2  # times that knots are laid a third more densely in pieces that start out unfair
-_EXTRA = 1.25  # knots to begin with, over what the spacing field asks for
 
 
 def fewest_knots(spline: Spline, chord_error: float) -> Spline:
@@ -62,9 +46,12 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     Pieces between corners are C2 (degree 3) or C1 (degree 2) with simple interior knots; corners are knots of full
     multiplicity at the same points. Straight pieces become one span with control points exactly on a line. A
     closed spline whose seam is smooth and that has no corner stays closed with a seam as smooth as any
-    knot, at a knot of the result; one that has corners begins at its first corner. A piece for which
-    nothing cheaper is found that is as fair (no more inflections, no more curvature extrema; degree 2:
-    inflections only, for its curvature jumps) comes back as it was.
+    knot, at a knot of the result; one that has corners begins at its first corner.
+
+    No piece gets more curvature extrema or more inflections than it had, as `geometry.economy.spline_shape` counts
+    them (degree 2: inflections only, for its curvature jumps; 3-D: extrema only). Where that cannot be had
+    cheaply, bends to the other side are let pass that turn less than 1 degree and stand off by less than a fifth of
+    the chord error. A piece for which even that finds nothing shorter comes back as it was.
 
     Args:
         spline: degree 1 to 3, 2-D or 3-D; degree 1 comes back unchanged.
@@ -84,36 +71,51 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     dense = sample(rotated, _CHECK)
     old = cut(rotated)
     new: list[Spline] = list(old)
+    second: dict[int, Spline] = {}  # near enough, but with more bends of the small sort than the source
     line = straight(source, _LINE * chord_error)
     waiting = ~line
     for way, amount in _WAYS:
+        if way == "last":
+            waiting[list(second)] = False
         if not waiting.any():
             break
         if way == "line":
             line |= waiting & straight(source, 0.97 * chord_error)
             waiting &= ~line
             continue
-        tried, state = _attempt(source, waiting, chord_error, way, amount)
+        if way == "even":
+            tried, state = evenly(source, waiting, chord_error, int(amount))
+        else:
+            tried, state = waiting.copy(), thinned(source.only(waiting), chord_error, amount)
         if state is None:
             continue
         part = source.only(tried)
-        good = _accept(part, dense.only(tried), state, chord_error)
-        if source.periodic:
-            if good[0]:
-                better = _clamped(state.fit, source.high[0])
-                return better.moved(origin) if len(better.control) < len(spline.control) else spline
-            continue
+        near, verdict = _checked(part, dense.only(tried), state, chord_error)
         for i, at in enumerate(np.flatnonzero(tried).tolist()):
-            if good[i]:
-                better = _piece(state.fit, i, part)
-                new[at] = better if len(better.control) < len(old[at].control) else old[at]
-        waiting[np.flatnonzero(tried)[good]] = False
+            if not near[i] or verdict.badly[i]:
+                continue
+            better = _clamped(state.fit, source.high[0]) if source.periodic else _piece(state.fit, i, part)
+            if not verdict.worse[i]:
+                waiting[at] = False
+                new[at] = _shorter(better, new[at])
+            else:
+                second[at] = _shorter(better, second.get(at, better))
+    for at, better in second.items():
+        if new[at] is old[at]:
+            new[at] = _shorter(better, old[at])
+    if source.periodic:
+        return spline if new[0] is old[0] else new[0].moved(origin)
     for i in np.flatnonzero(line).tolist():
         new[i] = _line(old[i], source.lengths[i])
     if all(a is b for a, b in zip(new, old, strict=True)):
         return spline
     there = cut(turned_to_corner(spline))
     return join([_at_home(piece, home) for piece, home in zip(new, there, strict=True)], spline.closed)
+
+
+def _shorter(a: Spline, b: Spline) -> Spline:
+    """Return the first of two splines if it has fewer control points, else the second."""
+    return a if len(a.control) < len(b.control) else b
 
 
 def _at_home(piece: Spline, home: Spline) -> Spline:
@@ -123,108 +125,8 @@ def _at_home(piece: Spline, home: Spline) -> Spline:
     return Spline(piece.knots, control, piece.degree)
 
 
-def _attempt(
-    source: Source, pieces: BoolArray, chord_error: float, way: str, amount: float
-) -> tuple[BoolArray, State | None]:
-    """Fit some of the pieces in one of the ways; return which were fitted, shape (pieces,), and their state."""
-    if way == "even":
-        return _evenly(source, pieces, chord_error, int(amount))
-    return pieces, _thinned(source.only(pieces), chord_error, amount)
-
-
-def _evenly(source: Source, pieces: BoolArray, chord_error: float, number: int) -> tuple[BoolArray, State | None]:
-    """Fit with a number of equal spans a piece those pieces for which that looks hopeful at the first fit."""
-    pieces = pieces & (source.spans > number)
-    if not pieces.any() or (source.periodic and number < source.degree + 2):
-        return pieces, None
-    part = source.only(pieces)
-    allowed = np.full(len(part.along), _AIM * chord_error)
-    state = refit(part, Basis(part, uniform(part, np.full(len(part.low), number))), part.along, part.step, allowed)
-    if state is None:
-        return pieces, None
-    hopeful = np.maximum.reduceat(state.ratio, part.first[:-1]) <= _HOPEFUL
-    if not hopeful.any():
-        return pieces, None
-    if not hopeful.all():
-        kept = hopeful[part.piece]
-        chosen = pieces.copy()
-        chosen[np.flatnonzero(pieces)[~hopeful]] = False
-        pieces, part, allowed, u = chosen, source.only(chosen), allowed[kept], state.u[kept]
-        basis = Basis(part, uniform(part, np.full(len(part.low), number)))
-        state = refit(part, basis, u, part.step, allowed)
-    for _ in range(3):
-        if state is not None and state.ratio.max() > 1.0:
-            state = level(part, state, allowed)
-    return pieces, state
-
-
-def _thinned(source: Source, chord_error: float, finer: float) -> State | None:
-    """Lay knots, finer than the chord error asks for by a factor (0: as close as the source's own), then thin them."""
-    allowed = np.full(len(source.along), _AIM * chord_error)
-    closest = 0.5 * source.lengths / source.spans
-    guard = Guard(source, chord_error)
-    if finer:
-        state = _laid(source, guard, allowed, closest, finer)
-    else:
-        state = refit(source, Basis(source, uniform(source, source.spans)), source.along, source.step, allowed)
-    if state is None:
-        return None
-    state = remove(source, state, allowed, guard)
-    state = _mend(source, state, allowed, closest)
-    for _ in range(RESP):
-        again = respaced(source, state, allowed, guard)
-        if again is None or again.ratio.max() > 1.0:
-            break
-        state = again
-    for share in _BENT:
-        worse = guard.check(state.fit, state.u).worse
-        if not worse.any():
-            break
-        trial = bent(source, state, allowed, worse, share)
-        if trial is None or trial.ratio.max() > 1.0:
-            break
-        state = trial
-    return state
-
-
-def _laid(
-    source: Source, guard: Guard, allowed: FloatArray, closest: FloatArray, finer: float
-) -> State | None:
-    """Lay knots by the spacing field, some more than it asks for, and more again in pieces that come out unfair."""
-    need = smoothed(source, spacing(source, allowed / finer), 0.75)
-    state: State | None = None
-    for turn in range(_DENSER + 1):
-        state = refit(source, Basis(source, place(source, need, _EXTRA)), source.along, source.step, allowed)
-        if state is None:
-            break
-        state = _mend(source, state, allowed, closest)
-        if turn == _DENSER:
-            break
-        worse = guard.check(state.fit, state.u).worse
-        if not worse.any():
-            break
-        need = np.where(worse[source.piece], 0.75 * need, need)
-    return state
-
-
-def _mend(source: Source, state: State, allowed: FloatArray, closest: FloatArray) -> State:
-    """Level, then halve spans that are over, a few times."""
-    for _ in range(6):
-        for _ in range(2):
-            if state.ratio.max() <= 1.0:
-                return state
-            state = level(source, state, allowed) or state
-        if state.ratio.max() <= 1.0:
-            break
-        more = add_where_over(source, state, closest)
-        if more is None:
-            break
-        state = refit(source, Basis(source, more), state.u, state.weight, allowed) or state
-    return state
-
-
-def _accept(source: Source, dense: Source, state: State, chord_error: float) -> BoolArray:
-    """Tell which pieces are close enough at dense samples, and as fair as they were, shape (pieces,).
+def _checked(source: Source, dense: Source, state: State, chord_error: float) -> tuple[BoolArray, Verdict]:
+    """Tell at dense samples which pieces are near enough, shape (pieces,), and how fair they are.
 
     A point of the fit between two samples is at most half their distance along the fit away from one of them; so
     where that is a good deal more than along the source, half of the surplus is added to the distances.
@@ -240,7 +142,7 @@ def _accept(source: Source, dense: Source, state: State, chord_error: float) -> 
     surplus = 0.5 * np.maximum(run - 1.25 * np.where(inside, np.diff(dense.along), 0.0), 0.0)
     between = np.append(np.maximum(distance[1:], distance[:-1]) + surplus, 0.0)
     worst = np.maximum.reduceat(np.where(np.append(inside, False), between, distance), dense.first[:-1])
-    return (worst <= _PASS * chord_error) & ~Guard(dense, chord_error, 1.2).check(state.fit, u).worse
+    return worst <= _PASS * chord_error, Guard(dense, chord_error, 1.1).check(state.fit, u)
 
 
 def _speed(fit: Fit, u: FloatArray) -> FloatArray:

@@ -15,6 +15,8 @@ from geometry.economy.spline_source import Source
 
 __all__ = ["Basis", "Bend", "Fit", "measure", "solve"]
 
+_BLOCK = 4096  # samples summed at a time
+
 
 class Basis:
     """B-spline basis of all pieces behind one another, as polynomials of the local parameter a span.
@@ -186,23 +188,25 @@ def _normal(
     """
     q, d, n = matrix.shape[2], len(target), len(t)
     pairs = [(i, j) for i in range(d) for j in range(i, d)]
-    form = np.empty((len(pairs), n))
     pull = weight * (1.0 - slide)
+    form = -pull * source.along_tangent
     for row, (i, j) in enumerate(pairs):
-        np.multiply(-pull, source.tangent[i] * source.tangent[j], out=form[row])
         if i == j:
             form[row] += weight
     right = weight * target - pull * (source.tangent * target).sum(axis=0) * source.tangent
-    powers = np.empty((2 * q - 1, n))
-    powers[0] = 1.0
-    for k in range(1, 2 * q - 1):
-        np.multiply(powers[k - 1], t, out=powers[k])
-    rows = np.concatenate([(powers[:, None] * form).reshape(-1, n), (powers[:q, None] * right).reshape(-1, n)])
-    runs = np.flatnonzero(np.diff(span, prepend=-1))
-    s = len(basis.start)
-    sums = np.zeros((len(rows), s))
-    sums[:, span[runs]] = np.add.reduceat(rows, runs, axis=1)
-    cut = (2 * q - 1) * len(pairs)
+    cut, s = (2 * q - 1) * len(pairs), len(basis.start)
+    sums = np.zeros((cut + q * d, s))
+    for start in range(0, n, _BLOCK):  # blocks that stay in the cache
+        block = slice(start, min(start + _BLOCK, n))
+        powers = np.empty((2 * q - 1, block.stop - start))
+        powers[0] = 1.0
+        for k in range(1, 2 * q - 1):
+            np.multiply(powers[k - 1], t[block], out=powers[k])
+        rows = np.empty((cut + q * d, powers.shape[1]))
+        np.multiply(powers[:, None], form[:, block], out=rows[:cut].reshape(2 * q - 1, len(pairs), -1))
+        np.multiply(powers[:q, None], right[:, block], out=rows[cut:].reshape(q, d, -1))
+        runs = np.flatnonzero(np.diff(span[block], prepend=-1))
+        sums[:, span[block][runs]] += np.add.reduceat(rows, runs, axis=1)
     forms = sums[:cut].reshape(2 * q - 1, len(pairs), s)
     rights = sums[cut:].reshape(q, d, s).transpose(2, 0, 1)
     product = matrix[:, :, None, :, None] * matrix[:, None, :, None, :]

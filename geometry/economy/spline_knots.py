@@ -1,4 +1,4 @@
-"""Where the knots of a fitted spline go: a spacing field from coarse fits, then removal of one knot after another.
+"""Fits with foot parameters and levelled weights, and their knots: added, removed one after another, laid anew.
 
 Ratios are distances over the distance allowed at the same sample; 1 is just allowed.
 """
@@ -6,23 +6,22 @@ Ratios are distances over the distance allowed at the same sample; 1 is just all
 from dataclasses import dataclass
 
 import numpy as np
-from scipy.linalg.lapack import dptsv
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.economy.spline_fit import Basis, Bend, Fit, measure, solve
 from geometry.economy.spline_shape import Guard, Verdict
 from geometry.economy.spline_source import Source
+from geometry.economy.spline_spacing import least_spans, place_number
 
-__all__ = ["State", "add_where_over", "bent", "level", "place", "refit", "remove", "smoothed", "spacing", "uniform"]
+__all__ = ["State", "add_where_over", "bent", "level", "refit", "remove", "respaced"]
 
 _SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
 _LEVELLINGS = 2  # refits with levelled weights before knots are put back
 _HOPELESS = 4.0  # ratio over which levelling is not tried
-SPARE = 0.3
-BARREN = 6
-DIST, DIST2 = 5, 8
+_SPARE = 0.3  # spans more than errors alike would need, when knots are laid anew
+_BARREN = 8  # rounds in a row without a knot removed after which removal ends
+_APART, _LATER_APART = 5, 8  # knots between those taken out in one round, at first and after six rounds
 _REACH = 5  # knots taken out farther than this from what went wrong, in knots, are not blamed for it
-_SLIDE_FIRST = 0.05  # the same while parameters are still those of the source
 
 
 @dataclass(frozen=True, eq=False)
@@ -86,124 +85,6 @@ def bent(source: Source, state: State, allowed: FloatArray, pieces: BoolArray, s
     return after
 
 
-def _span_peaks(basis: Basis, span: IntArray, ratio: FloatArray) -> FloatArray:
-    """Return the largest ratio over each span and its neighbours in the same piece, shape (s,)."""
-    runs = np.flatnonzero(np.diff(span, prepend=-1))
-    peak = np.zeros(len(basis.start))
-    peak[span[runs]] = np.maximum.reduceat(ratio, runs)
-    same = basis.piece[1:] == basis.piece[:-1]
-    wide = peak.copy()
-    wide[1:] = np.maximum(wide[1:], np.where(same, peak[:-1], 0.0))
-    wide[:-1] = np.maximum(wide[:-1], np.where(same, peak[1:], 0.0))
-    return wide
-
-
-def uniform(source: Source, number: IntArray) -> FloatArray:
-    """Return interior knots that cut piece i into number[i] equal spans."""
-    if source.periodic:
-        return np.arange(number[0]) * (source.high[0] / number[0])
-    piece = np.repeat(np.arange(len(number)), number - 1)
-    before = np.cumsum(number - 1) - (number - 1)
-    index = np.arange(len(piece)) - before[piece] + 1
-    return source.low[piece] + index * (source.lengths / number)[piece]
-
-
-def spacing(source: Source, allowed: FloatArray) -> FloatArray:
-    """Return the knot spacing that the curve needs at every sample, shape (n,), drawing units.
-
-    Uniform fits, each twice as fine as the one before; a sample takes its spacing from the first that is good
-    enough around it, corrected by the order of the error. Nothing is differentiated, and features smaller than
-    what is allowed ask for no knots.
-    """
-    order = 1.0 / (source.degree + 1)
-    need = np.full(len(source.along), np.nan)
-    least = source.degree + 3 if source.periodic else 1
-    number = np.full(len(source.low), least)
-    finest = np.maximum(source.spans, least)
-    open_ = np.ones(len(need), dtype=bool)
-    while True:
-        basis = Basis(source, uniform(source, number))
-        fit = solve(source, basis, source.along, source.step, _SLIDE_FIRST)
-        if fit is not None:
-            span, t = basis.locate(source.along)
-            r = fit.at(span, t, 0)[0] - source.point
-            r -= (r * source.tangent).sum(axis=0) * source.tangent
-            ratio = np.sqrt((r * r).sum(axis=0)) / allowed
-            peaks = _span_peaks(basis, span, ratio)[span]
-            good = open_ & (peaks <= 1.0)
-            width = (source.lengths / number)[source.piece]
-            need[good] = (width * np.clip(np.maximum(peaks, 1e-12) ** -order, 0.5, 2.0))[good]
-            open_ &= ~good
-        finer = np.zeros(len(number), dtype=bool)
-        finer[source.piece[open_]] = True
-        finer &= number < finest
-        if not finer.any():
-            break
-        number = np.where(finer, np.minimum(2 * number, finest), number)
-    smallest = (source.lengths / source.spans)[source.piece]
-    return np.maximum(np.where(open_, smallest, need), smallest)
-
-
-def _coordinate(source: Source, need: FloatArray) -> FloatArray:
-    """Return the integral of dx / spacing within each piece at every sample, shape (n,)."""
-    dx = np.where(source.piece[1:] == source.piece[:-1], np.diff(source.along), 0.0)
-    steps = 0.5 * dx * (1.0 / need[1:] + 1.0 / need[:-1])
-    total = np.concatenate([[0.0], np.cumsum(steps)])
-    return total - total[source.first[:-1]][source.piece]
-
-
-def smoothed(source: Source, need: FloatArray, reach: float) -> FloatArray:
-    """Smooth the logarithm of the spacing over about `reach` spans within each piece, in linear time.
-
-    Minimises the integral of (y - log spacing)^2 + reach^2 (dy / dF)^2 over the knot coordinate F.
-    """
-    f = _coordinate(source, need)
-    df = np.maximum(np.diff(f), 1e-9)
-    same = source.piece[1:] == source.piece[:-1]
-    tie = np.where(same, reach**2 / df, 0.0)
-    mass = np.zeros(len(f))
-    mass[1:] += np.where(same, 0.5 * df, 0.0)
-    mass[:-1] += np.where(same, 0.5 * df, 0.0)
-    mass = np.maximum(mass, 1e-12)
-    diagonal = mass.copy()
-    diagonal[1:] += tie
-    diagonal[:-1] += tie
-    _, _, y, info = dptsv(diagonal, -tie, mass * np.log(need))
-    return need if info else np.exp(y)
-
-
-def place(source: Source, need: FloatArray, share: float) -> FloatArray:
-    """Return interior knots at equal steps of the knot coordinate, `share` times as many as the field asks for."""
-    total = _coordinate(source, need)[source.first[1:] - 1]
-    if source.periodic:
-        total = total + (source.high[0] - source.along[-1]) / need[-1]
-    least = least_spans(source)
-    number = np.clip(np.ceil(total * share - 1e-9).astype(np.intp), least, np.maximum(source.spans, least))
-    return place_number(source, need, number)
-
-
-def place_number(source: Source, need: FloatArray, number: IntArray) -> FloatArray:
-    """Return interior knots at equal steps of the knot coordinate, for given numbers of spans."""
-    f = _coordinate(source, need)
-    total = f[source.first[1:] - 1]
-    if source.periodic:
-        total = total + (source.high[0] - source.along[-1]) / need[-1]
-    scaled = f * (number / np.maximum(total, 1e-300))[source.piece]
-    if source.periodic:
-        ends = np.append(scaled, number[0])
-        return np.interp(np.arange(number[0]), ends, np.append(source.along, source.high[0]))
-    offset = np.cumsum(number) - number
-    return np.interp(_whole(number, offset), scaled + offset[source.piece] + 1e-3 * source.piece, source.along)
-
-
-def _whole(number: IntArray, offset: IntArray) -> FloatArray:
-    """Return the interior whole numbers of every piece on the stretched coordinate of `place`."""
-    piece = np.repeat(np.arange(len(number)), number - 1)
-    before = np.cumsum(number - 1) - (number - 1)
-    index = np.arange(len(piece)) - before[piece] + 1
-    return offset[piece] + index + 1e-3 * piece
-
-
 def respaced(source: Source, state: State, allowed: FloatArray, guard: Guard) -> State | None:
     """Lay the knots anew so that all spans err alike, with fewer of them where the errors leave room.
 
@@ -212,7 +93,6 @@ def respaced(source: Source, state: State, allowed: FloatArray, guard: Guard) ->
     Returns None if nothing was gained.
     """
     order = 1.0 / (source.degree + 1)
-    pieces = len(source.low)
     old, trial = state, state
     before = number_of_spans(source, state)
     need, number = _need(source, state, order)
@@ -236,18 +116,17 @@ def respaced(source: Source, state: State, allowed: FloatArray, guard: Guard) ->
         return None
     if good.all():
         return trial
-    inner = np.sort(np.concatenate([trial.inner[good[_pieces(source, trial.inner)]], old.inner[~good[_pieces(source, old.inner)]]]))
+    inner = np.sort(
+        np.concatenate([trial.inner[good[_pieces(source, trial.inner)]], old.inner[~good[_pieces(source, old.inner)]]])
+    )
     here = good[source.piece]
-    return refit(source, Basis(source, inner), np.where(here, trial.u, old.u), np.where(here, trial.weight, old.weight), allowed)
+    return refit(
+        source, Basis(source, inner), np.where(here, trial.u, old.u), np.where(here, trial.weight, old.weight), allowed
+    )
 
 
 def _pieces(source: Source, u: FloatArray) -> IntArray:
     return np.maximum(np.searchsorted(source.low, u, side="right") - 1, 0)
-
-
-def least_spans(source: Source) -> int:
-    """Return the fewest spans that a piece can have."""
-    return source.degree + 2 if source.periodic else 1
 
 
 def number_of_spans(source: Source, state: State) -> IntArray:
@@ -267,7 +146,7 @@ def _need(source: Source, state: State, order: float) -> tuple[FloatArray, IntAr
     share = np.clip(peak, 0.02, 50.0) ** order
     a, b = basis.inside
     number = np.bincount(basis.piece[a:b], weights=share[a:b], minlength=len(source.low))
-    return (basis.width / share)[span], np.ceil(number + SPARE).astype(np.intp)
+    return (basis.width / share)[span], np.ceil(number + _SPARE).astype(np.intp)
 
 
 def add_where_over(source: Source, state: State, closest: FloatArray) -> FloatArray | None:
@@ -350,7 +229,7 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
         if frozen.all() or len(inner) <= least:
             break
         piece = np.maximum(np.searchsorted(source.low, inner, side="right") - 1, 0)
-        distance = DIST if turn < 6 else DIST2
+        distance = _APART if turn < 6 else _LATER_APART
         value = np.where(frozen, np.inf, significance(state))
         out = _apart(value, np.arange(len(inner)) + distance * piece, distance)
         if source.periodic and len(inner) - out.sum() < least:
@@ -362,7 +241,7 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
         if good is None:
             frozen |= tried
             barren += 1
-            if barren == BARREN:
+            if barren == _BARREN:
                 break
             continue
         barren = 0
@@ -410,7 +289,7 @@ def _without(
     return None
 
 
-def _blamed(inner: FloatArray, out: BoolArray, wrong: FloatArray) -> BoolArray:
+def _blamed(inner: FloatArray, out: BoolArray, wrong: FloatArray, reach: int = _REACH) -> BoolArray:
     """Tell which of the knots taken out are nearest to places that went wrong, if within a few knots of them.
 
     Args:
@@ -421,5 +300,5 @@ def _blamed(inner: FloatArray, out: BoolArray, wrong: FloatArray) -> BoolArray:
     if gone.size and wrong.size:
         middle = 0.5 * (inner[gone[1:]] + inner[gone[:-1]])
         nearest = gone[np.searchsorted(middle, wrong)]
-        blamed[nearest[np.abs(np.searchsorted(inner, wrong) - nearest) <= _REACH]] = True
+        blamed[nearest[np.abs(np.searchsorted(inner, wrong) - nearest) <= reach]] = True
     return blamed

@@ -12,10 +12,7 @@ __all__ = ["Guard", "Turns", "Verdict", "turning_points"]
 
 SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no inflection
 TURN_LEVELS = (1.0, 8.0)  # a fit must not make more of what is small either, so counts hold at larger thresholds too
-EXTREMA_LEVELS = (1.0,)
-LEAST_HEIGHT = (
-    0.025  # share of the chord error: a bend that stands off its chord by this counts however little it turns
-)
+LEAST_HEIGHT = 0.025  # share of the chord error: a bend that stands off its chord by this counts, whatever its turn
 PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
 
 
@@ -42,13 +39,15 @@ class Verdict:
 
     Attributes:
         worse: pieces with more extrema or inflections than allowed, shape (pieces,).
+        badly: those of them whose inflections are more at the last of `TURN_LEVELS`, or whose extrema are more.
         where: extrema and inflections of such pieces that have no counterpart, shape (n,).
-        turns: turning points of the fit, for each quantity and threshold.
+        turns: turning points of the fit, for each quantity its thresholds.
     """
 
     worse: BoolArray
+    badly: BoolArray
     where: BoolArray
-    turns: list[Turns]
+    turns: list[list[Turns]]
 
 
 class Guard:
@@ -76,12 +75,11 @@ class Guard:
         self._turn = np.full(len(starts), SMALLEST_TURN)
         self._checks: list[_Check] = []
         if source.degree > 2:
-            for factor in EXTREMA_LEVELS:
-                self._checks.append(_Check(k, factor * self._prominence, source, source.periodic, slack, np.inf))
+            self._checks.append(_Check(k, [(self._prominence, np.inf)], source, source.periodic, slack))
         if len(source.point) == 2:
-            angle, tall = turning(source.tangent, source.first), 8.0 * LEAST_HEIGHT * chord_error
-            for factor in TURN_LEVELS:
-                self._checks.append(_Check(angle, factor * self._turn, source, False, slack, factor * tall))
+            angle, tall = turning(source.tangent, source.first), LEAST_HEIGHT * chord_error
+            levels = [(factor * self._turn, factor * tall) for factor in TURN_LEVELS]
+            self._checks.append(_Check(angle, levels, source, False, slack))
 
     def check(self, fit: Fit, u: FloatArray, base: Verdict | None = None) -> Verdict:
         """Tell which pieces of a fit are less fair than the source's, and at which samples.
@@ -93,49 +91,68 @@ class Guard:
         source = self._source
         span, t = fit.basis.locate(u)
         _, g1, g2 = fit.at(span, t)
-        worse = np.zeros(len(source.low), dtype=bool)
+        worse, badly = np.zeros((2, len(source.low)), dtype=bool)
         where = np.zeros(len(u), dtype=bool)
         values: list[FloatArray] = []
         if source.degree > 2:
             speed = np.sqrt((g1 * g1).sum(axis=0))
             k = np.clip(cross(g1, g2) / np.maximum(speed, 1e-300) ** 3, -self._limit, self._limit)
-            values += [k] * len(EXTREMA_LEVELS)
+            values.append(k)
         if len(source.point) == 2:
-            values += [turning(g1, source.first)] * len(TURN_LEVELS)
-        turns = []
+            values.append(turning(g1, source.first))
+        turns: list[list[Turns]] = []
         for i, (check, value) in enumerate(zip(self._checks, values, strict=True)):
-            turns.append(check.compare(value, None if base is None else base.turns[i], worse, where))
-        return Verdict(worse, where, turns)
+            turns.append(check.compare(value, None if base is None else base.turns[i], worse, badly, where))
+        return Verdict(worse, badly, where, turns)
 
 
 class _Check:
-    """Turning points of one quantity along the source, against which those of a fit are held."""
+    """Turning points of one quantity along the source, at some thresholds, against which those of a fit are held."""
 
     def __init__(
-        self, values: FloatArray, threshold: FloatArray, source: Source, cyclic: bool, slack: float, tall: float
+        self, values: FloatArray, thresholds: list[tuple[FloatArray, float]], source: Source, cyclic: bool, slack: float
     ) -> None:
-        self.threshold, self.first, self.cyclic = slack * threshold, source.first, cyclic
-        self.along, self.tall = source.along, slack * tall
-        self.turns = turning_points(values, source.first, threshold, cyclic, source.along, tall)
-        self.count = self.turns.per_piece(source.first)
+        self.first, self.cyclic, self.along = source.first, cyclic, source.along
+        self.thresholds = thresholds
+        self.turns = self._turns(values)
+        self.counts = [turns.per_piece(source.first) for turns in self.turns]
+        self.thresholds = [(slack * least, slack * tall) for least, tall in thresholds]
 
-    def compare(self, values: FloatArray, base: Turns | None, worse: BoolArray, where: BoolArray) -> Turns:
+    def _turns(self, values: FloatArray) -> list[Turns]:
+        if self.cyclic:
+            return [turning_points(values, self.first, least, True) for least, _ in self.thresholds]
+        index = _local_extrema(values, self.first)
+        return [_significant(values, index, self.first, least, self.along, tall) for least, tall in self.thresholds]
+
+    def compare(
+        self, values: FloatArray, base: list[Turns] | None, worse: BoolArray, badly: BoolArray, where: BoolArray
+    ) -> list[Turns]:
         """Mark pieces with more turning points than allowed, and those of them that have no counterpart.
 
         Counterparts are sought in the source, or in the base where that has more turning points.
         """
-        turns = turning_points(values, self.first, self.threshold, self.cyclic, self.along, self.tall)
-        count, most = turns.per_piece(self.first), self.count
-        if base is not None:
-            most = np.maximum(most, base.per_piece(self.first))
-        for i in np.flatnonzero(count > most).tolist():
-            worse[i] = True
-            a, b = self.first[i], self.first[i + 1]
-            known = self.turns if base is None or most[i] == self.count[i] else base
-            for top in (False, True):
-                old, new = (t.at[(t.at >= a) & (t.at < b) & (t.top == top)] for t in (known, turns))
-                where[_unmatched(old, new)] = True
-        return turns
+        found = self._turns(values)
+        for level, (turns, own, most) in enumerate(zip(found, self.turns, self.counts, strict=True)):
+            count, allowed = turns.per_piece(self.first), most
+            if base is not None:
+                allowed = np.maximum(most, base[level].per_piece(self.first))
+            for i in np.flatnonzero(count > allowed).tolist():
+                worse[i] = True
+                badly[i] |= level == len(found) - 1
+                a, b = self.first[i], self.first[i + 1]
+                known = own if base is None or allowed[i] == most[i] else base[level]
+                ends = np.concatenate([[a], turns.at[(turns.at >= a) & (turns.at < b)], [b - 1]])
+                for top in (False, True):
+                    old, new = (t.at[(t.at >= a) & (t.at < b) & (t.top == top)] for t in (known, turns))
+                    extra = _unmatched(old, new)
+                    place = np.searchsorted(ends[1:-1], extra)
+                    for beside in (
+                        extra,
+                        ends[place],
+                        ends[place + 2],
+                    ):  # the point, and the middles of the bends there
+                        where[(extra + beside) // 2] = True
+        return found
 
 
 def _unmatched(old: IntArray, new: IntArray) -> IntArray:
@@ -156,8 +173,7 @@ def turning_points(
 ) -> Turns:
     """Return the samples where a rise of at least a threshold turns into such a fall or back.
 
-    For tangent angles, rise times the length over which it happens is some 8 times the height of the bend, and a
-    bend may count by that too.
+    For tangent angles, a rise may also count by how far the curve stands off its chord halfway along the rise.
 
     Args:
         values: shape (n,).
@@ -165,7 +181,7 @@ def turning_points(
         threshold: for every piece, shape (pieces,), positive.
         cyclic: whether the (only) piece closes; `values` then repeats from its start.
         along: arc lengths, shape (n,); with `tall`, not for cyclic values.
-        tall: rise times length from which on a rise counts even if it is under the threshold.
+        tall: distance from the chord from which on a rise counts even if it is under the threshold.
     """
     if cyclic:
         shift = int(np.argmax(values))
@@ -176,37 +192,65 @@ def turning_points(
         at = (np.append(0, turns.at) + shift) % len(values)
         order = np.argsort(at)
         return Turns(at[order], np.append(True, turns.top)[order])
+    index = _local_extrema(values, first)
+    return _significant(values, index, first, threshold, along, tall)
+
+
+def _local_extrema(values: FloatArray, first: IntArray) -> IntArray:
+    """Return the ends of pieces and the samples between them where values turn at all, ascending."""
     step = np.sign(np.diff(values))
     step[first[1:-1] - 1] = 0.0
     moving = np.flatnonzero(step)
     turns = moving[1:][step[moving[1:]] != step[moving[:-1]]]
-    index = np.unique(np.concatenate([first[:-1], turns, first[1:] - 1]))
+    return np.unique(np.concatenate([first[:-1], turns, first[1:] - 1]))
+
+
+class _Sideways:
+    """How far a curve stands off chords, from its tangent angles (small angles)."""
+
+    def __init__(self, angle: FloatArray, along: FloatArray, tall: float) -> None:
+        self.along, self.tall = along, tall
+        steps = 0.5 * (angle[1:] + angle[:-1]) * np.diff(along)
+        self.offset = np.concatenate([[0.0], np.cumsum(steps)])
+
+    def counts(self, a: int, b: int) -> bool:
+        """Tell whether the curve from sample a to sample b stands off its chord far enough halfway."""
+        if b - a < 2:
+            return False
+        middle = (a + b) // 2
+        x, y = self.along, self.offset
+        share = (x[middle] - x[a]) / (x[b] - x[a])
+        return bool(abs(y[middle] - y[a] - share * (y[b] - y[a])) >= self.tall)
+
+
+def _significant(
+    values: FloatArray, index: IntArray, first: IntArray, threshold: FloatArray, along: FloatArray | None, tall: float
+) -> Turns:
+    """Pick the turning points that count from the local extrema; arguments as of `turning_points`."""
     fresh = np.zeros(len(index), dtype=bool)
     fresh[np.searchsorted(index, first[:-1])] = True
     limit = threshold[np.searchsorted(first, index, side="right") - 1]
     found: list[int] = []
     tops: list[bool] = []
-    x = np.zeros(len(index)) if along is None else along[index]
-    direction, high, low, start, high_at, low_at, high_x, low_x, start_x = 0, 0.0, 0.0, 0.0, 0, 0, 0.0, 0.0, 0.0
-    rows = zip(index.tolist(), values[index].tolist(), x.tolist(), limit.tolist(), fresh.tolist(), strict=True)
-    for at, value, here, least, new in rows:
+    sideways = _Sideways(values, along, tall) if along is not None else None
+    direction, high, low, start, high_at, low_at, start_at = 0, 0.0, 0.0, 0.0, 0, 0, 0
+    rows = zip(index.tolist(), values[index].tolist(), limit.tolist(), fresh.tolist(), strict=True)
+    for at, value, least, new in rows:
         if new:
-            direction, high, low, start, high_at, low_at = 0, value, value, value, at, at
-            high_x = low_x = start_x = here
+            direction, high, low, start, high_at, low_at, start_at = 0, value, value, value, at, at, at
             continue
         if direction >= 0 and value > high:
-            high, high_at, high_x = value, at, here
+            high, high_at = value, at
         if direction <= 0 and value < low:
-            low, low_at, low_x = value, at, here
-        fall, rise = high - value, value - low
-        if direction >= 0 and (fall >= least or fall * (here - high_x) >= tall):
-            if direction or high - start >= least or (high - start) * (high_x - start_x) >= tall:
+            low, low_at = value, at
+        if direction >= 0 and (high - value >= least or (sideways and sideways.counts(high_at, at))):
+            if direction or high - start >= least or (sideways and sideways.counts(start_at, high_at)):
                 found.append(high_at)
                 tops.append(True)
-            direction, low, low_at, low_x = -1, value, at, here
-        elif direction <= 0 and (rise >= least or rise * (here - low_x) >= tall):
-            if direction or start - low >= least or (start - low) * (low_x - start_x) >= tall:
+            direction, low, low_at = -1, value, at
+        elif direction <= 0 and (value - low >= least or (sideways and sideways.counts(low_at, at))):
+            if direction or start - low >= least or (sideways and sideways.counts(start_at, low_at)):
                 found.append(low_at)
                 tops.append(False)
-            direction, high, high_at, high_x = 1, value, at, here
+            direction, high, high_at = 1, value, at
     return Turns(np.array(found, dtype=np.intp), np.array(tops, dtype=bool))

@@ -58,6 +58,12 @@ class Source:
         return self.high - self.low
 
     @cached_property
+    def along_tangent(self) -> FloatArray:
+        """Products of tangent coordinates i <= j, row by row, shape (d (d + 1) / 2, n)."""
+        d = len(self.tangent)
+        return np.stack([self.tangent[i] * self.tangent[j] for i in range(d) for j in range(i, d)])
+
+    @cached_property
     def step(self) -> FloatArray:
         """Length of curve that every sample stands for, shape (n,)."""
         half = np.where(self.piece[1:] == self.piece[:-1], 0.5 * np.diff(self.along), 0.0)
