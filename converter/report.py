@@ -72,6 +72,11 @@ def _row(profile: ProfileRecord) -> tuple[str, ...]:
 
 
 def _written(profile: ProfileRecord) -> str:
+    size = f", diameter {profile.diameter:.4g}" if profile.diameter is not None else ""
+    return _form(profile) + size
+
+
+def _form(profile: ProfileRecord) -> str:
     if profile.control_points:
         return f"{profile.entity}, {profile.control_points} control points"
     if profile.arcs:

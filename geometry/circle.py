@@ -3,9 +3,11 @@
 import numpy as np
 
 from geometry.arrays import FloatArray
+from geometry.bspline import Spline
+from geometry.interpolate import spline_through
 from geometry.polyline import Polyline
 
-__all__ = ["whole_circle"]
+__all__ = ["circle_spline", "whole_circle"]
 
 _SAMPLES = 4  # a vertex or a tolerance of arc length, whichever gives more
 _STEPS, _SETTLED = 20, 1e-12
@@ -86,3 +88,20 @@ def _fit(samples: FloatArray) -> tuple[FloatArray, float, FloatArray, FloatArray
         if np.abs(step).max() <= _SETTLED * radius:
             return centre, radius, turns, rest
     return None
+
+
+def circle_spline(centre: FloatArray, radius: float, error: float, degree: int, clockwise: bool = False) -> Spline:
+    """Return a closed spline through even points of a circle, without a seam.
+
+    Args:
+        centre: shape (2,), drawing units.
+        radius: drawing units.
+        error: about how far the spline may lie inside the circle, drawing units. A periodic spline through n points
+            lies inside by h^4 / 384 of the radius (degree 3) or h^4 / 128 (degree 2), h = 2 pi / n, to leading order.
+        degree: 2 or 3.
+        clockwise: direction of travel.
+    """
+    step = (error / radius * (384.0 if degree == 3 else 128.0)) ** 0.25
+    count = max(12, int(np.ceil(2.0 * np.pi / step)))
+    angle = 2.0 * np.pi * np.arange(count) / count * (-1.0 if clockwise else 1.0)
+    return spline_through(centre + radius * np.stack([np.cos(angle), np.sin(angle)], axis=1), degree, "periodic")

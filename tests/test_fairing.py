@@ -146,9 +146,9 @@ def test_mirroring_the_input_mirrors_the_output(seed):
     np.testing.assert_allclose(mirrored.control * [-1.0, 1.0], base.control, atol=0.03)
 
 
-@pytest.mark.parametrize("seed", range(4))
-def test_reversing_the_input_gives_the_same_curve(seed):
-    given_points = noisy(dense(BRACKET), 2.0, 0.15, seed)
-    base = faired(given_points, 0.6)[1].spline
-    back = faired(given_points[::-1], 0.6)[1].spline
-    assert hausdorff(base, back, 1e-3).certified < 0.12  # samples fall elsewhere, so equal only to a fifth of the band
+@pytest.mark.parametrize("degrees", [3, 17, 28, 40])
+def test_reversing_the_input_gives_the_same_curve(degrees):
+    given_points = staircase(turned(dense(BRACKET), degrees))
+    base = faired(given_points, 1.0)[1].spline
+    back = faired(given_points[::-1], 1.0)[1].spline
+    assert hausdorff(base, back, 1e-3).certified < 0.2  # samples fall elsewhere, so equal only to a fifth of the band

@@ -18,6 +18,7 @@ from converter.jobs.marks import Marks, read_marks
 from converter.jobs.records import DeviationRecord, FairRecord, ProfileRecord
 from converter.units import Length
 from geometry.arcs import ArcChain
+from geometry.arrays import FloatArray
 from geometry.bspline import Spline
 from geometry.deviation import hausdorff
 from geometry.fairness import fairness
@@ -155,7 +156,7 @@ def _fair_profile(
         record.warnings.append("no fair curve keeps the tolerance, so the profile is left as drawn; state a larger one")
         return record
     written = replace(drawing, profile, result.curve.moved(origin), version)
-    record = _record(profile, need, written, result.faired.spline.moved(origin))
+    record = _record(profile, need, written, result.faired.spline.moved(origin), result.faired.circle)
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
     if result.crosses:
         record.warnings.append("the curve crosses or touches itself: two walls are closer than the tolerance")
@@ -213,7 +214,9 @@ def _jaggedness(need: Assessment) -> dict[str, float | str] | None:
     return {"kind": need.jaggedness.kind, "size": need.jaggedness.size, "recommended": need.jaggedness.tolerance}
 
 
-def _record(profile: Profile, need: Assessment, written: Written, fair: Spline) -> ProfileRecord:
+def _record(
+    profile: Profile, need: Assessment, written: Written, fair: Spline, circle: tuple[FloatArray, float] | None
+) -> ProfileRecord:
     """Return the record of a faired profile; the certificate is of the curve as the file will hold it."""
     outline, curve, tolerance = need.outline, written.curve, need.tolerance
     assert outline is not None
@@ -240,9 +243,10 @@ def _record(profile: Profile, need: Assessment, written: Written, fair: Spline) 
             certified, max(0.0, deviation.measured - need.slack), statistics.rms, statistics.mean_signed
         ),
         fairness={
-            "before": fairness(outline, tolerance, points).record(),
-            "after": fairness(curve, tolerance, points).record(),
+            "before": fairness(outline, tolerance, _alongs(outline, points)).record(),
+            "after": fairness(curve, tolerance).record(),
         },
+        diameter=None if circle is None else 2.0 * circle[1],
         length_in=outline.length(),
         length_out=curve.length(),
         area_in=outline.area(),
@@ -254,6 +258,12 @@ def _record(profile: Profile, need: Assessment, written: Written, fair: Spline) 
         said = f"out of tolerance: certified {certified:.4g} of {tolerance:.4g}; state a larger tolerance"
         record.warnings.append(said)
     return record
+
+
+def _alongs(outline: Polyline, points: FloatArray) -> FloatArray:
+    """Return the arc length of the vertex nearest to each point."""
+    nearest = [int(((outline.points - point) ** 2).sum(axis=1).argmin()) for point in points]
+    return outline.alongs()[np.array(nearest, dtype=np.intp)]
 
 
 def _count(record: ProfileRecord, curve: AnyCurve, entity: str) -> None:

@@ -8,7 +8,6 @@ import numpy as np
 from geometry.arcs import ArcChain, full_circle
 from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline
-from geometry.circle import whole_circle
 from geometry.corners import Corners, corners_by_angle, find_corners, pin_corners
 from geometry.deviation import TwoSided, hausdorff
 from geometry.errors import GeometryError
@@ -32,7 +31,7 @@ class Result:
 
     Attributes:
         curve: in the plane of the outline.
-        faired: the fair spline that it stands for.
+        faired: the fair curve that it stands for.
         deviation: certified distance between outline and curve, slack included.
         within: whether the certified distance keeps the tolerance.
         crosses: whether the curve crosses or touches itself though the outline does not.
@@ -59,10 +58,7 @@ def outline_corners(
     if angle is not None:
         found = corners_by_angle(outline, angle)
     elif outline.dimension == 2:
-        if whole_circle(outline, tolerance) is not None:  # small ones are short enough for corners to be seen in them
-            found = Corners(np.zeros(0), np.zeros((0, 2)), np.zeros(0))
-        else:
-            found = find_corners(outline, tolerance)
+        found = find_corners(outline, tolerance)
     else:
         found = _spatial_corners(outline, tolerance)
     return pin_corners(found, outline, marks, tolerance)
@@ -93,8 +89,8 @@ def best_curve(
     """Return the curve of a form that keeps the tolerance, certified; the best one found where none does.
 
     The fairing gets the whole tolerance at first and the economy the chord error; where the certified distance of
-    what comes out passes the tolerance, the economy and then the fairing get less. A circle among arcs is taken
-    straight from the outline: the fair curve wavers about it by more than the chord error where the trace does.
+    what comes out passes the tolerance, the economy and then the fairing get less. A circle is written as
+    the circle that it is.
 
     Args:
         outline: cleaned, the profile as a polyline.
@@ -109,18 +105,12 @@ def best_curve(
         None where no fair curve was found at all.
     """
     best: Result | None = None
-    circle = _circle(outline, tolerance) if form == "arcs" and not len(corners.along) else None
     for share in _CAREFUL:
         faired = fair_outline(outline, corners, share * tolerance, degree)
         if faired.as_given:
             continue
-        if circle is not None:
-            result = _certified(outline, circle, faired, tolerance, slack)
-            if result.within:
-                return result
-            circle = None
         for part in (*_ECONOMY, 0.0) if form == "spline" else _ECONOMY:
-            curve = _economised(faired.spline, part * chord_error, form)
+            curve = _economised(faired, part * chord_error, form)
             if curve is None:
                 continue
             result = _certified(outline, curve, faired, tolerance, slack)
@@ -129,15 +119,6 @@ def best_curve(
             if result.within and not result.crosses:
                 return result
     return best
-
-
-def _circle(outline: Polyline, tolerance: float) -> ArcChain | None:
-    """Return the circle that an outline was traced from, in the outline's direction; None where it was none."""
-    found = whole_circle(outline, tolerance)
-    if found is None:
-        return None
-    chain = full_circle(*found)
-    return chain if outline.area() > 0.0 else chain.reversed()
 
 
 def _certified(
@@ -155,11 +136,15 @@ def _crosses(outline: Polyline, curve: Spline | ArcChain | Polyline, tolerance: 
     return not is_simple(drawn) and is_simple(outline)
 
 
-def _economised(spline: Spline, chord_error: float, form: Form) -> Spline | ArcChain | Polyline | None:
-    """Return the spline with few entities; as it is for no chord error; None where the form cannot be had."""
+def _economised(faired: Faired, chord_error: float, form: Form) -> Spline | ArcChain | Polyline | None:
+    """Return the curve with few entities; as it is for no chord error; None where the form cannot be had."""
+    spline = faired.spline
     if chord_error <= 0.0:
         return spline
     try:
+        if form == "arcs" and faired.circle is not None:
+            chain = full_circle(*faired.circle)
+            return chain if spline.area() > 0.0 else chain.reversed()
         if form == "arcs":
             from geometry.economy.arcs import fewest_arcs
 

@@ -45,6 +45,7 @@ class ProfileRecord:
     corners: list[dict[str, float]] = field(default_factory=list)
     deviation: DeviationRecord | None = None
     fairness: dict[str, dict[str, Any]] | None = None
+    diameter: float | None = None
     length_in: float = 0.0
     length_out: float = 0.0
     area_in: float = 0.0

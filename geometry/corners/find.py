@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from geometry.arrays import FloatArray
+from geometry.circle import whole_circle
 from geometry.corners.candidates import candidates
 from geometry.corners.outline import even_outline
 from geometry.corners.search import Search
@@ -76,8 +77,8 @@ def find_corners(polyline: Polyline, tolerance: float) -> Corners:
     """
     scale = jaggedness_scale(polyline, tolerance)
     none = Corners(np.zeros(0), np.zeros((0, 2)), np.zeros(0))
-    if polyline.length() < 8.0 * scale:
-        return none
+    if polyline.length() < 8.0 * scale or whole_circle(polyline, tolerance) is not None:
+        return none  # small circles are short enough for corners to be seen in them
     outline = even_outline(polyline, scale)
     index, fair = candidates(outline, scale)
     if not index.size:

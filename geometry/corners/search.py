@@ -31,6 +31,7 @@ _WINDOW, _WINDOW_LEAST, _NEIGHBOUR_CLEAR = 9.0, 1.25, 0.5
 _ROUND_RADIUS, _ROUND_TURN = 6.0, 65.0
 _PAIR_GAP, _PAIR_RADII = 7.0, (0.0, 3.0, 6.0, 9.0, 13.0)
 _SPLIT_START, _SPLIT_RADII = 2.0, (0.0, 2.0, 3.0, 4.5, 6.0, 9.0)
+_TIP_TURN = 150.0
 _PLACE_WINDOWS, _PLACE_RIDGE = (12.0, 17.0), 400.0
 
 
@@ -263,7 +264,8 @@ class Search:
         least = np.degrees(np.minimum(*(np.abs(turn) for turn in chain.turns)))
         split = (gain > 8.0) & (least > 40.0) & (chain.gap > 3.0) & (chain.gap < 9.0)
         big = np.array(_SPLIT_RADII) >= 3.0
-        is_round = (rounds[0] - rounds[big].min(axis=0) > 4.0 * self.noise) | (self.quality[chosen] > 3.0)
+        poor = (self.quality[chosen] > 3.0) & (turn[chosen] < _TIP_TURN)
+        is_round = (rounds[0] - rounds[big].min(axis=0) > 4.0 * self.noise) | poor
         kept = np.ones(self.index.size, dtype=bool)
         kept[chosen[split | is_round]] = False
         points = [(chain.p1 + frame)[split], (chain.p2 + frame)[split]]

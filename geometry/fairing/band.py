@@ -3,7 +3,7 @@
 Distances here are sampled; they steer the repair. The proof is `geometry.deviation`'s.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -150,7 +150,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         stiffness = np.maximum(limit_growth(layout, stiffness, 0.5), 0.3)
         straightness = np.where(soft, 0.0, straightness)
         old = fit.sampled
-        sampled = Sampled(layout, old.own, old.points, old.bounds, old.own_nodes, old.fit_nodes, dead)
+        sampled = replace(old, dead=dead)
         system = System(layout, old.points, sampled.live, nodes.pins)
         fit = Fit(sampled, system.solve(stiffness, None, straightness), stiffness, straightness)
         check = check_band(trace, fit, nodes)

@@ -6,6 +6,7 @@ import numpy as np
 
 from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, join
+from geometry.circle import circle_spline, whole_circle
 from geometry.corners import Corners
 from geometry.fairing.band import CORNER_SEARCH, LIMIT, BandCheck, Nodes, repair
 from geometry.fairing.ends import corner_points
@@ -20,6 +21,7 @@ from geometry.polyline import Polyline
 
 __all__ = ["Faired", "fair_outline"]
 
+_CIRCLE = 1e-3  # how near the spline of a circle lies to it
 _CORNER_REACH = 0.97  # a corner may lie this far from the trace
 _SETTLE = 0.5  # a corner may move this far when its sides pull
 _ONE_SIDED = 6.0  # stiffness of the first fits
@@ -42,10 +44,11 @@ class Faired:
     corners: FloatArray
     inserted: int
     as_given: bool
+    circle: tuple[FloatArray, float] | None = None
 
 
 def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree: int = 3) -> Faired:
-    """Fair a polyline between its corners.
+    """Fair a polyline between its corners; the trace of a whole circle becomes that circle.
 
     Sampled distances keep the result within 0.985 of the tolerance, both ways; the proof is left to the caller
     (`geometry.deviation`). Open ends stay exactly where they are drawn.
@@ -56,6 +59,11 @@ def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree:
         tolerance: largest distance allowed between the polyline and the curve, both ways, drawing units.
         degree: 3, or 2.
     """
+    circle = whole_circle(polyline, tolerance) if not len(corners) else None
+    if circle is not None:
+        clockwise = polyline.area() < 0.0
+        spline = circle_spline(*circle, _CIRCLE * tolerance, degree, clockwise)
+        return Faired(spline, np.zeros((0, 2)), 0, False, circle)
     origin = 0.5 * (polyline.points.min(axis=0) + polyline.points.max(axis=0))
     path = (polyline.path() - origin) / tolerance
     trace = Trace(path, polyline.closed)
@@ -168,9 +176,14 @@ def _settled(trace: Trace, fit: Fit, nodes: Nodes) -> Nodes:
     move = -pull / np.maximum(hold, 1e-9)[:, None]
     size = np.sqrt((move * move).sum(axis=1))
     move *= np.minimum(1.0, _SETTLE / np.maximum(size, 1e-12))[:, None]
-    points = nodes.points + move
-    allowed = ~nodes.fixed & (trace.distance(points, nodes.own, CORNER_SEARCH) <= _CORNER_REACH)
-    return nodes.moved(np.where(allowed[:, None], points, nodes.points))
+    points = nodes.points.copy()
+    waiting = ~nodes.fixed
+    for share in (1.0, 0.75, 0.5, 0.25):  # as far as the band allows
+        trial = nodes.points + share * move
+        reached = waiting & (trace.distance(trial, nodes.own, CORNER_SEARCH) <= _CORNER_REACH)
+        points[reached] = trial[reached]
+        waiting &= ~reached
+    return nodes.moved(points)
 
 
 def _carried(fit: Fit, layout: Layout) -> FloatArray:

@@ -26,6 +26,7 @@ class Sampled:
         bounds: arc length of the trace where each piece starts, and where the last one ends, shape (p + 1,).
         own_nodes, fit_nodes: the map from the trace's arc length to the parameter counted through all pieces.
         dead: zones without weight at both ends of each piece, shape (p, 2).
+        tread: longest tread of a staircase beside each interval, shape (m,).
     """
 
     layout: Layout
@@ -35,6 +36,7 @@ class Sampled:
     own_nodes: FloatArray
     fit_nodes: FloatArray
     dead: FloatArray
+    tread: FloatArray
 
     @cached_property
     def live(self) -> BoolArray:
@@ -50,7 +52,8 @@ def _sampled(trace: Trace, layout: Layout, bounds: FloatArray, own_nodes: FloatA
     position = layout.sample_positions() + layout.offsets[layout.piece][:, None]
     own = np.interp(position, fit_nodes, own_nodes)
     dead = np.minimum(_DEAD, _DEAD_SHARE * layout.lengths)[:, None] * np.ones(2)
-    return Sampled(layout, own, trace.at(own), bounds, own_nodes, fit_nodes, dead)
+    tread = trace.tread(own.mean(axis=1))
+    return Sampled(layout, own, trace.at(own), bounds, own_nodes, fit_nodes, dead, tread)
 
 
 def by_own_length(trace: Trace, bounds: FloatArray, periodic: bool, degree: int) -> Sampled:

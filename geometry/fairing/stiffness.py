@@ -25,6 +25,7 @@ __all__ = [
     "relax",
     "spread",
     "start_stiffness",
+    "step_means",
     "window_core",
     "worst_of",
 ]
@@ -34,6 +35,7 @@ MEAN_4, MEAN_8 = 0.35, 0.30  # local means, of 4 and 8 intervals, that a fit pre
 _DRIFT = 0.12  # local mean offset that counts as biased
 _STIFFEST, _SOFTEST = 40.0, 0.6
 _GROWTH = 0.1
+_WIDER, _TREAD_SHARE = (8.0, 16.0, 32.0), 0.8
 _SPREAD = 3
 _ROUNDS = 40
 _WINDOWED, _NARROWER = 600, 0.6
@@ -94,6 +96,21 @@ def local_means(runs: IntArray, wrap: bool, offsets: FloatArray, live: BoolArray
     return np.asarray(np.where(smooth[-1] > 1e-9, total / scale, 0.0))
 
 
+def step_means(runs: IntArray, wrap: bool, offsets: FloatArray, live: BoolArray, tread: FloatArray) -> FloatArray:
+    """Return local means of 4 intervals, and of more beside long treads: a mean over less sees the steps themselves.
+
+    Args:
+        runs, wrap, offsets, live: as for `local_means`.
+        tread: longest tread of a staircase beside every interval, shape (m,).
+    """
+    means = local_means(runs, wrap, offsets, live, 4.0)
+    for width in _WIDER:
+        wide = tread > _TREAD_SHARE * width
+        if wide.any():
+            means = np.where(wide, local_means(runs, wrap, offsets, live, width), means)
+    return means
+
+
 def limit_growth(layout: Layout, stiffness: FloatArray, slope: float) -> FloatArray:
     """Return the largest stiffness below the given one that grows by at most `slope` per unit length in a piece."""
     position = layout.position
@@ -128,7 +145,7 @@ def relax(sampled: Sampled, stiffness: FloatArray, pins: FloatArray | None, stra
     coefficients = system.solve(stiffness, None, straightness)
     excess = _excess(sampled, layout.piece, layout.periodic, coefficients, straightness, None)
     for _ in range(_ROUNDS):
-        hot = excess > 1.0
+        hot = (excess > 1.0) & ((stiffness > _SOFTEST) | (straightness > 0.0))  # the softest can give no more
         if not hot.any():
             break
         straightness = _unbent(layout, straightness, hot)
@@ -174,12 +191,13 @@ def _relax_windows(
             position = np.cumsum(layout.h[chosen])
         coefficients = system.solve(stiffness, coefficients, straightness)
         excess = np.where(core, _excess(sampled, runs, False, coefficients, straightness, chosen), 0.0)
-        if not (excess > 1.0).any():
+        asking = (excess > 1.0) & (stiffness[chosen] > _SOFTEST)
+        if not asking.any():
             break
         softer = _softened(stiffness[chosen], excess, runs, False)
         stiffness[chosen] = np.maximum(_limited(softer, _GROWTH * position + 1e4 * runs), _SOFTEST)
         hot = np.zeros(len(layout), dtype=np.bool_)
-        hot[chosen[excess > 1.0]] = True
+        hot[chosen[asking]] = True
         narrower = np.sort(chosen[_reached(layout, stiffness, hot)[chosen]])
         if len(narrower) < _NARROWER * len(chosen):
             chosen, system = narrower, None
@@ -199,7 +217,8 @@ def _excess(
     live = sampled.live if chosen is None else sampled.live[chosen]
     straight = (straightness if chosen is None else straightness[chosen]) > 0.0
     drift = np.where(straight, MEAN_4, _DRIFT)
-    return np.maximum(worst_of(offsets) / BAND, local_means(runs, wrap, offsets, live, 4.0) / drift)
+    tread = sampled.tread if chosen is None else sampled.tread[chosen]
+    return np.maximum(worst_of(offsets) / BAND, step_means(runs, wrap, offsets, live, tread) / drift)
 
 
 def _softened(stiffness: FloatArray, excess: FloatArray, runs: IntArray, wrap: bool) -> FloatArray:

@@ -6,6 +6,9 @@ from geometry.arrays import BoolArray, FloatArray, IntArray
 
 __all__ = ["Trace", "near", "ragged_ranges", "segment_distance"]
 
+_SAME_WAY = 1e-6  # change of direction that still counts as straight on, radians
+_RISER, _TREAD_REACH = 1.5, 3.0
+
 
 class Trace:
     """A polyline in units of the tolerance, moved to a local origin.
@@ -23,11 +26,35 @@ class Trace:
         self.alongs = np.concatenate([[0.0], np.cumsum(self.edge_lengths)])
         self.length = float(self.alongs[-1])
         self.dimension = int(path.shape[1])
+        self._treads: tuple[FloatArray, FloatArray] | None = None
 
     def at(self, along: FloatArray) -> FloatArray:
         """Return the points at arc lengths (wrapped when closed), shape of `along` with d appended."""
         u = np.mod(along, self.length) if self.closed else along
         return np.stack([np.interp(u, self.alongs, self.path[:, k]) for k in range(self.dimension)], axis=-1)
+
+    def tread(self, along: FloatArray) -> FloatArray:
+        """Return the length of the longest tread of a staircase within 3 of arc lengths, 0 where there is none, (n,).
+
+        A tread is a straight run of edges beside a riser, a run of 1.5 at most.
+        """
+        if self._treads is None:
+            unit = self.edges / np.maximum(self.edge_lengths, 1e-300)[:, None]
+            straight_on = np.abs(np.diff(unit, axis=0)).max(axis=1) <= _SAME_WAY
+            cuts = np.concatenate([[0], 1 + np.flatnonzero(~straight_on), [len(unit)]])
+            runs = np.diff(self.alongs[cuts])
+            if self.closed and len(runs) > 2 and np.abs(unit[0] - unit[-1]).max() <= _SAME_WAY:
+                runs[0] = runs[-1] = runs[0] + runs[-1]
+            riser = np.minimum(np.roll(runs, 1), np.roll(runs, -1)) <= _RISER
+            self._treads = self.alongs[cuts], np.where(riser, runs, 0.0)
+        starts, lengths = self._treads
+        longest = np.zeros(len(along))
+        for shift in (-_TREAD_REACH, 0.0, _TREAD_REACH):
+            u = along + shift
+            u = np.mod(u, self.length) if self.closed else np.clip(u, 0.0, self.length)
+            run = np.clip(np.searchsorted(starts, u, side="right") - 1, 0, len(lengths) - 1)
+            longest = np.maximum(longest, lengths[run])
+        return longest
 
     def distance(self, points: FloatArray, along: FloatArray, half: float | FloatArray) -> FloatArray:
         """Return the distance of points to the stretch of the polyline within `half` of an arc length each, (n,)."""

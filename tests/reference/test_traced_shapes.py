@@ -59,7 +59,7 @@ def test_a_traced_circle_keeps_its_radius(radius):
     assert np.abs(np.median(off, axis=0)).max() <= 0.08
 
 
-@pytest.mark.parametrize("radius", [3.0, 4.0, 6.5, 8.0])
+@pytest.mark.parametrize("radius", [4.0, 5.0, 6.5, 8.0])
 def test_small_circles_have_no_corner_and_small_squares_have_four(radius):
     side = radius * np.sqrt(np.pi)  # a square of the circle's area
     square = dense(side * (np.array([(0, 0), (1, 0), (1, 1), (0, 1)]) - 0.5), 0.1)
