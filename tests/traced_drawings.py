@@ -4,6 +4,8 @@ import ezdxf
 import numpy as np
 import shapely
 
+from converter.jobs.fair import FairSettings, fair_drawing
+from converter.units import parse_length
 from tests.tracing import circle, dense, staircase
 
 HOOK = staircase(dense([(0.0, 0.0), (61.0, 7.0), (57.0, 43.0), (33.0, 24.0), (9.0, 47.0)], 0.1))  # five true corners
@@ -33,6 +35,16 @@ def save_outline(path, points=HOOK, units=4, closed=True, **attributes):
     doc.modelspace().add_lwpolyline(points, close=closed, dxfattribs={"layer": "TRACE", **attributes})
     doc.saveas(path)
     return path
+
+
+def faired(source, tolerance=None, **settings):
+    """Fair a drawing to out.dxf beside it; return the record and the output."""
+    output = source.with_name("out.dxf")
+    length = None if tolerance is None else parse_length(tolerance)
+    before = source.read_bytes()
+    record = fair_drawing(source, output, FairSettings(tolerance=length, force=True, **settings))
+    assert source.read_bytes() == before
+    return record, output
 
 
 def entity(path, handle):
