@@ -9,6 +9,7 @@ from geometry.polyline import Polyline
 
 __all__ = ["circle_spline", "whole_circle"]
 
+_FEW = 200  # vertices for a first look
 _SAMPLES = 4  # a vertex or a tolerance of arc length, whichever gives more
 _STEPS, _SETTLED = 20, 1e-12
 _WITHIN = 0.85  # of the tolerance: no vertex may lie farther from the circle
@@ -41,6 +42,8 @@ def whole_circle(outline: Polyline, tolerance: float) -> tuple[FloatArray, float
     """
     if not outline.closed or outline.dimension != 2:
         return None
+    if _clearly_not(outline.points, tolerance):
+        return None
     length = outline.length()
     count = int(min(_SAMPLES * max(len(outline.points), length / tolerance), 1e7)) + 1
     along = (np.arange(count) + 0.5) / count * length
@@ -60,6 +63,19 @@ def whole_circle(outline: Polyline, tolerance: float) -> tuple[FloatArray, float
     independent = min(len(outline.points), 2.0 * np.pi * radius / tolerance)
     usual = np.where(_ORDERS % 4 == 0, 2.0 * _RASTER, 2.0) * scatter / np.sqrt(independent)
     return (centre + origin, radius) if (waves <= np.minimum(_CHANCE * usual, _MOST * tolerance)).all() else None
+
+
+def _clearly_not(points: FloatArray, tolerance: float) -> bool:
+    """Tell by a few vertices that an outline is no circle: one lies two tolerances off their algebraic circle.
+
+    The vertices of a circle's trace lie within a tolerance of it, and their least-squares circle within another.
+    """
+    few = points[:: max(1, len(points) // _FEW)]
+    few = few - few.mean(axis=0)
+    rows = np.column_stack([2.0 * few, np.ones(len(few))])
+    x, y, rest = np.linalg.lstsq(rows, (few * few).sum(axis=1), rcond=None)[0]
+    radius = np.sqrt(max(rest + x * x + y * y, 0.0))
+    return bool(np.abs(np.hypot(few[:, 0] - x, few[:, 1] - y) - radius).max() > 2.0 * tolerance)
 
 
 def _fit(samples: FloatArray) -> tuple[FloatArray, float, FloatArray, FloatArray] | None:
