@@ -102,6 +102,9 @@ def fair_sentence(record: FairRecord) -> str:
         unit = "" if record.units == "unitless" else f" {record.units}"
         assert worst.deviation is not None
         parts.append(f"certified deviation at most {worst.deviation.certified:.3g} of {worst.tolerance:.3g}{unit}")
+    unfit = [p.id for p in record.profiles if p.left_as_drawn is not None and not p.within_tolerance]
+    if unfit:
+        parts.append(f"no fair curve found for {', '.join(unfit)}")
     out = [p.id for p in faired if not p.within_tolerance]
     parts.append(f"out of tolerance: {', '.join(out)}" if out else "none out of tolerance")
     return "; ".join(parts)

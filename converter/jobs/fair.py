@@ -153,6 +153,7 @@ def _fair_profile(
     )
     if result is None:
         record = _as_drawn(profile, need, "no fair curve keeps the tolerance")
+        record.within_tolerance = False
         record.warnings.append("no fair curve keeps the tolerance, so the profile is left as drawn; state a larger one")
         return record
     written = replace(drawing, profile, result.curve.moved(origin), version)

@@ -15,7 +15,7 @@ from geometry.fairing.trace import ragged_ranges
 
 __all__ = ["remove_lobes"]
 
-_FLAT = 0.003  # curvature that is not counted, per tolerance
+_FLAT = 0.001  # curvature that is not counted, per tolerance
 _HEIGHT = 0.5
 _STIFFER, _STIFFEST = 1.5, 60.0
 _STRAIGHT, _STRAIGHTER = 0.25, 1.4  # share of a lobe's length to begin with, and growth from round to round
