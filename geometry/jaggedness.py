@@ -60,7 +60,7 @@ def estimate(polyline: Polyline) -> Jaggedness:
             "noise",
             sigma,
             _NOISE_SIGMAS * sigma,
-            f"the points scatter by {sigma:.3g} (standard deviation); {_NOISE_SIGMAS:g} times that takes the scatter out",
+            f"the points scatter by {sigma:.3g} (standard deviation); {_NOISE_SIGMAS:g} times that takes it out",
         )
     if _looks_like_stations(merged, edges, turns):
         reason = "the points are sparse and lie on a smooth curve: the chords between them are no evidence"

@@ -1,7 +1,7 @@
 """Take out needless inflections: stiffen small lobes of curvature where the band and the size still hold.
 
-A lobe is a run of curvature of one sign within a piece. Its height is turning times length over 8, the sagitta of
-an arc of that turn and length; a lobe whose height is below half the tolerance is not supported by the evidence.
+A lobe is a run of curvature of one sign within a piece. Its height is how far it stands off its chord; a lobe whose
+height is below half the tolerance is not supported by the evidence.
 """
 
 import numpy as np
@@ -65,11 +65,11 @@ class _Flattening:
         self.coefficients, self.stiffness, self.straightness = fit.coefficients, fit.stiffness, fit.straightness
         every = np.arange(len(self.layout))
         self.excess = self._judged(None, self.layout.piece, self.layout.periodic)
-        self.curvature, self.speed = self._bends(every)
+        self.curvature, self.points = self._bends(every)
 
     def stiffen(self, frozen: BoolArray) -> BoolArray:
         """Raise the stiffness of small lobes and of a margin beside them; return where."""
-        start, stop = _small_lobes(self.layout, self.curvature, self.speed)
+        start, stop = _small_lobes(self.layout, self.curvature, self.points)
         margin = np.maximum(2, (0.7 * (stop - start)).astype(np.intp))
         chosen = _covered(self.layout, start - margin, stop + margin) & ~frozen & (self.stiffness < _STIFFEST)
         self.stiffness = np.where(chosen, np.minimum(_STIFFER * self.stiffness, _STIFFEST), self.stiffness)
@@ -77,7 +77,7 @@ class _Flattening:
 
     def straighten(self, frozen: BoolArray) -> BoolArray:
         """Raise the straightness of small lobes; return where."""
-        start, stop = _small_lobes(self.layout, self.curvature, self.speed)
+        start, stop = _small_lobes(self.layout, self.curvature, self.points)
         length = np.zeros(len(self.layout))
         owner, member, _ = ragged_ranges(start, stop)
         length[member] = np.maximum(1.0, _STRAIGHT * (stop - start)[owner] * self.layout.h[member])
@@ -92,13 +92,13 @@ class _Flattening:
         if chosen is None:
             self.coefficients = self.system.solve(self.stiffness, None, self.straightness)
             self.excess = self._judged(None, layout.piece, layout.periodic)
-            self.curvature, self.speed = self._bends(np.arange(len(layout)))
+            self.curvature, self.points = self._bends(np.arange(len(layout)))
             return
         window = System(layout, sampled.points, sampled.live, self.pins, chosen)
         self.coefficients = window.solve(self.stiffness, self.coefficients, self.straightness)
         core = window_core(layout, window.chosen, window.runs)
         self.excess[window.chosen[core]] = self._judged(window.chosen, window.runs, False)[core]
-        self.curvature[window.chosen], self.speed[window.chosen] = self._bends(window.chosen)
+        self.curvature[window.chosen], self.points[window.chosen] = self._bends(window.chosen)
 
     def _judged(self, chosen: IntArray | None, runs: IntArray, wrap: bool) -> FloatArray:
         """Return the largest of the offsets and local means over their limits, for every interval chosen."""
@@ -113,21 +113,23 @@ class _Flattening:
         )
 
     def _bends(self, chosen: IntArray) -> tuple[FloatArray, FloatArray]:
-        """Return curvature and speed at the middle of intervals."""
+        """Return curvature and points at the middle of intervals."""
         t = np.array(0.5)
-        first, second = (self.layout.evaluate(self.coefficients, chosen, t, k) for k in (1, 2))
+        points, first, second = (self.layout.evaluate(self.coefficients, chosen, t, k) for k in range(3))
         speed = np.maximum(np.hypot(first[:, 0], first[:, 1]), 1e-9)
-        return (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3, speed
+        return (first[:, 0] * second[:, 1] - first[:, 1] * second[:, 0]) / speed**3, points
 
 
-def _small_lobes(layout: Layout, curvature: FloatArray, speed: FloatArray) -> tuple[IntArray, IntArray]:
+def _small_lobes(layout: Layout, curvature: FloatArray, points: FloatArray) -> tuple[IntArray, IntArray]:
     """Return [start, stop) of the small lobes that have a neighbour lobe in their piece, in intervals."""
     curvature = curvature.copy()
     curvature[np.abs(curvature) < _FLAT] = 0.0
     start, stop = _runs(layout, np.sign(curvature))
-    turning = np.concatenate([[0.0], np.cumsum(np.abs(curvature) * speed * layout.h)])
-    along = np.concatenate([[0.0], np.cumsum(speed * layout.h)])
-    height = (turning[stop] - turning[start]) * (along[stop] - along[start]) / 8.0
+    chord = points[stop - 1] - points[start]
+    chord = chord / np.maximum(np.hypot(chord[:, 0], chord[:, 1]), 1e-9)[:, None]
+    lobe = np.repeat(np.arange(len(start)), stop - start)
+    off = points - points[start][lobe]
+    height = np.maximum.reduceat(np.abs(chord[lobe, 0] * off[:, 1] - chord[lobe, 1] * off[:, 0]), start)
     pieces = layout.piece[start]
     if layout.periodic:
         neighbour = np.full(len(start), len(start) > 1)
