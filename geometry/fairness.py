@@ -179,6 +179,8 @@ def _runs(turns: FloatArray, corner: BoolArray) -> tuple[IntArray, FloatArray]:
 
 def _lobes(trace: Trace, limit: float) -> tuple[int, FloatArray]:
     """Count the inflections and return the curvature with that of lobes that do not count set to 0, shape (m,)."""
+    if not len(trace.turns):
+        return 0, trace.curvature
     starts, _ = _runs(trace.turns, trace.corner)
     ends = np.append(starts[1:], len(trace.turns))
     real = ~trace.corner[starts]

@@ -11,6 +11,9 @@ def is_simple(polyline: Polyline) -> bool:
     Args:
         polyline: cleaned, 2-D.
     """
+    if polyline.closed and len(polyline.points) < 3:
+        return False  # there and back
+
     import shapely
 
     shape = shapely.linearrings(polyline.points) if polyline.closed else shapely.linestrings(polyline.points)

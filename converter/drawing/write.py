@@ -112,11 +112,11 @@ def replace(drawing: Drawing, profile: Profile, curve: AnyCurve, version: str | 
             group.set_data([member for member in members if member is not other])
         database.delete_entity(other)
     drawing.replaced.add(profile.id)
-    read = written_curve(entity, profile.frame)
+    read = written_curve(entity, profile.frame, profile.dimension == 3)
     return Written(entity, str(entity.dxf.handle), entity.dxftype(), read, lost)
 
 
-def written_curve(entity: Any, frame: Frame | None = None) -> AnyCurve:
+def written_curve(entity: Any, frame: Frame | None = None, spatial: bool = False) -> AnyCurve:
     """Return the curve of an entity exactly as the file will hold it.
 
     Numbers are written with as many digits as it takes to read the same number back, so the curve in memory is the
@@ -126,12 +126,16 @@ def written_curve(entity: Any, frame: Frame | None = None) -> AnyCurve:
         entity: as written by `replace`.
         frame: plane of the profile; needed for a SPLINE in a tilted plane only, which is otherwise given in world
             coordinates.
+        spatial: whether the curve is wanted in space even where all of it lies at one height.
 
     Raises:
         ConverterError: the entity is not a usable curve.
     """
     if entity.dxftype() == "SPLINE":
-        return _written_spline(entity, frame)
+        return _written_spline(entity, frame, spatial)
+    if spatial and entity.dxftype() == "POLYLINE":
+        points = np.array([tuple(vertex.dxf.location) for vertex in entity.vertices], dtype=np.float64)
+        return Polyline(points, bool(entity.is_closed))
     try:
         return piece_of(entity).part
     except Unusable as error:
@@ -140,12 +144,14 @@ def written_curve(entity: Any, frame: Frame | None = None) -> AnyCurve:
         ) from error
 
 
-def _written_spline(entity: Any, frame: Frame | None) -> Spline:
+def _written_spline(entity: Any, frame: Frame | None, spatial: bool) -> Spline:
     control = np.array([tuple(point) for point in entity.control_points], dtype=np.float64)
     knots = np.array(entity.knots, dtype=np.float64)
     if not np.isfinite(control).all() or not np.isfinite(knots).all():
         raise ConverterError(f"entity {entity.dxf.handle} (SPLINE) has numbers that are not finite")
-    if frame is not None and not frame.level and entity.dxf.flags & _SPLINE_PLANAR:
+    if spatial:
+        pass
+    elif frame is not None and not frame.level and entity.dxf.flags & _SPLINE_PLANAR:
         control = control @ frame.axes()[:2].T
     elif np.all(control[:, 2] == control[0, 2]):
         control = np.ascontiguousarray(control[:, :2])

@@ -11,6 +11,7 @@ from geometry.polyline import Polyline, clean
 
 __all__ = ["Assessment", "assess", "outline_of"]
 
+_SMALL = 3.0  # tolerances: an extent below this leaves nothing to be fair
 _FLATTENING = 1e-3  # share of the tolerance that flattening a drawn curve may cost
 _COINCIDENT = 1e-12  # of the extent: vertices as near as this are one
 _JAGGED_SEGMENTS = 16  # a run of this many straight segments beside true curves may be a trace
@@ -58,10 +59,14 @@ def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessmen
         if tolerance is None:
             reason = "a true curve needs a stated tolerance to be drawn afresh"
             return Assessment(outline, 0.0, None, reason, as_drawn=True)
+        if float(np.ptp(outline.points, axis=0).max()) < _SMALL * tolerance:
+            return Assessment(outline, 0.0, None, "hardly larger than the tolerance: check the units", as_drawn=True)
         return Assessment(outline, tolerance, None, "as stated", slack=slack)
     found = estimate(outline)
     if is_clean_polygon(outline, tolerance if tolerance is not None else found.tolerance):
         return Assessment(outline, 0.0, found, "a clean polygon: every vertex is a corner", as_drawn=True)
+    if tolerance is not None and float(np.ptp(outline.points, axis=0).max()) < _SMALL * tolerance:
+        return Assessment(outline, 0.0, found, "hardly larger than the tolerance: check the units", as_drawn=True)
     if tolerance is not None:
         return Assessment(outline, tolerance, found, "as stated")
     if found.tolerance <= 0.0:

@@ -108,7 +108,7 @@ def best_curve(
     for share in _CAREFUL:
         faired = fair_outline(outline, corners, share * tolerance, degree)
         if faired.as_given:
-            continue
+            break  # less tolerance would not help
         for part in (*_ECONOMY, 0.0) if form == "spline" else _ECONOMY:
             curve = _economised(faired, part * chord_error, form)
             if curve is None:

@@ -26,6 +26,7 @@ _CORNER_REACH = 0.97  # a corner may lie this far from the trace
 _SETTLE = 0.5  # a corner may move this far when its sides pull
 _ONE_SIDED = 6.0  # stiffness of the first fits
 _INSERTIONS = 8
+_APART = 8.0  # stretches outside the band nearer than this get one corner between them
 _CLEAR = (0.0, 1.05, -1.05, 2.1, -2.1, 3.2, -3.2, 4.3, -4.3)
 
 
@@ -71,17 +72,20 @@ def fair_outline(polyline: Polyline, corners: Corners, tolerance: float, degree:
     own, found = corners.along[kept] / tolerance, (corners.points[kept] - origin) / tolerance
     best: tuple[Fit, Nodes, BandCheck] | None = None
     inserted = 0
-    while True:
+    for turn in range(_INSERTIONS + 1):
         try:
             attempt = _attempt(trace, own, found, degree)
         except np.linalg.LinAlgError:
             break
         if best is None or attempt[2].worst < best[2].worst:
             best = attempt
-        if attempt[2].worst <= LIMIT or inserted == _INSERTIONS:
+        if attempt[2].worst <= LIMIT or turn == _INSERTIONS:
             break
-        own, found = _with_corner(trace, own, found, attempt[2], attempt[0])
-        inserted += 1
+        before = len(own)
+        own, found = _with_corners(trace, own, found, attempt[2], attempt[0])
+        if len(own) == before:
+            break
+        inserted += len(own) - before
     if best is None or best[2].worst > LIMIT:
         return Faired(_as_given(polyline, degree), polyline.points, inserted, True)
     fit, nodes, _ = best
@@ -197,23 +201,41 @@ def _carried(fit: Fit, layout: Layout) -> FloatArray:
     return np.asarray(at)
 
 
-def _with_corner(
+def _with_corners(
     trace: Trace, own: FloatArray, found: FloatArray, check: BandCheck, fit: Fit
 ) -> tuple[FloatArray, FloatArray]:
-    """Return the corners with one more, where the trace lies farthest from the curve; its place is not known yet."""
-    if check.trace.size and check.trace.max() >= check.curve.max():
-        place = float(check.trace_own[check.trace.argmax()])
-    else:
-        place = float(fit.sampled.own.ravel()[check.curve.argmax()])
+    """Return the corners with one more in every stretch outside the band, where trace and curve lie farthest apart.
+
+    The places of the new ones are not known yet. At most as many are added as there are, and eight besides.
+    """
+    out_trace, out_curve = check.trace > LIMIT, check.curve > LIMIT
+    at = np.concatenate([check.trace_own[out_trace], fit.sampled.own[out_curve]])
+    size = np.concatenate([check.trace[out_trace], check.curve[out_curve]])
     taken = own if trace.closed else np.concatenate([[0.0], own, [trace.length]])
-    for shift in _CLEAR:  # the nearest place that is a tolerance clear of the others
-        at = (place + shift) % trace.length if trace.closed else place + shift
-        gaps = np.abs(taken - at)
-        gaps = np.minimum(gaps, trace.length - gaps) if trace.closed else gaps
-        if 0.0 <= at < trace.length and (not gaps.size or gaps.min() >= 1.0):
-            row = int(np.searchsorted(own, at))
-            return np.insert(own, row, at), np.insert(found, row, np.nan, axis=0)
-    return own, found
+    places: list[float] = []
+    for place in at[np.argsort(-size, kind="stable")].tolist():
+        others = np.append(taken, places)
+        if places and _least_gap(trace, np.array(places), place) < _APART:
+            continue
+        for shift in _CLEAR:  # the nearest place that is a tolerance clear of the others
+            moved = (place + shift) % trace.length if trace.closed else place + shift
+            if 0.0 <= moved < trace.length and _least_gap(trace, others, moved) >= 1.0:
+                places.append(moved)
+                break
+        if len(places) == len(own) + _INSERTIONS:
+            break
+    row = np.searchsorted(own, places)
+    order = np.argsort(places, kind="stable")
+    row, new = row[order], np.array(places)[order]
+    return np.insert(own, row, new), np.insert(found, row, np.nan, axis=0)
+
+
+def _least_gap(trace: Trace, places: FloatArray, place: float) -> float:
+    """Return how near a place along the trace lies to the nearest of others."""
+    if not places.size:
+        return float(np.inf)
+    gaps = np.abs(places - place)
+    return float((np.minimum(gaps, trace.length - gaps) if trace.closed else gaps).min())
 
 
 def _spline(fit: Fit, nodes: Nodes) -> Spline:

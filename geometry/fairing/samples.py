@@ -13,6 +13,7 @@ __all__ = ["Sampled", "by_own_length", "normal_offsets", "reparametrised"]
 
 _DEAD, _DEAD_SHARE = 1.0, 0.3  # zones at corners that carry no weight: the trace rounds corners off
 _FOOT_STEP = 0.7
+_LEAST_LENGTH = 0.05  # of a piece: its two ends may have been moved onto one point
 
 
 @dataclass(frozen=True)
@@ -94,7 +95,7 @@ def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pin
         step = np.sqrt((np.diff(np.concatenate([points, points[:1]]), axis=0) ** 2).sum(axis=1))
         along = np.concatenate([[0.0], np.cumsum(step)])
         own_nodes = np.append(own, own[0] + trace.length)
-        fresh = Layout(along[-1:], True, layout.degree)
+        fresh = Layout(np.maximum(along[-1:], _LEAST_LENGTH), True, layout.degree)
         return _sampled(trace, fresh, own_nodes[[0, -1]], own_nodes, along)
     assert pins is not None
     held = np.clip(local, 0.0, layout.lengths[piece])
@@ -113,7 +114,7 @@ def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pin
     step[np.diff(owner[order]) > 0] = 0.0  # from one piece's end pin to the next one's start pin
     along = np.concatenate([[0.0], np.cumsum(step)])
     ends = np.flatnonzero(rank[order] == 2.0)
-    lengths = np.maximum(np.diff(np.concatenate([[0.0], along[ends]])), 1e-6)
+    lengths = np.maximum(np.diff(np.concatenate([[0.0], along[ends]])), _LEAST_LENGTH)
     return _sampled(trace, Layout(lengths, False, layout.degree), sampled.bounds, own_nodes, along)
 
 
