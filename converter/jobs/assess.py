@@ -59,20 +59,27 @@ def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessmen
         if tolerance is None:
             reason = "a true curve needs a stated tolerance to be drawn afresh"
             return Assessment(outline, 0.0, None, reason, as_drawn=True)
-        if float(np.ptp(outline.points, axis=0).max()) < _SMALL * tolerance:
+        if _is_small(outline, tolerance):
             return Assessment(outline, 0.0, None, "hardly larger than the tolerance: check the units", as_drawn=True)
         return Assessment(outline, tolerance, None, "as stated", slack=slack)
     found = estimate(outline)
     if is_clean_polygon(outline, tolerance if tolerance is not None else found.tolerance):
         return Assessment(outline, 0.0, found, "a clean polygon: every vertex is a corner", as_drawn=True)
-    if tolerance is not None and float(np.ptp(outline.points, axis=0).max()) < _SMALL * tolerance:
-        return Assessment(outline, 0.0, found, "hardly larger than the tolerance: check the units", as_drawn=True)
     if tolerance is not None:
+        if _is_small(outline, tolerance):
+            return Assessment(outline, 0.0, found, "hardly larger than the tolerance: check the units", as_drawn=True)
         return Assessment(outline, tolerance, found, "as stated")
     if found.tolerance <= 0.0:
         hint = "; state a tolerance to fair them as an outline all the same" if found.kind == "stations" else ""
         return Assessment(outline, 0.0, found, found.reason + hint, as_drawn=True)
+    if _is_small(outline, found.tolerance):
+        return Assessment(outline, 0.0, found, "its points scatter by as much as it is large", as_drawn=True)
     return Assessment(outline, found.tolerance, found, found.reason)
+
+
+def _is_small(outline: Polyline, tolerance: float) -> bool:
+    """Tell whether a profile is so small that a tolerance leaves nothing of it to be fair."""
+    return float(np.ptp(outline.points, axis=0).max()) < _SMALL * tolerance
 
 
 def outline_of(profile: Profile, tolerance: float | None) -> tuple[Polyline, float]:
