@@ -3,13 +3,13 @@
 Each piece between corners has its own uniform knots. A closed profile without corners is one periodic piece.
 """
 
-from functools import cached_property
+from functools import cache
 
 import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 
-__all__ = ["PER_INTERVAL", "Layout", "basis_table"]
+__all__ = ["PER_INTERVAL", "Layout", "basis_table", "sample_tables"]
 
 PER_INTERVAL = 2  # samples in a knot interval
 
@@ -23,12 +23,25 @@ def basis_table(t: FloatArray, degree: int, derivative: int = 0) -> FloatArray:
         derivative: order, by t.
     """
     t = np.asarray(t, dtype=np.float64)
-    powers = _POWERS[degree]
-    out = np.zeros((*t.shape, 4))
+    square = t * t
+    return np.stack([np.ones_like(t), t, square, square * t], axis=-1) @ _polynomials(degree, derivative)
+
+
+@cache
+def _polynomials(degree: int, derivative: int) -> FloatArray:
+    """Return ascending powers of t (rows) of the derivative of each basis function (columns), shape (4, 4)."""
+    out = np.zeros((4, 4))
     for column in range(degree + 1):
-        polynomial = np.polynomial.polynomial.polyder(powers[column], derivative) if derivative else powers[column]
-        out[..., column] = np.polynomial.polynomial.polyval(t, polynomial)
+        powers = np.polynomial.polynomial.polyder(_POWERS[degree][column], derivative)
+        out[: len(powers), column] = powers
     return out
+
+
+@cache
+def sample_tables(degree: int) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return basis values and first two derivatives by the interval's own t at the samples, each (q, 4)."""
+    t = (np.arange(PER_INTERVAL) + 0.5) / PER_INTERVAL
+    return basis_table(t, degree), basis_table(t, degree, 1), basis_table(t, degree, 2)
 
 
 # ascending powers of t for the basis functions of an interval
@@ -67,11 +80,10 @@ class Layout:
     def __len__(self) -> int:
         return len(self.piece)
 
-    @cached_property
+    @property
     def tables(self) -> tuple[FloatArray, FloatArray, FloatArray]:
         """Basis values and first two derivatives by the interval's own t at the samples, each (q, 4)."""
-        t = (np.arange(PER_INTERVAL) + 0.5) / PER_INTERVAL
-        return tuple(basis_table(t, self.degree, k) for k in range(3))  # type: ignore[return-value]
+        return sample_tables(self.degree)
 
     def sample_positions(self) -> FloatArray:
         """Return the parameter of every sample within its piece, shape (m, q)."""
