@@ -45,7 +45,7 @@ class DeviationStatistics:
 
 @dataclass(frozen=True, slots=True, eq=False)
 class Course:
-    """Deviation in the course of a curve.
+    """Deviation from end to end of a curve.
 
     Attributes:
         along: arc length from the start to each sample, shape (n,), drawing units.
@@ -123,7 +123,7 @@ def deviation_statistics(curve: Curve, reference: Curve, tolerance: float) -> De
 
 
 def deviation_along(old: Curve, new: Curve, tolerance: float, crossing: bool = False) -> Course:
-    """Return, in the course of an old curve, how far and to which side a new one lies: + outside it or left of it.
+    """Return, all along an old curve, how far and to which side a new one lies: + outside it or left of it.
 
     The distance is from the sample of the old curve to the nearest point of the new one; the side is that of the new
     curve as seen from the old. Open curves may run in opposite directions: the new one is taken in that in which its
