@@ -1,7 +1,8 @@
 """What kind of polyline this is: a pixel staircase, a chamfered one, hand noise, sparse stations, or clean.
 
-The recommended tolerance is one pixel pitch for staircases and 4.6 standard deviations for noise. The thresholds were
-chosen on traced outlines of known kind; they are empirical.
+The recommended tolerance is 0.85 of the pixel pitch for plain staircases, 0.8 of it for those with cut corners, and 4.6
+standard deviations for noise. These shares and the thresholds were chosen on traced outlines of known shape; they are
+empirical.
 """
 
 from dataclasses import dataclass
@@ -10,6 +11,7 @@ from typing import Literal
 import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray
+from geometry.corners import find_corners
 from geometry.polyline import Polyline, merge_collinear
 
 __all__ = ["Jaggedness", "Kind", "estimate", "is_clean_polygon"]
@@ -18,8 +20,10 @@ Kind = Literal["staircase", "chamfered", "noise", "none", "stations"]
 
 _HEADING = np.radians(0.5)
 _NOISE_SIGMAS = 4.6
+_PITCHES = {"staircase": 0.85, "chamfered": 0.8}
 _NOISE_VERTICES = 20
 _WINDOW, _KEPT = 6, 0.9
+_LEAST_WINDOWS, _BESIDE = 8, 0.3
 # mean of the smallest nine tenths of a chi-square distribution over its whole mean, with 3 and 6 degrees of freedom:
 # F(q; n + 2) / 0.9 with q the 0.9 quantile for n
 _KEPT_SHARE = {1: 0.7972, 2: 0.8637}
@@ -60,7 +64,11 @@ def estimate(polyline: Polyline) -> Jaggedness:
     uneven = _same_sign(turns) < 0.6  # noise turns to and fro; tight small loops hide that, so strong noise needs less
     scatter = (sigma > 0.02 * spacing and uneven and tail < 3.0) or (sigma > 0.04 * spacing and tail < 1.5)
     if scatter and sigma < 0.6 * spacing and len(turns) >= _NOISE_VERTICES:
-        sigma = _scatter(merged)
+        sigma = _scatter(merged, np.zeros(0), 0.0)
+        reach = _NOISE_SIGMAS * sigma
+        if merged.dimension == 2:
+            corners = find_corners(merged, reach)  # what bends sharply is no scatter
+            sigma = _scatter(merged, corners.along, _BESIDE * reach)
         return Jaggedness(
             "noise",
             sigma,
@@ -138,7 +146,9 @@ def _staircase(edges: FloatArray, closed: bool) -> Jaggedness | None:
         return None
     kind: Kind = "chamfered" if chamfered else "staircase"
     shape = "a pixel staircase with cut corners" if chamfered else "a pixel staircase"
-    return Jaggedness(kind, pitch, pitch, f"{shape} of pitch {pitch:.4g}; one pitch takes the steps out")
+    share = _PITCHES[kind]
+    reason = f"{shape} of pitch {pitch:.4g}; {share:g} of it takes the steps out"
+    return Jaggedness(kind, pitch, share * pitch, reason)
 
 
 def _pitch(straight: FloatArray, slant: FloatArray) -> tuple[float, float]:
@@ -184,19 +194,30 @@ def _noise(polyline: Polyline) -> tuple[float, float]:
     return sigma, tail
 
 
-def _scatter(polyline: Polyline) -> float:
+def _scatter(polyline: Polyline, corners: FloatArray, beside: float) -> float:
     """Return the standard deviation of the vertices' scatter across the polyline, drawing units.
 
     The residual of a least-squares parabola over every six neighbouring vertices, three degrees of freedom a
     coordinate, uses more of what the vertices say than one difference does. The largest tenth is left out, since
-    corners are no scatter, and what that takes away from a chi-square distribution is given back.
+    bends may be too tight for a parabola, and what that takes away from a chi-square distribution is given back.
+
+    Args:
+        polyline: cleaned, 2-D or 3-D.
+        corners: arc length of corners; vertices on both sides of one, or within `beside` of one, are not put together.
+        beside: drawing units.
     """
     points = polyline.points
+    along = polyline.alongs()[: len(points)]
     if polyline.closed:
         points = np.concatenate([points, points[: _WINDOW - 1]])
+        along = np.concatenate([along, polyline.length() + along[: _WINDOW - 1]])
+        corners = np.concatenate([corners, corners + polyline.length()])
     count = len(points) - _WINDOW + 1
-    index = np.arange(count)[:, None] + np.arange(_WINDOW)
-    t = Polyline(points).alongs()[index]
+    passed = np.searchsorted(np.sort(corners), [along[:count] - beside, along[_WINDOW - 1 :] + beside])
+    whole = np.flatnonzero(passed[0] == passed[1])
+    rows = whole if len(whole) >= _LEAST_WINDOWS else np.arange(count)
+    index = rows[:, None] + np.arange(_WINDOW)
+    t = along[index]
     t = t - t.mean(axis=1, keepdims=True)
     t /= np.abs(t).max(axis=1, keepdims=True)
     basis, _ = np.linalg.qr(np.stack([np.ones_like(t), t, t * t], axis=-1))
@@ -207,7 +228,7 @@ def _scatter(polyline: Polyline) -> float:
     rest = rest - (rest @ unit[:, :, None]) * unit[:, None]
     across = points.shape[1] - 1
     squares = (rest * rest).sum(axis=(1, 2)) / (across * (_WINDOW - 3))
-    kept = np.sort(squares)[: max(1, round(_KEPT * count))]
+    kept = np.sort(squares)[: max(1, round(_KEPT * len(rows)))]
     return float(np.sqrt(kept.mean() / _KEPT_SHARE[across]))
 
 

@@ -20,7 +20,7 @@ def test_the_pitch_of_a_staircase_is_read_whatever_its_heading(pitch, degrees):
     found = estimate(steps)
     assert found.kind == "staircase"
     assert found.size == pytest.approx(pitch, rel=1e-6)
-    assert found.tolerance == pytest.approx(pitch, rel=1e-6)
+    assert found.tolerance == pytest.approx(0.85 * pitch, rel=1e-6)
     assert estimate(merge_collinear(steps)[0]).size == pytest.approx(pitch, rel=1e-6)
 
 
@@ -38,6 +38,14 @@ def test_the_noise_of_a_digitised_outline_is_read(sigma, seed):
     assert found.kind == "noise"
     assert found.size == pytest.approx(sigma, rel=0.3)
     assert found.tolerance == pytest.approx(4.6 * found.size)
+
+
+@pytest.mark.parametrize("seed", range(3))
+def test_corners_are_no_scatter(seed):
+    star = np.array([[np.cos(a), np.sin(a)] for a in np.arange(16) * np.pi / 8.0]) * np.array([[60.0], [25.0]] * 8)
+    found = estimate(Polyline(noisy(dense(star), 2.0, 0.4, seed), True))
+    assert found.kind == "noise"
+    assert found.size == pytest.approx(0.4, rel=0.15)
 
 
 @pytest.mark.parametrize("count", [500, 5000])
