@@ -26,10 +26,10 @@ from tests.tracing import circle, noisy
 
 
 @pytest.mark.parametrize("pitch", [0.25, 1.0, 40.0])
-def test_auto_takes_one_pitch_of_a_staircase(tmp_path, pitch):
+def test_auto_takes_its_share_of_the_pitch_of_a_staircase(tmp_path, pitch):
     record, _ = faired(save_outline(tmp_path / "in.dxf", pitch * HOOK))
     assert record.tolerance == "auto"
-    assert record.profiles[0].tolerance == pytest.approx(pitch)
+    assert record.profiles[0].tolerance == pytest.approx(0.85 * pitch)
     assert f"pitch {pitch:g}" in record.profiles[0].tolerance_reason
 
 

@@ -8,6 +8,7 @@ from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, join
 from geometry.circle import circle_spline, whole_circle
 from geometry.corners import Corners
+from geometry.fairing.arcs import drawn_as_chains
 from geometry.fairing.band import CORNER_SEARCH, LIMIT, BandCheck, Nodes, repair
 from geometry.fairing.ends import corner_points
 from geometry.fairing.layout import Layout
@@ -140,8 +141,11 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
     nodes = _settled(trace, fit, nodes)
     again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
     fit = relax(again, _carried(fit, again.layout), nodes.pins, straightness_of(again, straight))
-    fit = remove_lobes(fit, nodes.pins)
-    return repair(trace, fit, nodes)
+    chained = drawn_as_chains(trace, fit, nodes.pins)
+    done = repair(trace, remove_lobes(chained, nodes.pins), nodes)
+    if chained is fit or done[2].worst <= LIMIT:
+        return done
+    return repair(trace, remove_lobes(fit, nodes.pins), nodes)
 
 
 def _nodes(trace: Trace, own: FloatArray, found: FloatArray, layout: Layout, coefficients: FloatArray) -> Nodes:
