@@ -71,7 +71,7 @@ def test_a_chain_is_found_again_from_exact_points():
     start = TangentChain(
         0.6 + 2.2j, 0.33, SHAPE.lengths * np.array([1.1, 0.85, 1.15, 0.95]), SHAPE.curvatures * 1.1, SHAPE.line
     )
-    fitted = fit_chain(start, owner, points, both_ends(), 1e-12)
+    fitted = fit_chain(start, owner, points, both_ends(), 1e-12, 40, near=False)
     assert fitted is not None
     assert np.abs(fitted.offsets).max() < 1e-4
     assert fitted.chain.lengths == pytest.approx(SHAPE.lengths, abs=0.02)
@@ -85,7 +85,7 @@ def test_standard_errors_of_curvature_are_those_of_repeated_noise():
     found, told = [], []
     for _ in range(100):
         noise = 0.1 * (rng.normal(size=len(points)) + 1j * rng.normal(size=len(points)))
-        fitted = fit_chain(SHAPE, owner, points + noise, both_ends(), 1e-4)
+        fitted = fit_chain(SHAPE, owner, points + noise, both_ends(), 1e-4, 20, near=True)
         found.append(fitted.chain.curvatures)
         told.append(0.1 * fitted.spread)
     spread = np.std(found, axis=0)[[1, 3]]
@@ -96,7 +96,7 @@ def test_standard_errors_of_curvature_are_those_of_repeated_noise():
 def test_pins_and_closing_are_kept():
     points, owner = chain_points(SHAPE)
     ends = Ends(pins=(complex(points[0]) + 0.2j, complex(points[-1]) - 0.1))
-    fitted = fit_chain(SHAPE, owner, points, ends, 1e-6)
+    fitted = fit_chain(SHAPE, owner, points, ends, 1e-6, 20, near=False)
     joints, _ = fitted.chain.joints()
     assert abs(joints[0] - ends.pins[0]) < 0.01
     assert abs(joints[-1] - ends.pins[1]) < 0.01
@@ -120,7 +120,7 @@ def test_stretches_of_one_circle_are_merged_and_pieces_kept_apart():
 def test_an_eased_chain_keeps_its_ends_and_lies_beside_the_sharp_one():
     points, owner = chain_points(SHAPE)
     ends = Ends(pins=(complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
-    fitted = fit_chain(SHAPE, owner, points, ends, 1e-9)
+    fitted = fit_chain(SHAPE, owner, points, ends, 1e-9, 20, near=True)
     curve, feet = eased(fitted, points, ends, 1e-9)
     assert abs(curve.points[0] - ends.pins[0]) < 1e-9
     assert abs(curve.points[-1] - ends.pins[1]) < 1e-9

@@ -17,7 +17,7 @@ import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.easing import eased
-from geometry.fairing.merging import merged_stretches
+from geometry.fairing.merging import merged_stretches, squares_of
 from geometry.fairing.samples import normal_offsets
 from geometry.fairing.stiffness import BAND, MEAN_4, MEAN_8, Fit, local_means
 from geometry.fairing.system import System
@@ -28,14 +28,14 @@ __all__ = ["drawn_as_chains"]
 
 _LEAST_FREEDOM, _MOST_FREEDOM = 7.0, 200.0  # of the fair curve: less is no gain, more is no machined piece
 _LEAST_LENGTH = 25.0
-_SEGMENTS = {True: 0.42, False: 0.33}  # segments to begin with, of the freedom: on rasters, on points
+_SEGMENTS = {True: 0.42, False: 0.3}  # segments to begin with, of the freedom: on rasters, on points
 _WORSE = {True: 1.3, False: 3.0}  # chi-square lost for every degree of freedom saved
 _SIMPLER_AS_GOOD, _SIMPLER, _PLAINEST = 0.65, 0.5, 0.35  # freedom of a chain, of the fair curve's
 _BETTER, _CLEAR = 15.0, 25.0  # gain in the criterion
 _LEAST_SCATTER, _STEPPED_SCATTER = 0.03, 0.2  # sides along a raster's lines show none, its arcs do
 _ALIKE, _SHORT = 2.5, 10.0  # standard errors; tolerances
 _PROMISING, _ROUNDS, _OPTIONS = 5.0, 12, 5
-_SETTLED = 0.02  # gain in chi-square
+_ROUGHLY, _CLOSELY, _EXACTLY = (12, 1.0), (12, 0.1), (20, 0.02)  # rounds, and the gain in chi-square that ends them
 _MISS = 0.01
 _DENSE = 0.6  # vertices a tolerance
 _SQUARE = 1e-3
@@ -88,9 +88,12 @@ class _Piece:
         """Return the criterion of a chain."""
         return self.criterion(fitted.squares, _freedom(fitted.chain, self.ends))
 
-    def fit(self, chain: TangentChain, segment: IntArray, near: bool) -> Fitted | None:
-        """Return a chain fitted to the points, or None where it cannot be; `near` as for `fit_chain`."""
-        fitted = fit_chain(chain, segment, self.points, self.ends, _SETTLED / self.scale, near)
+    def fit(self, chain: TangentChain, segment: IntArray, rounds: int, gain: float, near: bool) -> Fitted | None:
+        """Return a chain fitted to the points until chi-square falls by less than a gain, or None where it cannot be.
+
+        `rounds` and `near` are as for `fit_chain`.
+        """
+        fitted = fit_chain(chain, segment, self.points, self.ends, gain / self.scale, rounds, near)
         return fitted if fitted is not None and fitted.miss <= _MISS else None
 
     def rolled(self, first: int) -> "_Piece":
@@ -140,7 +143,7 @@ def drawn_as_chains(trace: Trace, fit: Fit, pins: FloatArray | None) -> Fit:
         fitted = _search(piece, own)
         if fitted is None or not _explained(fit, piece, fitted):
             continue
-        curve, feet = eased(fitted, piece.points, piece.ends, _SETTLED / piece.scale)
+        curve, feet = eased(fitted, piece.points, piece.ends, _EXACTLY[1] / piece.scale)
         inside = np.flatnonzero(layout.piece == layout.piece[piece.intervals[0]])
         points[inside] = curve.at(_along_chain(piece, curve.length, feet, layout.sample_positions()[inside]))
         stiffness[inside], straightness[inside] = _STIFFNESS, 0.0
@@ -221,7 +224,10 @@ def _vertices(trace: Trace, start: float, stop: float) -> int:
 def _search(piece: _Piece, starts: IntArray) -> Fitted | None:
     """Return the chain with the least criterion that simplifying steps lead to, if it beats the fair curve clearly."""
     fair = piece.criterion(piece.squares, piece.freedom)
-    best = piece.fit(*_first_chain(piece, starts), near=False)
+    least = piece.criterion(squares_of(piece.points, starts), 3 + 2 * len(starts) - piece.ends.held)
+    if least > fair - _BETTER:
+        return None
+    best = piece.fit(*_first_chain(piece, starts), *_ROUGHLY, near=False)
     if best is None:
         return None
     score = piece.judged(best)
@@ -229,13 +235,13 @@ def _search(piece: _Piece, starts: IntArray) -> Fitted | None:
         return None
     for _ in range(_ROUNDS):
         for chain, segment in _simpler(piece, best):
-            trial = piece.fit(chain, segment, near=True)
+            trial = piece.fit(chain, segment, *_CLOSELY, near=True)
             if trial is not None and piece.judged(trial) < score - 1e-6:
                 best, score = trial, piece.judged(trial)
                 break
         else:
             break
-    best = piece.fit(best.chain, best.segment, near=False) or best  # joints may not have come to rest yet
+    best = piece.fit(best.chain, best.segment, *_EXACTLY, near=False) or best  # joints may not have come to rest yet
     score = piece.judged(best)
     return best if _preferred(piece, _freedom(best.chain, piece.ends), _lost(piece, best), fair - score) else None
 

@@ -12,7 +12,7 @@ __all__ = ["Eased", "eased"]
 _ASIDE = 0.03  # how far an eased joint may lie beside the sharp one, tolerances
 _NARROWEST, _WIDEST, _SHARE = 4.0, 6.0, 0.8
 _STEP = 0.05
-_REFITS = 2
+_REFITS, _ROUNDS = 2, 12
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,7 +56,7 @@ def eased(fitted: Fitted, points: ComplexArray, ends: Ends, settled: float) -> t
         at = chain.feet(points, segment)
         shift = np.interp(at, curve.along, aside)
         left = 1j * np.exp(1j * np.interp(at, curve.along, heading))
-        again = fit_chain(chain, segment, points - shift * left, ends, settled)
+        again = fit_chain(chain, segment, points - shift * left, ends, settled, _ROUNDS, near=True)
         if again is None:
             break
         chain, segment = again.chain, again.segment

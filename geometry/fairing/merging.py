@@ -5,7 +5,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.fairing.tangent_chain import ComplexArray
 
-__all__ = ["merged_stretches"]
+__all__ = ["merged_stretches", "squares_of"]
 
 _FIRST = 4  # points in a stretch to begin with
 _PENALTY = 20.0  # gain in chi-square that keeps two stretches apart: a circle more has three numbers
@@ -41,6 +41,11 @@ def merged_stretches(points: ComplexArray, piece: IntArray, scale: FloatArray) -
         starts, alone = np.delete(starts, merging + 1), np.delete(alone, merging + 1)
         sums = np.delete(sums, merging + 1, axis=1)
     return starts
+
+
+def squares_of(points: ComplexArray, starts: IntArray) -> float:
+    """Return about the least sum of squared distances that stretches have from circles of their own."""
+    return float(_squares(_sums(points, starts)).sum())
 
 
 def _least_of_neighbours(cost: FloatArray) -> BoolArray:

@@ -14,7 +14,7 @@ __all__ = ["ComplexArray", "Ends", "Fitted", "TangentChain", "fit_chain"]
 
 ComplexArray = np.ndarray[tuple[int, ...], np.dtype[np.complex128]]
 
-_ROUNDS, _TRIES = 20, 6
+_TRIES = 6
 _CLOSE_AT_FIRST, _CLOSE_NEAR, _CLOSE_FASTER, _CLOSE_AT_LAST = 30.0, 1e3, 3.0, 1e4  # weight of the ends, in points
 _HEADING = 10.0  # weight of the closing angle, radians against tolerances
 _CLOSED = 3e-3
@@ -135,7 +135,7 @@ class _State:
 
 
 def fit_chain(
-    chain: TangentChain, segment: IntArray, points: ComplexArray, ends: Ends, settled: float, near: bool = False
+    chain: TangentChain, segment: IntArray, points: ComplexArray, ends: Ends, settled: float, rounds: int, near: bool
 ) -> Fitted | None:
     """Return the chain of as many segments that lies nearest to points in the sense of least squares.
 
@@ -149,6 +149,7 @@ def fit_chain(
         points: in order of travel, shape (n,), tolerances.
         ends: conditions.
         settled: gain in the sum of squares below which the search ends.
+        rounds: steps at most.
         near: whether the chain begins near the answer, its ends held.
 
     Returns:
@@ -157,14 +158,14 @@ def fit_chain(
     state = _state(chain, segment, points, ends)
     damping = 1e-3
     normal, free = np.zeros((0, 0)), np.zeros(0, dtype=np.intp)
-    for turn in range(_ROUNDS):
+    for turn in range(rounds):
         hold = min(_CLOSE_AT_LAST, (_CLOSE_NEAR if near else _CLOSE_AT_FIRST) * _CLOSE_FASTER**turn)
         cost = state.cost(hold)
-        slopes, held = _slopes(state, ends)
+        normal, right, held = _equations(state, ends)
         free = np.flatnonzero(np.concatenate([np.ones(3 + len(chain), dtype=np.bool_), ~chain.line]))
-        slopes, held = slopes[:, free], held[:, free]
-        normal = slopes.T @ slopes + hold * (held.T @ held)
-        right = -(slopes.T @ state.offsets + hold * (held.T @ state.misses))
+        normal, held = normal[np.ix_(free, free)], held[:, free]
+        normal = normal + hold * (held.T @ held)
+        right = -(right[free] + hold * (held.T @ state.misses))
         diagonal = np.diag(normal)
         gained = -1.0
         for _ in range(_TRIES):
@@ -280,8 +281,13 @@ def _chord_slope(curvature: FloatArray, length: FloatArray) -> ComplexArray:
     return np.where(small, series, (length * np.exp(1j * turn) - _chord(curvature, length)) / bent)
 
 
-def _slopes(state: _State, ends: Ends) -> tuple[FloatArray, FloatArray]:
-    """Return the derivatives of offsets and misses by start x, y, heading, lengths and turns, (n, 3 + 2 k)."""
+def _equations(state: _State, ends: Ends) -> tuple[FloatArray, FloatArray, FloatArray]:
+    """Return the normal matrix of the offsets, their product with the offsets, and the derivatives of the misses.
+
+    The numbers of a chain are start x, y, heading, lengths and turns, 3 + 2 k. An offset depends on them through the
+    joint where its segment begins, the heading there, and the segment's own curvature only: sums over the points of a
+    segment of products of these four derivatives are all that is needed of them.
+    """
     chain, joints, headings = state.chain, state.joints, state.headings
     count = len(chain)
     direction = np.exp(1j * headings)
@@ -294,13 +300,22 @@ def _slopes(state: _State, ends: Ends) -> tuple[FloatArray, FloatArray]:
     shift = np.broadcast_to(np.array([1.0, 1.0j]), (count + 1, 2))
     by_joint = np.concatenate([shift, 1j * (joints - joints[0])[:, None], by_length, by_turn], axis=1)
     by_heading = np.concatenate([np.zeros((count + 1, 2)), np.ones((count + 1, 1)), 0.0 * later, later], axis=1)
+    own = np.zeros((count, 3 + 2 * count))
+    every = np.arange(count)
+    own[every, 3 + count + every] = 1.0 / chain.lengths
+    own[every, 3 + every] = -chain.curvatures / chain.lengths
+    through = np.stack([by_joint.real[:-1], by_joint.imag[:-1], by_heading[:-1], own], axis=1)
+
     segment, v, root = state.segment, state.local, state.root
-    back = np.exp(-1j * headings[segment])
+    back = np.exp(-1j * headings)[segment]
     bent = chain.curvatures[segment] * np.conj(v) * back
-    out = ((-bent.real + back.imag) / root)[:, None] * by_joint.real[segment]
-    out += ((bent.imag + back.real) / root)[:, None] * by_joint.imag[segment]
-    out += (v.real / root)[:, None] * by_heading[segment]
-    own = (v.real**2 + v.imag**2 - state.offsets**2) / (2.0 * root * chain.lengths[segment])
-    out[np.arange(len(v)), 3 + count + segment] += own
-    out[np.arange(len(v)), 3 + segment] -= chain.curvatures[segment] * own
-    return out, ends.slopes(by_joint, by_heading)
+    square = v.real**2 + v.imag**2 - state.offsets**2
+    slopes = np.stack([back.imag - bent.real, back.real + bent.imag, v.real, 0.5 * square]) / root
+    sums = np.empty((count, 4, 4))
+    for a in range(4):
+        for b in range(a, 4):
+            sums[:, a, b] = sums[:, b, a] = np.bincount(segment, slopes[a] * slopes[b], count)
+    right = np.stack([np.bincount(segment, slopes[a] * state.offsets, count) for a in range(4)], axis=1)
+    flat = through.reshape(4 * count, -1)
+    normal = flat.T @ (sums @ through).reshape(4 * count, -1)
+    return normal, right.reshape(-1) @ flat, ends.slopes(by_joint, by_heading)
