@@ -34,8 +34,8 @@ _SIMPLER_AS_GOOD, _SIMPLER, _PLAINEST = 0.65, 0.5, 0.35  # freedom of a chain, o
 _BETTER, _CLEAR = 15.0, 25.0  # gain in the criterion
 _LEAST_SCATTER, _STEPPED_SCATTER = 0.03, 0.2  # sides along a raster's lines show none, its arcs do
 _ALIKE, _SHORT = 2.5, 10.0  # standard errors; tolerances
-_PROMISING, _ROUNDS, _OPTIONS = 5.0, 12, 5
-_ROUGHLY, _CLOSELY, _EXACTLY = (12, 1.0), (12, 0.1), (20, 0.02)  # rounds, and the gain in chi-square that ends them
+_HOPELESS, _PROMISING, _ROUNDS, _OPTIONS = 30.0, 5.0, 12, 5
+_ROUGHLY, _CLOSELY, _EXACTLY = (6, 1.0), (12, 0.1), (20, 0.02)  # rounds, and the gain in chi-square that ends them
 _MISS = 0.01
 _DENSE = 0.6  # vertices a tolerance
 _SQUARE = 1e-3
@@ -228,8 +228,9 @@ def _search(piece: _Piece, starts: IntArray) -> Fitted | None:
     if least > fair - _BETTER:
         return None
     best = piece.fit(*_first_chain(piece, starts), *_ROUGHLY, near=False)
-    if best is None:
+    if best is None or piece.judged(best) > fair + _HOPELESS:
         return None
+    best = piece.fit(best.chain, best.segment, *_CLOSELY, near=True) or best
     score = piece.judged(best)
     if score > fair - _PROMISING:
         return None

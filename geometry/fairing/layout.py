@@ -64,7 +64,7 @@ class Layout:
         periodic: whether the one piece is a loop.
     """
 
-    def __init__(self, lengths: FloatArray, periodic: bool, degree: int, knot_step: float = 1.0) -> None:
+    def __init__(self, lengths: FloatArray, periodic: bool, degree: int, knot_step: float) -> None:
         self.lengths, self.periodic, self.degree = lengths, periodic, degree
         self.counts = np.maximum(8 if periodic else 6, np.ceil(lengths / knot_step)).astype(np.intp)
         self.piece = np.repeat(np.arange(len(lengths)), self.counts)

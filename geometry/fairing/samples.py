@@ -64,7 +64,7 @@ def by_own_length(trace: Trace, bounds: FloatArray, periodic: bool, degree: int)
         bounds: arc lengths that cut the trace into pieces, increasing, shape (p + 1,); on a loop the last one may
             pass the length by up to one turn.
     """
-    layout = Layout(np.diff(bounds), periodic, degree)
+    layout = Layout(np.diff(bounds), periodic, degree, trace.knot_step)
     return _sampled(trace, layout, bounds, bounds, bounds - bounds[0])
 
 
@@ -95,7 +95,7 @@ def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pin
         step = np.sqrt((np.diff(np.concatenate([points, points[:1]]), axis=0) ** 2).sum(axis=1))
         along = np.concatenate([[0.0], np.cumsum(step)])
         own_nodes = np.append(own, own[0] + trace.length)
-        fresh = Layout(np.maximum(along[-1:], _LEAST_LENGTH), True, layout.degree)
+        fresh = Layout(np.maximum(along[-1:], _LEAST_LENGTH), True, layout.degree, trace.knot_step)
         return _sampled(trace, fresh, own_nodes[[0, -1]], own_nodes, along)
     assert pins is not None
     held = np.clip(local, 0.0, layout.lengths[piece])
@@ -115,7 +115,8 @@ def reparametrised(trace: Trace, sampled: Sampled, coefficients: FloatArray, pin
     along = np.concatenate([[0.0], np.cumsum(step)])
     ends = np.flatnonzero(rank[order] == 2.0)
     lengths = np.maximum(np.diff(np.concatenate([[0.0], along[ends]])), _LEAST_LENGTH)
-    return _sampled(trace, Layout(lengths, False, layout.degree), sampled.bounds, own_nodes, along)
+    fresh = Layout(lengths, False, layout.degree, trace.knot_step)
+    return _sampled(trace, fresh, sampled.bounds, own_nodes, along)
 
 
 def normal_offsets(sampled: Sampled, coefficients: FloatArray, intervals: IntArray | None = None) -> FloatArray:

@@ -8,6 +8,7 @@ __all__ = ["Trace", "near", "ragged_ranges", "segment_distance"]
 
 _SAME_WAY = 1e-6  # change of direction that still counts as straight on, radians
 _RISER, _TREAD_REACH = 1.5, 3.0
+_EDGE, _KNOTS_A_EDGE, _WIDEST = 0.4, 2.0, 1.6
 
 
 class Trace:
@@ -17,6 +18,7 @@ class Trace:
         path: vertices in order of travel, the first one repeated at the end when closed, shape (n + 1, d).
         alongs: arc length at every vertex of the path, shape (n + 1,).
         closed: whether the path is a loop.
+        knot_step: distance of the knots of a curve that follows it.
     """
 
     def __init__(self, path: FloatArray, closed: bool) -> None:
@@ -26,6 +28,9 @@ class Trace:
         self.alongs = np.concatenate([[0.0], np.cumsum(self.edge_lengths)])
         self.length = float(self.alongs[-1])
         self.dimension = int(path.shape[1])
+        # points far apart say nothing of what is finer; of a staircase the risers are looked at, half of all edges
+        edge = float(np.quantile(self.edge_lengths, _EDGE))
+        self.knot_step = min(max(1.0, edge / _KNOTS_A_EDGE), _WIDEST)
         self._treads: tuple[FloatArray, FloatArray] | None = None
 
     def at(self, along: FloatArray) -> FloatArray:
