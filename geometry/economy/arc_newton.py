@@ -7,6 +7,7 @@ lowered under these constraints, p rising, all chains at once; each step is one 
 """
 
 from dataclasses import dataclass
+from functools import cached_property
 
 import numpy as np
 from scipy.linalg.lapack import dgbsv
@@ -25,7 +26,6 @@ POWERS = (2, 2, 3, 3, 4, 4, 6, 6, 8, 8, 8, 8, 10, 10, 10, 12, 12, 12, 16, 16, 16
 SLOTS = 5  # per joint: angle, shift, slide, multiplier of the arc behind it, multiplier of its being a line
 PINNED = 1e14
 CHECKS = 24  # samples per arc and way in the final measure
-LARGE = np.inf
 
 
 @dataclass(frozen=True, eq=False)
@@ -59,39 +59,81 @@ class _Batch:
     s: FloatArray
     line: BoolArray
     owner: IntArray  # chain of every joint
-    start: IntArray  # joint at the start of every arc
-    end: IntArray  # joint at its end
-    wrap: FloatArray  # 1 where the arc runs through the seam of a closed chain
-    pinned: BoolArray
-    place: IntArray  # place of every joint in the linear system
-    width: int  # half band width of that system
 
-    @property
-    def arc_owner(self) -> IntArray:
-        return self.owner[self.start]
+    def __post_init__(self) -> None:
+        n = len(self.owner)
+        self.first_joint = np.searchsorted(self.owner, np.arange(len(self.piece)))
+        self.pinned = np.zeros(n, dtype=np.bool_)
+        if self.track.closed:  # one chain: fold it, so that neighbours stay near each other
+            self.start, self.end = np.arange(n), np.append(np.arange(1, n), 0)
+            half = (n + 1) // 2
+            place = np.where(np.arange(n) < half, 2 * np.arange(n), 2 * (n - 1 - np.arange(n)) + 1)
+            self.width = 14  # half band width of the linear system
+        else:
+            ends = np.append(self.first_joint[1:], n) - 1
+            self.start = np.delete(np.arange(n), ends)
+            self.end = self.start + 1
+            self.pinned[ends] = self.pinned[self.first_joint] = True
+            place, self.width = np.arange(n), 7
+        self.base = SLOTS * place  # first place of every joint in the linear system
+        self.wrap = (self.end < self.start).astype(np.float64)  # 1 where the arc runs through the seam
+        self.arc_owner = self.owner[self.start]
+        self.first_arc = np.searchsorted(self.arc_owner, np.arange(len(self.piece)))
+
+    @cached_property
+    def own(self) -> IntArray:
+        """Places of the unknowns of every joint, shape (j, 3)."""
+        return self.base[:, None] + np.arange(3)
+
+    @cached_property
+    def sides(self) -> IntArray:
+        """Places of the unknowns of the joints at both ends of every arc, shape (n, 6)."""
+        return np.concatenate([self.own[self.start], self.own[self.end]], axis=1)
+
+    @cached_property
+    def band_places(self) -> IntArray:
+        """Places, in the band matrix by columns, of what `_solve` puts there, in its order."""
+        tangent, straight = self.base[self.start] + 3, self.base[self.start] + 4
+        behind = np.ones(len(self.base), dtype=np.bool_)
+        behind[self.start] = False  # joints without an arc behind them have idle multipliers
+        idle = np.concatenate([self.base[behind] + 3, self.base[behind] + 4, straight[~self.line]])
+        held = np.repeat(straight[self.line], 2)
+        ends = self.sides[self.line][:, [0, 3]].ravel()
+        rows = [np.repeat(self.sides, 6, axis=1), np.repeat(tangent, 6), self.sides, held, ends]
+        columns = [np.tile(self.sides, (1, 6)), self.sides, np.repeat(tangent, 6), ends, held]
+        diagonal = [tangent, straight[self.line], idle, self.own]
+        row = np.concatenate([part.ravel() for part in rows + diagonal])
+        column = np.concatenate([part.ravel() for part in columns + diagonal])
+        return np.asarray(2 * self.width + row - column + (3 * self.width + 1) * column)
+
+    def without(self, gone: BoolArray) -> "_Batch":
+        """Return the batch without some chains."""
+        keep, kept_arcs = ~gone[self.owner], ~gone[self.arc_owner]
+        number = np.cumsum(~gone) - 1
+        return _Batch(
+            self.track,
+            self.piece[~gone],
+            self.joint[keep],
+            self.angle[keep],
+            self.s[keep],
+            self.line[kept_arcs],
+            number[self.owner[keep]],
+        )
+
+    def chain(self, index: int) -> Chain:
+        """Return one chain."""
+        mine, arcs = self.owner == index, self.arc_owner == index
+        closed = self.track.closed
+        return Chain(
+            int(self.piece[index]), self.joint[mine], self.angle[mine], self.s[mine], self.line[arcs], closed
+        )
 
 
 def _batch(track: Track, chains: list[Chain]) -> _Batch:
-    sizes = np.array([len(chain.joint) for chain in chains])
-    owner = np.repeat(np.arange(len(chains)), sizes)
-    n = len(owner)
-    pinned = np.zeros(n, dtype=np.bool_)
-    if track.closed:  # one chain: fold it, so that neighbours stay near each other
-        start, end = np.arange(n), np.append(np.arange(1, n), 0)
-        wrap = (end == 0).astype(np.float64)
-        half = (n + 1) // 2
-        place = np.where(np.arange(n) < half, 2 * np.arange(n), 2 * (n - 1 - np.arange(n)) + 1)
-        width = 14
-    else:
-        ends = np.cumsum(sizes) - 1
-        start = np.delete(np.arange(n), ends)
-        end, wrap = start + 1, np.zeros(len(start))
-        pinned[ends] = pinned[ends - sizes + 1] = True
-        place, width = np.arange(n), 7
+    owner = np.repeat(np.arange(len(chains)), [len(chain.joint) for chain in chains])
     joint, angle, s = (np.concatenate([getattr(chain, name) for chain in chains]) for name in ("joint", "angle", "s"))
     line = np.concatenate([chain.line for chain in chains])
-    piece = np.array([chain.piece for chain in chains], dtype=np.intp)
-    return _Batch(track, piece, joint, angle, s, line, owner, start, end, wrap, pinned, place, width)
+    return _Batch(track, np.array([chain.piece for chain in chains], dtype=np.intp), joint, angle, s, line, owner)
 
 
 @dataclass(frozen=True, eq=False)
@@ -143,48 +185,39 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         chains: starting chains in order of their pieces; an open track may have many, a closed track has one.
         goals: a chain is left as soon as its error is this share of the chord error, shape (c,).
     """
-    best: list[Chain] = list(chains)
+    whole = batch = _batch(track, chains)
+    best = [whole.joint.copy(), whole.angle.copy(), whole.s.copy()]
     score = np.full(len(chains), np.inf)
-    active = np.arange(len(chains))
-    batch = _batch(track, chains)
+    active, rows = np.arange(len(chains)), np.arange(len(whole.joint))
     goal = np.array(goals) * chord_error
     history = np.full((len(POWERS), len(chains)), np.inf)
     for step, power in enumerate(POWERS):
         shape = _shape(batch)
         r, points, seen = _distances(batch, shape)
-        owner = batch.arc_owner
-        first = np.searchsorted(owner, np.arange(len(active)))
-        worst = np.maximum.reduceat(np.abs(r).max(axis=1), first)
-        defect = np.maximum.reduceat(np.abs(shape.defect), first)
+        worst = np.maximum.reduceat(np.abs(r).max(axis=1), batch.first_arc)
+        defect = np.maximum.reduceat(np.abs(shape.defect), batch.first_arc)
         merit = np.where(np.isfinite(worst), worst / chord_error + 10.0 * defect, np.inf)
-        for index in np.flatnonzero(merit < score[active]).tolist():
-            score[active[index]] = merit[index]
-            best[active[index]] = _chain(batch, index)
+        better = merit < score[active]
+        if better.any():
+            score[active[better]] = merit[better]
+            mine = better[batch.owner]
+            for kept, now in zip(best, (batch.joint, batch.angle, batch.s), strict=True):
+                kept[rows[mine]] = now[mine]
         history[step, active] = worst
         done = (worst < goal[active]) & (defect < 1e-3)
         if step >= 9:
             done |= (worst > 1.02 * np.minimum(goal[active], chord_error)) & (history[step - 3, active] < 1.01 * worst)
-        broken = _advance(batch, shape, r, points, seen, worst, goal[active], power)
-        done |= broken | ~np.isfinite(merit)
+        done |= ~np.isfinite(merit)
+        if not done.all():
+            done |= _advance(batch, shape, r, points, seen, worst, goal[active], power)
         if done.any():
-            active = active[~done]
+            active, rows = active[~done], rows[~done[batch.owner]]
             if not len(active):
                 break
-            batch = _batch(track, [_chain(batch, k) for k in np.flatnonzero(~done).tolist()])
-    return measure_chains(track, _closed_up(track, best), chord_error)
-
-
-def _chain(batch: _Batch, index: int) -> Chain:
-    mine = batch.owner == index
-    arcs = batch.arc_owner == index
-    return Chain(
-        int(batch.piece[index]),
-        batch.joint[mine],
-        batch.angle[mine],
-        batch.s[mine],
-        batch.line[arcs],
-        batch.track.closed,
-    )
+            batch = batch.without(done)
+    whole.joint, whole.angle, whole.s = best
+    _close_up(whole)
+    return _measured(whole, [whole.chain(k) for k in range(len(chains))], chord_error)
 
 
 def _advance(
@@ -199,96 +232,81 @@ def _advance(
 ) -> BoolArray:
     """Take one Newton step of the p-norm in place; return the chains that broke."""
     owner = batch.arc_owner
-    chains = len(worst)
     level = np.maximum(worst, 1e-3 * goal)
     size = np.maximum(np.abs(r) / level[owner][:, None], 0.03)
     weight = size ** (power - 2) if power > 2 else np.ones_like(size)
-    total = np.bincount(owner, weights=weight.sum(axis=1), minlength=chains)
-    count = np.bincount(owner, minlength=chains) * SAMPLES
+    total = np.add.reduceat(weight.sum(axis=1), batch.first_arc)
+    count = np.bincount(owner, minlength=len(worst)) * SAMPLES
     weight *= (count / total)[owner][:, None]
     jacobian = _jacobian(batch, shape, points, seen)
-    weighted = jacobian * weight[..., None]
-    block = np.zeros((len(owner), 8, 8))
-    inner = np.array([0, 1, 2, 5, 6, 7])
-    gram = np.matmul(weighted.transpose(0, 2, 1), jacobian)
-    block[:, inner[:, None], inner] = gram
-    pull = np.matmul(weighted.transpose(0, 2, 1), r[..., None])[..., 0] * min(1.0, 2.0 / power)
+    weighted = (jacobian * weight[:, None, :]) @ np.concatenate([jacobian, r[:, None, :]], axis=1).transpose(0, 2, 1)
+    gram, pull = weighted[:, :, :6], weighted[:, :, 6] * min(1.0, 2.0 / power)
     near = _shorter_chord(batch, shape)
     mean = float(np.trace(gram, axis1=1, axis2=2).mean()) + 1e-300
     slide = 0.3 * SAMPLES * (np.maximum(level, goal)[batch.owner] / (0.15 * near)) ** 2
-    diagonal = np.stack([1e-9 * mean * near**2, np.full(len(near), 1e-9 * mean), slide], axis=1)
-    x = _solve(batch, shape, block, pull, diagonal)
-    return _move(batch, x, near)
+    diagonal = np.empty((len(near), 3))
+    diagonal[:, 0], diagonal[:, 1], diagonal[:, 2] = 1e-9 * mean * near**2, 1e-9 * mean, slide
+    return _move(batch, _solve(batch, shape, gram, pull, diagonal), near)
 
 
 def _jacobian(batch: _Batch, shape: _Shape, points: ComplexArray, seen: ComplexArray) -> FloatArray:
-    """Return the derivatives of the distances by (angle, shift, slide) of both joints, shape (n, SAMPLES, 6)."""
+    """Return the derivatives of the distances by (angle, shift, slide) of both joints, shape (n, 6, SAMPLES)."""
     z = (points - batch.joint[batch.start][:, None]) / shape.chord[:, None]
     normal = 1j - shape.bend[:, None] * seen
-    normal *= (np.exp(1j * (shape.chi - shape.half)))[:, None] / np.maximum(np.abs(normal), 1e-300)
+    normal /= np.maximum(np.abs(normal), 1e-300)
     normal = np.conj(normal)
-    by_0 = normal * (1.0 - z) * np.exp(1j * shape.angle_0)[:, None]
-    by_1 = normal * z * np.exp(1j * shape.angle_1)[:, None]
-    lever = 0.5 * np.abs(z) * np.abs(1.0 - z) * shape.length[:, None]
-    return np.stack([lever, -by_0.imag, by_0.real, -lever, -by_1.imag, by_1.real], axis=-1)
+    by_1 = normal * z
+    by_0 = (normal - by_1) * np.exp(1j * (shape.angle_0 - shape.chi + shape.half))[:, None]
+    by_1 *= np.exp(1j * (shape.angle_1 - shape.chi + shape.half))[:, None]
+    out = np.empty((len(z), 6, SAMPLES))
+    out[:, 0] = 0.5 * np.abs(z * (1.0 - z)) * shape.length[:, None]
+    out[:, 1], out[:, 2], out[:, 3] = -by_0.imag, by_0.real, -out[:, 0]
+    out[:, 4], out[:, 5] = -by_1.imag, by_1.real
+    return out
 
 
 def _shorter_chord(batch: _Batch, shape: _Shape) -> FloatArray:
     near = np.full(len(batch.joint), np.inf)
-    np.minimum.at(near, batch.start, shape.length)
-    np.minimum.at(near, batch.end, shape.length)
+    near[batch.start] = shape.length
+    near[batch.end] = np.minimum(near[batch.end], shape.length)
     return near
 
 
-def _solve(batch: _Batch, shape: _Shape, block: FloatArray, pull: FloatArray, diagonal: FloatArray) -> FloatArray:
+def _solve(batch: _Batch, shape: _Shape, gram: FloatArray, pull: FloatArray, diagonal: FloatArray) -> FloatArray:
     """Return the step (angle, shift, slide) of every joint, shape (j, 3): the constrained minimum of the model."""
-    n, joints = len(shape.length), len(batch.joint)
-    size = SLOTS * joints
+    n, size, w = len(shape.length), SLOTS * len(batch.joint), batch.width
     row = np.empty((n, 6))
     for column, angle, sign in ((0, shape.angle_0, 2.0), (3, shape.angle_1, -2.0)):
         lever = sign * np.exp(1j * angle) / shape.chord
         row[:, column], row[:, column + 1], row[:, column + 2] = 1.0, lever.real, lever.imag
-    held = np.where(batch.line, 1.0, 0.0)
-    inner = np.array([0, 1, 2, 5, 6, 7])
-    block[:, 3, inner] = block[:, inner, 3] = row
-    block[:, 4, 0] = block[:, 0, 4] = -held
-    block[:, 4, 5] = block[:, 5, 4] = held
-    block[:, 3, 3] = -1e-10
-    block[:, 4, 4] = np.where(batch.line, -1e-10, 1.0)
-    base = SLOTS * batch.place
-    index = np.concatenate([base[batch.start][:, None] + np.arange(5), base[batch.end][:, None] + np.arange(3)], axis=1)
-    free = diagonal.copy()
-    free[batch.pinned, 1:] = PINNED
-    own = (base[:, None] + np.arange(3)).ravel()
-    idle = np.setdiff1d(base, base[batch.start])  # joints without an arc behind them have idle multipliers
-    idle = np.concatenate([idle + 3, idle + 4])
-    w = batch.width
-    place = (w + w + index[:, :, None] - index[:, None, :]) * size + index[:, None, :]
-    flat = np.concatenate([place.ravel(), 2 * w * size + own, 2 * w * size + idle])
-    value = np.concatenate([block.ravel(), free.ravel(), np.ones(len(idle))])
-    band = np.bincount(flat, weights=value, minlength=(3 * w + 1) * size).reshape(3 * w + 1, size)
-    right = np.zeros((n, 8))
-    right[:, inner] = -pull
-    right[:, 3] = -shape.defect
-    right[:, 4] = np.where(batch.line, -2.0 * shape.half, 0.0)
-    b = np.bincount(index.ravel(), weights=right.ravel(), minlength=size)
-    _, _, x, info = dgbsv(w, w, band, b, overwrite_ab=True, overwrite_b=True)
+    held = np.flatnonzero(batch.line)
+    turned = np.tile([-1.0, 1.0], len(held))  # a line does not turn
+    faint = np.full(n + len(held), -1e-10)
+    idle = np.ones(2 * (len(batch.joint) - n) + n - len(held))
+    diagonal[batch.pinned, 1:] = PINNED
+    parts = (gram, row, row, turned, turned, faint, idle, diagonal)
+    value = np.concatenate([part.ravel() for part in parts])
+    band = np.bincount(batch.band_places, weights=value, minlength=(3 * w + 1) * size)
+    b = np.bincount(batch.sides.ravel(), weights=-pull.ravel(), minlength=size)
+    tangent = batch.base[batch.start] + 3
+    b[tangent] = -shape.defect
+    b[tangent[held] + 1] = -2.0 * shape.half[held]
+    _, _, x, info = dgbsv(w, w, band.reshape(size, 3 * w + 1).T, b, overwrite_ab=True, overwrite_b=True)
     if info != 0:
-        return np.full((joints, 3), np.nan)
-    return np.asarray(x[own].reshape(joints, 3))
+        return np.full((len(batch.joint), 3), np.nan)
+    return np.asarray(x[batch.own])
 
 
 def _move(batch: _Batch, x: FloatArray, near: FloatArray) -> BoolArray:
     """Move the joints in place by a step, scaled per chain so that no slide leaves its neighbourhood."""
-    chains = int(batch.owner[-1]) + 1
-    starts = np.searchsorted(batch.owner, np.arange(chains))
-    with np.errstate(invalid="ignore"):
-        use = np.maximum(np.maximum(np.abs(x[:, 2]), np.abs(x[:, 1])) / (0.3 * near), np.abs(x[:, 0]) / 0.7)
-    scale = 1.0 / np.maximum(np.maximum.reduceat(use, starts), 1.0)
+    size = np.abs(x)
+    use = np.maximum(np.maximum(size[:, 2], size[:, 1]) / (0.3 * near), size[:, 0] / 0.7)
+    scale = 1.0 / np.maximum(np.maximum.reduceat(use, batch.first_joint), 1.0)
     x = x * scale[batch.owner][:, None]
     x[batch.pinned, 1:] = 0.0
-    broken = ~np.isfinite(np.add.reduceat(x.sum(axis=1), starts))
-    x[broken[batch.owner]] = 0.0
+    broken = ~np.isfinite(np.add.reduceat(x.sum(axis=1), batch.first_joint))
+    if broken.any():
+        x[broken[batch.owner]] = 0.0
     batch.joint = batch.joint + (1j * x[:, 1] + x[:, 2]) * np.exp(1j * batch.angle)
     batch.angle = batch.angle + x[:, 0]
     centre, slope, bend = batch.track.motion(batch.s)
@@ -298,23 +316,20 @@ def _move(batch: _Batch, x: FloatArray, near: FloatArray) -> BoolArray:
     foot = batch.s + ahead / np.maximum(down, 0.2 * squared + 1e-30)
     batch.s = np.where(batch.pinned, batch.s, foot)
     advance = batch.s[batch.end] + batch.wrap * batch.track.period - batch.s[batch.start]
-    stuck = np.minimum.reduceat(advance, np.searchsorted(batch.arc_owner, np.arange(chains))) <= 0.0
-    return np.asarray(broken | stuck)
+    return np.asarray(broken | (np.minimum.reduceat(advance, batch.first_arc) <= 0.0))
 
 
-def _closed_up(track: Track, chains: list[Chain]) -> list[Chain]:
-    """Make the tangents of chains exactly continuous by the smallest moves."""
-    batch = _batch(track, chains)
+def _close_up(batch: _Batch) -> None:
+    """Make the tangents of chains exactly continuous, in place, by the smallest moves."""
     for _ in range(6):
         shape = _shape(batch)
         off = np.maximum(np.abs(shape.defect), np.where(batch.line, np.abs(shape.half), 0.0))
         if off.max() < 1e-13:
             break
         near = _shorter_chord(batch, shape)
-        block = np.zeros((len(shape.length), 8, 8))
         diagonal = np.stack([0.01 * near**2, np.ones_like(near), np.full_like(near, 0.01)], axis=1)
-        _move(batch, _solve(batch, shape, block, np.zeros((len(shape.length), 6)), diagonal), near)
-    return [_chain(batch, k) for k in range(len(chains))]
+        n = len(shape.length)
+        _move(batch, _solve(batch, shape, np.zeros((n, 6, 6)), np.zeros((n, 6)), diagonal), near)
 
 
 def chain_bulges(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, FloatArray]:
@@ -328,20 +343,21 @@ def chain_bulges(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, 
 @np.errstate(over="ignore", invalid="ignore")
 def measure_chains(track: Track, chains: list[Chain], chord_error: float) -> list[Polished]:
     """Measure chains against the curve, both ways."""
-    batch = _batch(track, chains)
+    return _measured(_batch(track, chains), chains, chord_error)
+
+
+def _measured(batch: _Batch, chains: list[Chain], chord_error: float) -> list[Polished]:
+    track, owner = batch.track, batch.arc_owner
     shape = _shape(batch)
     bulges = np.where(batch.line, 0.0, np.tan(0.5 * shape.half))
     s = np.stack([batch.s[batch.start], batch.s[batch.end] + batch.wrap * track.period], axis=1)
-    owner = batch.arc_owner
     sound = np.isfinite(bulges) & (np.abs(shape.half) < 0.5 * np.pi + 0.3) & (s[:, 1] > s[:, 0])
-    good = np.bincount(owner, weights=~sound, minlength=len(chains)) == 0.0
-    errors = np.full(len(owner), LARGE)
+    good = np.logical_and.reduceat(sound, batch.first_arc)
+    errors = np.full(len(owner), np.inf)
     keep = good[owner]
     if keep.any():
         start, end = batch.joint[batch.start], batch.joint[batch.end]
         errors[keep] = two_sided(track, start[keep], end[keep], bulges[keep], s[keep], owner[keep], chord_error, CHECKS)
-    out = []
-    for k, chain in enumerate(chains):
-        mine = owner == k
-        out.append(Polished(chain, errors[mine], float(np.abs(shape.defect[mine]).max())))
-    return out
+    defects = np.maximum.reduceat(np.abs(shape.defect), batch.first_arc)
+    parts = np.split(errors, batch.first_arc[1:])
+    return [Polished(*parts_) for parts_ in zip(chains, parts, defects.tolist(), strict=True)]

@@ -31,20 +31,20 @@ def two_sided(
         bulges: of the lines and arcs, shape (n,).
         s: arc length on the track that belongs to the start and the end of each, shape (n, 2).
         group: chain that each belongs to, shape (n,); only neighbours of the same chain are looked at.
-        limit: distance over which a sample of the chain is looked at again from many places of the track.
-        samples: on every stretch, each way; the nodes of the track on it are looked at besides.
+        limit: distance over which a sample is looked at again, of the chain from many places of the track, of the track
+            from the neighbouring arcs.
+        samples: on every stretch, each way; where all of a chain's are within the limit, the nodes of the track on it
+            are looked at besides.
     """
     n = len(bulges)
     share = (np.arange(samples) + 0.5) / samples
     along = s[:, :1] + (s[:, 1:] - s[:, :1]) * share
     curve = track.points(along)
     to_chain = distance_to_arcs(curve, start[:, None], end[:, None], bulges[:, None])
-    for other in (-1, 1):  # near a joint the neighbour may be nearer
-        index = np.arange(n) + other
-        index = np.mod(index, n) if track.closed else np.clip(index, 0, n - 1)
-        index = np.where(group[index] == group, index, np.arange(n))
-        near = distance_to_arcs(curve, start[index, None], end[index, None], bulges[index, None])
-        to_chain = np.minimum(to_chain, near)
+    row, column = np.nonzero(to_chain > limit)
+    if row.size:  # near a joint the neighbour may be nearer
+        at, off = curve[row, column], to_chain[row, column]
+        to_chain[row, column] = _to_neighbours(at, off, row, start, end, bulges, group, track.closed)
     points = arc_samples(start[:, None], end[:, None], bulges[:, None], np.linspace(0.0, 1.0, samples + 1))
     guess = s[:, :1] + (s[:, 1:] - s[:, :1]) * np.linspace(0.0, 1.0, samples + 1)
     reach = s[:, 1:] - s[:, :1]
@@ -63,17 +63,40 @@ def two_sided(
         again = nearby_distance(track, points[doubt], guess, low[doubt], high[doubt], 8).max(axis=1)
         to_curve[doubt] = np.minimum(to_curve[doubt], again)
     worst = np.maximum(to_chain, to_curve)
+    over = np.zeros(int(group.max()) + 1, dtype=np.bool_)
+    over[group[worst > limit]] = True
+    if over.all():  # too far anyway
+        return worst
     node, owner = _nodes_inside(track, s)
+    if over.any():
+        kept = ~over[group[owner]]
+        node, owner = node[kept], owner[kept]
     at = track.node_points[node]
     off = distance_to_arcs(at, start[owner], end[owner], bulges[owner])
     more = np.flatnonzero(off > worst[owner])
     at, off, owner = at[more], off[more], owner[more]
-    for other in (-1, 1):
-        index = np.mod(owner + other, n) if track.closed else np.clip(owner + other, 0, n - 1)
-        index = np.where(group[index] == group[owner], index, owner)
-        off = np.minimum(off, distance_to_arcs(at, start[index], end[index], bulges[index]))
+    off = _to_neighbours(at, off, owner, start, end, bulges, group, track.closed)
     np.maximum.at(worst, owner, off)
     return worst
+
+
+def _to_neighbours(
+    points: ComplexArray,
+    off: FloatArray,
+    owner: IntArray,
+    start: ComplexArray,
+    end: ComplexArray,
+    bulges: FloatArray,
+    group: IntArray,
+    closed: bool,
+) -> FloatArray:
+    """Return the lesser of distances `off` of points from their own line or arc and those from its two neighbours."""
+    n = len(bulges)
+    for other in (-1, 1):
+        index = np.mod(owner + other, n) if closed else np.minimum(np.maximum(owner + other, 0), n - 1)
+        index = np.where(group[index] == group[owner], index, owner)
+        off = np.minimum(off, distance_to_arcs(points, start[index], end[index], bulges[index]))
+    return off
 
 
 def _nodes_inside(track: Track, s: FloatArray) -> tuple[IntArray, IntArray]:
@@ -87,7 +110,7 @@ def _nodes_inside(track: Track, s: FloatArray) -> tuple[IntArray, IntArray]:
 
 
 def nearby_distance(
-    track: Track, points: ComplexArray, guess: FloatArray, low: FloatArray, high: FloatArray, steps: int = 3
+    track: Track, points: ComplexArray, guess: FloatArray, low: FloatArray, high: FloatArray, steps: int = 2
 ) -> FloatArray:
     """Return distances from points to points of the track near their feet, by Newton's method held between bounds.
 
@@ -125,15 +148,16 @@ def distance_to_arcs(points: ComplexArray, start: ComplexArray, end: ComplexArra
     half = 2.0 * np.arctan(bulge)
     curvature = 2.0 * np.sin(half) / length
     unit = chord / length
-    v = (points - start) * np.conj(unit) * np.exp(1j * half)
-    a = curvature * np.abs(v) ** 2 - 2.0 * v.imag
+    away = (points - start) * np.conj(unit)
+    v = away * np.exp(1j * half)
+    a = curvature * (v.real**2 + v.imag**2) - 2.0 * v.imag
     radial = np.abs(a / (1.0 + np.sqrt(np.maximum(1.0 + curvature * a, 0.0))))
     # angle from the chord's middle normal: inside the sweep when the point seen from both ends opens on the arc's side
-    turned = np.arctan2((v * (1j * curvature)).imag, 1.0 + (v * (1j * curvature)).real)
+    turned = np.arctan2(v.real * curvature, 1.0 - v.imag * curvature)
     sweep = 2.0 * half
-    inside_arc = np.mod(turned * np.sign(sweep), 2.0 * np.pi) <= np.abs(sweep)
-    along = ((points - start) * np.conj(unit)).real
-    inside_line = (along >= 0.0) & (along <= length) & (np.abs(chord) > 0.0)
+    ahead = turned * np.sign(sweep)
+    inside_arc = np.where(ahead < 0.0, ahead + 2.0 * np.pi, ahead) <= np.abs(sweep)
+    inside_line = (away.real >= 0.0) & (away.real <= length) & (np.abs(chord) > 0.0)
     inside = np.where(np.abs(half) < 1e-9, inside_line, inside_arc)
     ends = np.minimum(np.abs(points - start), np.abs(points - end))
     return np.where(inside, radial, ends)

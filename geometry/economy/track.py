@@ -84,15 +84,19 @@ class Track:
         inside[self.last[:-1]] = False
         return inside
 
-    def locate(self, s: FloatArray) -> tuple[IntArray, FloatArray, FloatArray]:
+    @cached_property
+    def _gaps(self) -> FloatArray:
+        return np.diff(self.s)
+
+    def locate(self, s: FloatArray) -> tuple[IntArray, FloatArray, FloatArray | float]:
         """Return node, local parameter of its span and winding (whole turns round a closed track) at arc lengths."""
-        winding = np.zeros_like(s)
+        winding: FloatArray | float = 0.0
         if self.closed:
             winding = np.floor(s / self.period)
             s = s - winding * self.period
-        node = np.clip(np.searchsorted(self.s, s, side="right") - 1, 0, len(self.s) - 2)
-        share = (s - self.s[node]) / (self.s[node + 1] - self.s[node])
-        return node, self.t[node] + np.clip(share, 0.0, 1.0) * self.step[node], winding
+        node = np.searchsorted(self.s[1:-1], s, side="right")
+        share = (s - self.s[node]) / self._gaps[node]
+        return node, self.t[node] + np.minimum(np.maximum(share, 0.0), 1.0) * self.step[node], winding
 
     def points(self, s: FloatArray) -> ComplexArray:
         """Return the points at arc lengths, any shape."""
@@ -112,7 +116,7 @@ class Track:
     def motion(self, s: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
         """Return points and their first two derivatives by the arc length of the table, each the shape of s."""
         node, t, _ = self.locate(s)
-        rate = self.step[node] / (self.s[node + 1] - self.s[node])
+        rate = self.step[node] / self._gaps[node]
         point, slope, bend = _derivatives(self.power[self.span[node]], t)
         return point, slope * rate, bend * rate**2
 
