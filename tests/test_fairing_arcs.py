@@ -121,7 +121,7 @@ def test_an_eased_chain_keeps_its_ends_and_lies_beside_the_sharp_one():
     points, owner = chain_points(SHAPE)
     ends = Ends(pins=(complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
     fitted = fit_chain(SHAPE, owner, points, ends, 1e-9, 20, near=True)
-    curve, feet = eased(fitted, points, ends, 1e-9)
+    curve, feet = eased(fitted, points, ends, 1e-9, 1.0)
     assert abs(curve.points[0] - ends.pins[0]) < 1e-9
     assert abs(curve.points[-1] - ends.pins[1]) < 1e-9
     on = curve.at(feet)

@@ -40,7 +40,7 @@ _MISS = 0.01
 _DENSE = 0.6  # vertices a tolerance
 _SQUARE = 1e-3
 _CHANCE = 5.0  # standard errors that a local mean may have by chance
-_STIFFNESS = 0.4
+_STIFFNESS = 0.4  # knots
 
 
 @dataclass(frozen=True, slots=True)
@@ -143,10 +143,11 @@ def drawn_as_chains(trace: Trace, fit: Fit, pins: FloatArray | None) -> Fit:
         fitted = _search(piece, own)
         if fitted is None or not _explained(fit, piece, fitted):
             continue
-        curve, feet = eased(fitted, piece.points, piece.ends, _EXACTLY[1] / piece.scale)
         inside = np.flatnonzero(layout.piece == layout.piece[piece.intervals[0]])
+        knot = float(layout.h[inside[0]])
+        curve, feet = eased(fitted, piece.points, piece.ends, _EXACTLY[1] / piece.scale, knot)
         points[inside] = curve.at(_along_chain(piece, curve.length, feet, layout.sample_positions()[inside]))
-        stiffness[inside], straightness[inside] = _STIFFNESS, 0.0
+        stiffness[inside], straightness[inside] = _STIFFNESS * knot, 0.0
         dead[layout.piece[inside[0]]] = 0.0
         taken[inside] = True
     if not taken.any():

@@ -10,7 +10,7 @@ from geometry.fairing.tangent_chain import ComplexArray, Ends, Fitted, TangentCh
 __all__ = ["Eased", "eased"]
 
 _ASIDE = 0.03  # how far an eased joint may lie beside the sharp one, tolerances
-_NARROWEST, _WIDEST, _SHARE = 4.0, 6.0, 0.8
+_NARROWEST, _WIDEST, _SHARE = 4.0, 6.0, 0.8  # knots, knots, and of the shorter segment
 _STEP = 0.05
 _REFITS, _ROUNDS = 2, 12
 
@@ -38,7 +38,7 @@ class Eased:
         return np.stack([x, y], axis=-1)
 
 
-def eased(fitted: Fitted, points: ComplexArray, ends: Ends, settled: float) -> tuple[Eased, FloatArray]:
+def eased(fitted: Fitted, points: ComplexArray, ends: Ends, settled: float, knot: float) -> tuple[Eased, FloatArray]:
     """Return a chain with its curvature changing smoothly about every joint, and where along it the points lie.
 
     That moves the chain a little to one side behind each joint; the chain is fitted again to points moved as much the
@@ -49,10 +49,11 @@ def eased(fitted: Fitted, points: ComplexArray, ends: Ends, settled: float) -> t
         points: that it was fitted to, shape (n,).
         ends: conditions that the eased curve meets exactly.
         settled: as for `fit_chain`.
+        knot: distance of the knots of the curve that is to follow.
     """
     chain, segment = fitted.chain, fitted.segment
     for _ in range(_REFITS):
-        curve, aside, heading = _ease(chain, ends)
+        curve, aside, heading = _ease(chain, ends, knot)
         at = chain.feet(points, segment)
         shift = np.interp(at, curve.along, aside)
         left = 1j * np.exp(1j * np.interp(at, curve.along, heading))
@@ -60,18 +61,18 @@ def eased(fitted: Fitted, points: ComplexArray, ends: Ends, settled: float) -> t
         if again is None:
             break
         chain, segment = again.chain, again.segment
-    return _ease(chain, ends)[0], chain.feet(points, segment)
+    return _ease(chain, ends, knot)[0], chain.feet(points, segment)
 
 
-def _ease(chain: TangentChain, ends: Ends) -> tuple[Eased, FloatArray, FloatArray]:
+def _ease(chain: TangentChain, ends: Ends, knot: float) -> tuple[Eased, FloatArray, FloatArray]:
     """Return the eased chain, how far it lies left of the sharp one, and the heading, at the same arc lengths."""
     joints, headings = chain.joints()
     stops = np.concatenate([[0.0], np.cumsum(chain.lengths)])
     count = max(2, int(np.ceil(stops[-1] / _STEP)) + 1)
     along = np.linspace(0.0, stops[-1], count)
     middle = 0.5 * (along[1:] + along[:-1])
-    heading = _heading(chain, headings, stops, along, ends.closed)
-    direction, between = np.exp(1j * heading), np.exp(1j * _heading(chain, headings, stops, middle, ends.closed))
+    heading = _heading(chain, headings, stops, along, ends.closed, knot)
+    direction, between = np.exp(1j * heading), np.exp(1j * _heading(chain, headings, stops, middle, ends.closed, knot))
     step = along[1] - along[0]
     run = np.cumsum((direction[:-1] + 4.0 * between + direction[1:]) * (step / 6.0))  # Simpson's rule
     points = joints[0] + np.concatenate([[0.0], run])
@@ -86,7 +87,7 @@ def _ease(chain: TangentChain, ends: Ends) -> tuple[Eased, FloatArray, FloatArra
 
 
 def _heading(
-    chain: TangentChain, headings: FloatArray, stops: FloatArray, along: FloatArray, closed: bool
+    chain: TangentChain, headings: FloatArray, stops: FloatArray, along: FloatArray, closed: bool, knot: float
 ) -> FloatArray:
     """Return the heading at arc lengths: of the chain, and beside joints the integral of a ramp 3 u^2 - 2 u^3."""
     segment = np.clip(np.searchsorted(stops, along, side="right") - 1, 0, len(chain) - 1)
@@ -95,7 +96,7 @@ def _heading(
     room = _SHARE * np.minimum(chain.lengths, np.roll(chain.lengths, -1))
     jump = after - before
     width = np.sqrt(40.0 * _ASIDE / np.maximum(np.abs(jump), 1e-9))
-    width = np.minimum(np.clip(width, _NARROWEST, _WIDEST), room)
+    width = np.minimum(np.clip(width, _NARROWEST * knot, _WIDEST * knot), room)
     for k in range(len(chain) if closed else len(chain) - 1):
         for centre in (stops[k + 1], 0.0) if k == len(chain) - 1 else (stops[k + 1],):
             away = np.maximum(0.5 - np.abs(along - centre) / width[k], 0.0)
