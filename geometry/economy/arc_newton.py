@@ -25,6 +25,7 @@ SHARES = 0.5 * (_EVEN + 0.5 * (1.0 - np.cos(np.pi * _EVEN)))  # halfway between 
 POWERS = (2, 2, 3, 3, 4, 4, 6, 6, 8, 8, 8, 8, 10, 10, 10, 12, 12, 12, 16, 16, 16, 16)
 SLOTS = 5  # per joint: angle, shift, slide, multiplier of the arc behind it, multiplier of its being a line
 PINNED = 1e14
+HOPE = 1.03  # merit, in chord errors, up to which a chain is measured
 CHECKS = 24  # samples per arc and way in the final measure
 
 
@@ -124,9 +125,7 @@ class _Batch:
         """Return one chain."""
         mine, arcs = self.owner == index, self.arc_owner == index
         closed = self.track.closed
-        return Chain(
-            int(self.piece[index]), self.joint[mine], self.angle[mine], self.s[mine], self.line[arcs], closed
-        )
+        return Chain(int(self.piece[index]), self.joint[mine], self.angle[mine], self.s[mine], self.line[arcs], closed)
 
 
 def _batch(track: Track, chains: list[Chain]) -> _Batch:
@@ -177,7 +176,9 @@ def _distances(batch: _Batch, shape: _Shape) -> tuple[FloatArray, ComplexArray, 
 
 @np.errstate(over="ignore", invalid="ignore")  # a chain that runs away is dropped
 def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[float]) -> list[Polished]:
-    """Lower the largest error of chains, make their tangents continuous and measure them.
+    """Lower the largest error of chains; make continuous and measure those that come near the chord error.
+
+    What stays farther off is returned as it is, with the errors seen on the way and an infinite defect.
 
     Args:
         track: the curve.
@@ -186,38 +187,54 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         goals: a chain is left as soon as its error is this share of the chord error, shape (c,).
     """
     whole = batch = _batch(track, chains)
-    best = [whole.joint.copy(), whole.angle.copy(), whole.s.copy()]
+    joint, angle, s = whole.joint.copy(), whole.angle.copy(), whole.s.copy()  # the best seen
+    errors = np.full(len(whole.start), np.inf)
     score = np.full(len(chains), np.inf)
-    active, rows = np.arange(len(chains)), np.arange(len(whole.joint))
+    active, rows, arcs = np.arange(len(chains)), np.arange(len(whole.joint)), np.arange(len(whole.start))
     goal = np.array(goals) * chord_error
     history = np.full((len(POWERS), len(chains)), np.inf)
     for step, power in enumerate(POWERS):
         shape = _shape(batch)
         r, points, seen = _distances(batch, shape)
-        worst = np.maximum.reduceat(np.abs(r).max(axis=1), batch.first_arc)
+        off = np.abs(r).max(axis=1)
+        worst = np.maximum.reduceat(off, batch.first_arc)
         defect = np.maximum.reduceat(np.abs(shape.defect), batch.first_arc)
-        merit = np.where(np.isfinite(worst), worst / chord_error + 10.0 * defect, np.inf)
+        # closing a kink g up moves the middle of an arc by about g length / 8
+        closed = np.maximum.reduceat(off + 0.125 * np.abs(shape.defect) * shape.length, batch.first_arc)
+        merit = np.where(np.isfinite(worst), closed / chord_error + 10.0 * defect, np.inf)
         better = merit < score[active]
         if better.any():
             score[active[better]] = merit[better]
+            mine = better[batch.arc_owner]
+            errors[arcs[mine]] = off[mine]
             mine = better[batch.owner]
-            for kept, now in zip(best, (batch.joint, batch.angle, batch.s), strict=True):
-                kept[rows[mine]] = now[mine]
+            joint[rows[mine]], angle[rows[mine]], s[rows[mine]] = batch.joint[mine], batch.angle[mine], batch.s[mine]
         history[step, active] = worst
-        done = (worst < goal[active]) & (defect < 1e-3)
+        done = (closed < goal[active]) & (defect < 1e-3)
         if step >= 9:
             done |= (worst > 1.02 * np.minimum(goal[active], chord_error)) & (history[step - 3, active] < 1.01 * worst)
+        if step >= 5:
+            done |= (worst > 1.3 * goal[active]) & (history[step - 2, active] < 1.1 * worst)
         done |= ~np.isfinite(merit)
         if not done.all():
             done |= _advance(batch, shape, r, points, seen, worst, goal[active], power)
         if done.any():
-            active, rows = active[~done], rows[~done[batch.owner]]
+            active, rows, arcs = active[~done], rows[~done[batch.owner]], arcs[~done[batch.arc_owner]]
             if not len(active):
                 break
             batch = batch.without(done)
-    whole.joint, whole.angle, whole.s = best
-    _close_up(whole)
-    return _measured(whole, [whole.chain(k) for k in range(len(chains))], chord_error)
+    whole.joint, whole.angle, whole.s = joint, angle, s
+    hopeless = ~(score <= HOPE)
+    out: list[Polished] = [
+        Polished(whole.chain(k), part, np.inf) for k, part in enumerate(np.split(errors, whole.first_arc[1:]))
+    ]
+    if not hopeless.all():
+        near = whole.without(hopeless)
+        _close_up(near)
+        shut = [near.chain(k) for k in range(len(near.piece))]
+        for k, result in zip(np.flatnonzero(~hopeless).tolist(), _measured(near, shut, chord_error), strict=True):
+            out[k] = result
+    return out
 
 
 def _advance(

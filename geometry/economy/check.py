@@ -36,7 +36,6 @@ def two_sided(
         samples: on every stretch, each way; where all of a chain's are within the limit, the nodes of the track on it
             are looked at besides.
     """
-    n = len(bulges)
     share = (np.arange(samples) + 0.5) / samples
     along = s[:, :1] + (s[:, 1:] - s[:, :1]) * share
     curve = track.points(along)
