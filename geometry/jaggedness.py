@@ -1,8 +1,7 @@
 """What kind of polyline this is: a pixel staircase, a chamfered one, hand noise, sparse stations, or clean.
 
-The recommended tolerance is 0.85 of the pixel pitch for plain staircases, 0.8 of it for those with cut corners, and 4.6
-standard deviations for noise. These shares and the thresholds were chosen on traced outlines of known shape; they are
-empirical.
+The recommended tolerance is 0.85 of the pixel pitch for staircases and 4.1 standard deviations for noise. These numbers
+and the thresholds were chosen on traced outlines of known shape; they are empirical.
 """
 
 from dataclasses import dataclass
@@ -19,8 +18,8 @@ __all__ = ["Jaggedness", "Kind", "estimate", "is_clean_polygon"]
 Kind = Literal["staircase", "chamfered", "noise", "none", "stations"]
 
 _HEADING = np.radians(0.5)
-_NOISE_SIGMAS = 4.6
-_PITCHES = {"staircase": 0.85, "chamfered": 0.8}
+_NOISE_SIGMAS = 4.1
+_PITCH_SHARE = 0.85
 _NOISE_VERTICES = 20
 _WINDOW, _KEPT = 6, 0.9
 _LEAST_WINDOWS, _BESIDE = 8, 0.3
@@ -146,9 +145,8 @@ def _staircase(edges: FloatArray, closed: bool) -> Jaggedness | None:
         return None
     kind: Kind = "chamfered" if chamfered else "staircase"
     shape = "a pixel staircase with cut corners" if chamfered else "a pixel staircase"
-    share = _PITCHES[kind]
-    reason = f"{shape} of pitch {pitch:.4g}; {share:g} of it takes the steps out"
-    return Jaggedness(kind, pitch, share * pitch, reason)
+    reason = f"{shape} of pitch {pitch:.4g}; {_PITCH_SHARE:g} of it takes the steps out"
+    return Jaggedness(kind, pitch, _PITCH_SHARE * pitch, reason)
 
 
 def _pitch(straight: FloatArray, slant: FloatArray) -> tuple[float, float]:
