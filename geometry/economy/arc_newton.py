@@ -3,27 +3,27 @@
 Unknown at every joint are its tangent angle, a shift across and a slide along. Arc i from joint i to i + 1 with chord
 c, chord angle chi and half turn a = (angle_{i+1} - angle_i) / 2 is tangent at both ends when
 g = angle_i + angle_{i+1} - 2 chi = 0. The p-norm of the signed distances from samples of the curve to their arcs is
-lowered under these constraints, p rising, all chains at once; each step is one banded linear system.
+lowered under these constraints, p rising, all chains at once; each step is one banded linear system. An arc may be held
+at a curvature K (0: a line) by one constraint more, 2 sin a - K |c| = 0.
 """
 
 from dataclasses import dataclass
-from functools import cached_property
 
 import numpy as np
 from scipy.linalg.lapack import dgbsv
 
-from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.arrays import BoolArray, FloatArray
+from geometry.economy.arc_batch import SLOTS, Batch, Shape, batch_of, bulges_of, shape_of
 from geometry.economy.arc_start import Chain
 from geometry.economy.check import two_sided
 from geometry.economy.track import ComplexArray, Track
 
-__all__ = ["Polished", "chain_bulges", "measure_chains", "polish"]
+__all__ = ["Polished", "measure_chains", "polish"]
 
 SAMPLES = 12
 _EVEN = (np.arange(SAMPLES) + 0.5) / SAMPLES
 SHARES = 0.5 * (_EVEN + 0.5 * (1.0 - np.cos(np.pi * _EVEN)))  # halfway between even and Chebyshev points
 POWERS = (2, 2, 3, 3, 4, 4, 6, 6, 8, 8, 8, 8, 10, 10, 10, 12, 12, 12, 16, 16, 16, 16)
-SLOTS = 5  # per joint: angle, shift, slide, multiplier of the arc behind it, multiplier of its being a line
 PINNED = 1e14
 HOPE = 1.03  # merit, in chord errors, up to which a chain is measured
 CHECKS = 24  # samples per arc and way in the final measure
@@ -36,7 +36,7 @@ class Polished:
     Attributes:
         chain: the chain, tangent continuous.
         errors: largest distance of every arc to its stretch of curve, both ways, sampled; infinite when it failed.
-        defect: largest |g|, radians.
+        defect: largest |g|, or turn by which an arc is off the curvature it is held at, radians.
     """
 
     chain: Chain
@@ -49,120 +49,7 @@ class Polished:
         return float(self.errors.max())
 
 
-@dataclass(eq=False)
-class _Batch:
-    """Chains laid end to end as flat arrays: j joints, n arcs, c chains."""
-
-    track: Track
-    piece: IntArray  # piece of every chain
-    joint: ComplexArray
-    angle: FloatArray
-    s: FloatArray
-    line: BoolArray
-    owner: IntArray  # chain of every joint
-
-    def __post_init__(self) -> None:
-        n = len(self.owner)
-        self.first_joint = np.searchsorted(self.owner, np.arange(len(self.piece)))
-        self.pinned = np.zeros(n, dtype=np.bool_)
-        if self.track.closed:  # one chain: fold it, so that neighbours stay near each other
-            self.start, self.end = np.arange(n), np.append(np.arange(1, n), 0)
-            half = (n + 1) // 2
-            place = np.where(np.arange(n) < half, 2 * np.arange(n), 2 * (n - 1 - np.arange(n)) + 1)
-            self.width = 14  # half band width of the linear system
-        else:
-            ends = np.append(self.first_joint[1:], n) - 1
-            self.start = np.delete(np.arange(n), ends)
-            self.end = self.start + 1
-            self.pinned[ends] = self.pinned[self.first_joint] = True
-            place, self.width = np.arange(n), 7
-        self.base = SLOTS * place  # first place of every joint in the linear system
-        self.wrap = (self.end < self.start).astype(np.float64)  # 1 where the arc runs through the seam
-        self.arc_owner = self.owner[self.start]
-        self.first_arc = np.searchsorted(self.arc_owner, np.arange(len(self.piece)))
-
-    @cached_property
-    def own(self) -> IntArray:
-        """Places of the unknowns of every joint, shape (j, 3)."""
-        return self.base[:, None] + np.arange(3)
-
-    @cached_property
-    def sides(self) -> IntArray:
-        """Places of the unknowns of the joints at both ends of every arc, shape (n, 6)."""
-        return np.concatenate([self.own[self.start], self.own[self.end]], axis=1)
-
-    @cached_property
-    def band_places(self) -> IntArray:
-        """Places, in the band matrix by columns, of what `_solve` puts there, in its order."""
-        tangent, straight = self.base[self.start] + 3, self.base[self.start] + 4
-        behind = np.ones(len(self.base), dtype=np.bool_)
-        behind[self.start] = False  # joints without an arc behind them have idle multipliers
-        idle = np.concatenate([self.base[behind] + 3, self.base[behind] + 4, straight[~self.line]])
-        held = np.repeat(straight[self.line], 2)
-        ends = self.sides[self.line][:, [0, 3]].ravel()
-        rows = [np.repeat(self.sides, 6, axis=1), np.repeat(tangent, 6), self.sides, held, ends]
-        columns = [np.tile(self.sides, (1, 6)), self.sides, np.repeat(tangent, 6), ends, held]
-        diagonal = [tangent, straight[self.line], idle, self.own]
-        row = np.concatenate([part.ravel() for part in rows + diagonal])
-        column = np.concatenate([part.ravel() for part in columns + diagonal])
-        return np.asarray(2 * self.width + row - column + (3 * self.width + 1) * column)
-
-    def without(self, gone: BoolArray) -> "_Batch":
-        """Return the batch without some chains."""
-        keep, kept_arcs = ~gone[self.owner], ~gone[self.arc_owner]
-        number = np.cumsum(~gone) - 1
-        return _Batch(
-            self.track,
-            self.piece[~gone],
-            self.joint[keep],
-            self.angle[keep],
-            self.s[keep],
-            self.line[kept_arcs],
-            number[self.owner[keep]],
-        )
-
-    def chain(self, index: int) -> Chain:
-        """Return one chain."""
-        mine, arcs = self.owner == index, self.arc_owner == index
-        closed = self.track.closed
-        return Chain(int(self.piece[index]), self.joint[mine], self.angle[mine], self.s[mine], self.line[arcs], closed)
-
-
-def _batch(track: Track, chains: list[Chain]) -> _Batch:
-    owner = np.repeat(np.arange(len(chains)), [len(chain.joint) for chain in chains])
-    joint, angle, s = (np.concatenate([getattr(chain, name) for chain in chains]) for name in ("joint", "angle", "s"))
-    line = np.concatenate([chain.line for chain in chains])
-    return _Batch(track, np.array([chain.piece for chain in chains], dtype=np.intp), joint, angle, s, line, owner)
-
-
-@dataclass(frozen=True, eq=False)
-class _Shape:
-    """Geometry of every arc of a batch: shapes (n,)."""
-
-    chord: ComplexArray
-    length: FloatArray
-    chi: FloatArray
-    half: FloatArray  # half the turn
-    bend: FloatArray  # curvature
-    defect: FloatArray  # g
-    angle_0: FloatArray
-    angle_1: FloatArray
-
-
-def _shape(batch: _Batch) -> _Shape:
-    angle_0 = batch.angle[batch.start]
-    angle_1 = batch.angle[batch.end] + batch.wrap * batch.track.turn
-    chord = batch.joint[batch.end] - batch.joint[batch.start]
-    chord = np.where(chord == 0.0, 1e-150, chord)
-    length = np.abs(chord)
-    middle = 0.5 * (angle_0 + angle_1)
-    turned = chord * np.exp(-1j * middle)
-    off = np.arctan2(turned.imag, turned.real)
-    half = 0.5 * (angle_1 - angle_0)
-    return _Shape(chord, length, middle + off, half, 2.0 * np.sin(half) / length, -2.0 * off, angle_0, angle_1)
-
-
-def _distances(batch: _Batch, shape: _Shape) -> tuple[FloatArray, ComplexArray, ComplexArray]:
+def _distances(batch: Batch, shape: Shape) -> tuple[FloatArray, ComplexArray, ComplexArray]:
     """Return the signed distances of the samples (+ when the arc is on their left), the samples, and them seen
     from the start of their arc along its start tangent; shapes (n, SAMPLES)."""
     s_0 = batch.s[batch.start]
@@ -186,7 +73,7 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         chains: starting chains in order of their pieces; an open track may have many, a closed track has one.
         goals: a chain is left as soon as its error is this share of the chord error, shape (c,).
     """
-    whole = batch = _batch(track, chains)
+    whole = batch = batch_of(track, chains)
     joint, angle, s = whole.joint.copy(), whole.angle.copy(), whole.s.copy()  # the best seen
     errors = np.full(len(whole.start), np.inf)
     score = np.full(len(chains), np.inf)
@@ -194,7 +81,7 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
     goal = np.array(goals) * chord_error
     history = np.full((len(POWERS), len(chains)), np.inf)
     for step, power in enumerate(POWERS):
-        shape = _shape(batch)
+        shape = shape_of(batch)
         r, points, seen = _distances(batch, shape)
         off = np.abs(r).max(axis=1)
         worst = np.maximum.reduceat(off, batch.first_arc)
@@ -238,8 +125,8 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
 
 
 def _advance(
-    batch: _Batch,
-    shape: _Shape,
+    batch: Batch,
+    shape: Shape,
     r: FloatArray,
     points: ComplexArray,
     seen: ComplexArray,
@@ -266,7 +153,7 @@ def _advance(
     return _move(batch, _solve(batch, shape, gram, pull, diagonal), near)
 
 
-def _jacobian(batch: _Batch, shape: _Shape, points: ComplexArray, seen: ComplexArray) -> FloatArray:
+def _jacobian(batch: Batch, shape: Shape, points: ComplexArray, seen: ComplexArray) -> FloatArray:
     """Return the derivatives of the distances by (angle, shift, slide) of both joints, shape (n, 6, SAMPLES)."""
     z = (points - batch.joint[batch.start][:, None]) / shape.chord[:, None]
     normal = 1j - shape.bend[:, None] * seen
@@ -282,39 +169,52 @@ def _jacobian(batch: _Batch, shape: _Shape, points: ComplexArray, seen: ComplexA
     return out
 
 
-def _shorter_chord(batch: _Batch, shape: _Shape) -> FloatArray:
+def _shorter_chord(batch: Batch, shape: Shape) -> FloatArray:
     near = np.full(len(batch.joint), np.inf)
     near[batch.start] = shape.length
     near[batch.end] = np.minimum(near[batch.end], shape.length)
     return near
 
 
-def _solve(batch: _Batch, shape: _Shape, gram: FloatArray, pull: FloatArray, diagonal: FloatArray) -> FloatArray:
+def _solve(batch: Batch, shape: Shape, gram: FloatArray, pull: FloatArray, diagonal: FloatArray) -> FloatArray:
     """Return the step (angle, shift, slide) of every joint, shape (j, 3): the constrained minimum of the model."""
     n, size, w = len(shape.length), SLOTS * len(batch.joint), batch.width
     row = np.empty((n, 6))
     for column, angle, sign in ((0, shape.angle_0, 2.0), (3, shape.angle_1, -2.0)):
         lever = sign * np.exp(1j * angle) / shape.chord
         row[:, column], row[:, column + 1], row[:, column + 2] = 1.0, lever.real, lever.imag
-    held = np.flatnonzero(batch.line)
-    turned = np.tile([-1.0, 1.0], len(held))  # a line does not turn
-    faint = np.full(n + len(held), -1e-10)
-    idle = np.ones(2 * (len(batch.joint) - n) + n - len(held))
+    fixed = batch.fixed
+    kept = _held_rows(batch, shape)
+    faint = np.full(n + len(fixed), -1e-10)
+    idle = np.ones(2 * (len(batch.joint) - n) + n - len(fixed))
     diagonal[batch.pinned, 1:] = PINNED
-    parts = (gram, row, row, turned, turned, faint, idle, diagonal)
+    parts = (gram, row, row, kept, kept, faint, idle, diagonal)
     value = np.concatenate([part.ravel() for part in parts])
     band = np.bincount(batch.band_places, weights=value, minlength=(3 * w + 1) * size)
     b = np.bincount(batch.sides.ravel(), weights=-pull.ravel(), minlength=size)
     tangent = batch.base[batch.start] + 3
     b[tangent] = -shape.defect
-    b[tangent[held] + 1] = -2.0 * shape.half[held]
+    b[tangent[fixed] + 1] = -shape.astray[fixed]
     _, _, x, info = dgbsv(w, w, band.reshape(size, 3 * w + 1).T, b, overwrite_ab=True, overwrite_b=True)
     if info != 0:
         return np.full((len(batch.joint), 3), np.nan)
     return np.asarray(x[batch.own])
 
 
-def _move(batch: _Batch, x: FloatArray, near: FloatArray) -> BoolArray:
+def _held_rows(batch: Batch, shape: Shape) -> FloatArray:
+    """Return the derivatives of 2 sin(a) - K |c| of the arcs held, by the unknowns of both joints, shape (h, 6)."""
+    arcs = batch.fixed
+    bend, cosine = batch.held[arcs], np.cos(shape.half[arcs])
+    unit = np.conj(shape.chord[arcs]) / shape.length[arcs]
+    out = np.empty((len(arcs), 6))
+    for column, angle, sign in ((0, shape.angle_0, -1.0), (3, shape.angle_1, 1.0)):
+        along = unit * np.exp(1j * angle[arcs])
+        out[:, column], out[:, column + 1], out[:, column + 2] = cosine, bend * along.imag, -bend * along.real
+        out[:, column : column + 3] *= sign
+    return out
+
+
+def _move(batch: Batch, x: FloatArray, near: FloatArray) -> BoolArray:
     """Move the joints in place by a step, scaled per chain so that no slide leaves its neighbourhood."""
     size = np.abs(x)
     use = np.maximum(np.maximum(size[:, 2], size[:, 1]) / (0.3 * near), size[:, 0] / 0.7)
@@ -336,11 +236,11 @@ def _move(batch: _Batch, x: FloatArray, near: FloatArray) -> BoolArray:
     return np.asarray(broken | (np.minimum.reduceat(advance, batch.first_arc) <= 0.0))
 
 
-def _close_up(batch: _Batch) -> None:
+def _close_up(batch: Batch) -> None:
     """Make the tangents of chains exactly continuous, in place, by the smallest moves."""
     for _ in range(6):
-        shape = _shape(batch)
-        off = np.maximum(np.abs(shape.defect), np.where(batch.line, np.abs(shape.half), 0.0))
+        shape = shape_of(batch)
+        off = np.maximum(np.abs(shape.defect), np.abs(shape.astray))
         if off.max() < 1e-13:
             break
         near = _shorter_chord(batch, shape)
@@ -349,24 +249,16 @@ def _close_up(batch: _Batch) -> None:
         _move(batch, _solve(batch, shape, np.zeros((n, 6, 6)), np.zeros((n, 6)), diagonal), near)
 
 
-def chain_bulges(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, FloatArray]:
-    """Return all joints in order with the last one, the bulges, and |g| of every arc."""
-    shape = _shape(_batch(track, [chain]))
-    bulges = np.where(chain.line, 0.0, np.tan(0.5 * shape.half))
-    joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
-    return joints, bulges, np.abs(shape.defect)
-
-
 @np.errstate(over="ignore", invalid="ignore")
 def measure_chains(track: Track, chains: list[Chain], chord_error: float) -> list[Polished]:
     """Measure chains against the curve, both ways."""
-    return _measured(_batch(track, chains), chains, chord_error)
+    return _measured(batch_of(track, chains), chains, chord_error)
 
 
-def _measured(batch: _Batch, chains: list[Chain], chord_error: float) -> list[Polished]:
+def _measured(batch: Batch, chains: list[Chain], chord_error: float) -> list[Polished]:
     track, owner = batch.track, batch.arc_owner
-    shape = _shape(batch)
-    bulges = np.where(batch.line, 0.0, np.tan(0.5 * shape.half))
+    shape = shape_of(batch)
+    bulges = bulges_of(batch, shape)
     s = np.stack([batch.s[batch.start], batch.s[batch.end] + batch.wrap * track.period], axis=1)
     sound = np.isfinite(bulges) & (np.abs(shape.half) < 0.5 * np.pi + 0.3) & (s[:, 1] > s[:, 0])
     good = np.logical_and.reduceat(sound, batch.first_arc)
@@ -375,6 +267,6 @@ def _measured(batch: _Batch, chains: list[Chain], chord_error: float) -> list[Po
     if keep.any():
         start, end = batch.joint[batch.start], batch.joint[batch.end]
         errors[keep] = two_sided(track, start[keep], end[keep], bulges[keep], s[keep], owner[keep], chord_error, CHECKS)
-    defects = np.maximum.reduceat(np.abs(shape.defect), batch.first_arc)
+    defects = np.maximum.reduceat(np.maximum(np.abs(shape.defect), np.abs(shape.astray)), batch.first_arc)
     parts = np.split(errors, batch.first_arc[1:])
     return [Polished(*parts_) for parts_ in zip(chains, parts, defects.tolist(), strict=True)]

@@ -24,7 +24,7 @@ class Chain:
         joint: joints, complex.
         angle: tangent angle at every joint, unwrapped, radians.
         s: arc length on the track that belongs to every joint, increasing.
-        line: whether an arc is held straight, shape (n,).
+        held: curvature that an arc is held at (0: a line), NaN where it is free, shape (n,).
         closed: whether the last arc ends at the first joint.
     """
 
@@ -32,13 +32,18 @@ class Chain:
     joint: ComplexArray
     angle: FloatArray
     s: FloatArray
-    line: BoolArray
+    held: FloatArray
     closed: bool
 
     @property
     def count(self) -> int:
         """Number of arcs."""
-        return len(self.line)
+        return len(self.held)
+
+    @property
+    def line(self) -> BoolArray:
+        """Whether an arc is held straight, shape (n,)."""
+        return self.held == 0.0
 
 
 def arc_demand(track: Track, piece: int, chord_error: float) -> tuple[FloatArray, FloatArray]:
@@ -110,4 +115,4 @@ def start_chain(track: Track, piece: int, demand: tuple[FloatArray, FloatArray],
     if not track.closed:
         s[0], s[-1] = stations[0], stations[-1]
     joint, angle, _ = track.frames(s)
-    return Chain(piece, joint, angle, s, np.zeros(count, dtype=np.bool_), track.closed)
+    return Chain(piece, joint, angle, s, np.full(count, np.nan), track.closed)

@@ -1,13 +1,16 @@
 """Fewest arcs: the chain of lines and circular arcs of least count within a chord error, tangent continuous."""
 
 from collections.abc import Generator
+from dataclasses import replace
 
 import numpy as np
 
 from geometry.arcs import ArcChain, full_circle
-from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.arrays import BoolArray, FloatArray
 from geometry.bspline import Spline
-from geometry.economy.arc_newton import Polished, chain_bulges, measure_chains, polish
+from geometry.economy.arc_batch import chain_bulges
+from geometry.economy.arc_moves import FIRM, Driver, Trial, bends, fits, weak_joints, with_more, without
+from geometry.economy.arc_newton import Polished, measure_chains, polish
 from geometry.economy.arc_start import Chain, arc_demand, start_chain
 from geometry.economy.biarcs import biarc_chain
 from geometry.economy.check import distance_to_arcs
@@ -17,16 +20,11 @@ from geometry.errors import GeometryError
 
 __all__ = ["fewest_arcs"]
 
-Trial = tuple[Chain, float]  # a chain to polish, and the share of the chord error to stop at
-Driver = Generator[Trial, Polished, Chain]
-
 LENGTH = 100.0  # size that a curve is brought near before arcs are laid
 GROW_ROUNDS = 12
-STRENGTH = 31.0  # chord errors that a joint's strength has where arcs are as long as they can be
-FIRM, EXACT = 0.985, 0.02  # shares of the chord error at which polishing stops
+EXACT = 0.02  # share of the chord error at which polishing stops where true lines and arcs may be found
 ROUND = 2.5  # arcs asked for under which a closed curve may be a circle
 SHARP = 1e-3  # radius, in chord errors, under which a bend is a corner
-DEFECT = 1e-9  # radians a joint may kink
 
 
 def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> ArcChain:
@@ -110,13 +108,9 @@ def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driv
         accepted = yield from _shrunk(accepted, chord_error, thorough)
         count = accepted.chain.count
         accepted = yield from _with_lines(accepted, chord_error, thorough)
-        if not len(_weak_joints(accepted.chain, np.zeros(count + 1, dtype=np.bool_), chord_error, chord_error)):
+        if not len(weak_joints(accepted.chain, np.zeros(count + 1, dtype=np.bool_), chord_error, chord_error)):
             break
     return accepted.chain
-
-
-def _fits(result: Polished, chord_error: float) -> bool:
-    return result.worst <= chord_error and result.defect < DEFECT
 
 
 def _grown(
@@ -128,14 +122,14 @@ def _grown(
     estimate = float(demand[1][-1])
     if track.closed and estimate < ROUND:
         result = yield start_chain(track, piece, demand, 2, 0.25), FIRM
-        if _fits(result, chord_error):
+        if fits(result, chord_error):
             return result
     count = max(least, int(np.ceil(estimate) if thorough else np.ceil(1.03 * estimate + 0.5)))
     restarts = 0
     chain = start_chain(track, piece, demand, count, 0.25)
     for turn in range(GROW_ROUNDS):
         result = yield chain, FIRM
-        if _fits(result, chord_error):
+        if fits(result, chord_error):
             return result
         lost = not np.isfinite(result.worst) or (turn > 3 and turn % 3 == 0 and result.worst > 8.0 * chord_error)
         if lost:
@@ -145,57 +139,9 @@ def _grown(
             count = int(np.ceil(1.04 * count + 1.0))
             chain = start_chain(track, piece, demand, count, 0.25 + 0.37 * restarts)
             continue
-        chain = _with_more(track, result, chord_error, thorough)
+        chain = with_more(track, result, chord_error, thorough)
         count = chain.count
     return None
-
-
-def _with_more(track: Track, result: Polished, chord_error: float, thorough: bool) -> Chain:
-    """Return a chain with joints added in the middle of its worst arcs."""
-    chain, errors = result.chain, result.errors
-    n = chain.count
-    wanted = round(float(np.cbrt(np.minimum(errors / chord_error, 1e3)).sum()) - n)
-    wanted = max(wanted, 1 if thorough else int(np.ceil(0.015 * n)), 1)
-    wanted = min(wanted, max(1, int(0.3 * n)))
-    left, right = (
-        (np.roll(errors, 1), np.roll(errors, -1)) if chain.closed else (_shifted(errors, 1), _shifted(errors, -1))
-    )
-    peaks = np.flatnonzero((errors >= left) & (errors >= right))
-    worst = np.sort(peaks[np.argsort(errors[peaks])[::-1][:wanted]])
-    joints, angles, s = _extended(track, chain)
-    chord = np.diff(joints)
-    half = 0.5 * np.diff(angles)
-    middle = 0.5 * (joints[:-1] + joints[1:]) - 0.5j * chord * np.tan(0.5 * np.clip(half, -1.5, 1.5))
-    heading = 0.5 * (angles[:-1] + angles[1:])
-    at = worst + 1
-    return Chain(
-        chain.piece,
-        np.insert(chain.joint, at, middle[worst]),
-        np.insert(chain.angle, at, heading[worst]),
-        np.insert(chain.s, at, 0.5 * (s[:-1] + s[1:])[worst]),
-        np.zeros(n + len(worst), dtype=np.bool_),
-        chain.closed,
-    )
-
-
-def _shifted(values: FloatArray, by: int) -> FloatArray:
-    out = np.zeros_like(values)
-    if by > 0:
-        out[by:] = values[:-by]
-    else:
-        out[:by] = values[-by:]
-    return out
-
-
-def _extended(track: Track, chain: Chain) -> tuple[ComplexArray, FloatArray, FloatArray]:
-    """Return joints, angles and arc lengths with the end of the last arc."""
-    if not chain.closed:
-        return chain.joint, chain.angle, chain.s
-    return (
-        np.append(chain.joint, chain.joint[0]),
-        np.append(chain.angle, chain.angle[0] + track.turn),
-        np.append(chain.s, chain.s[0] + track.period),
-    )
 
 
 def _by_biarcs(track: Track, piece: int, demand: tuple[FloatArray, FloatArray], chord_error: float) -> Polished:
@@ -210,12 +156,12 @@ def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator
     barred = np.zeros(len(accepted.chain.joint), dtype=np.bool_)
     failures, share = 0, 1.0
     while failures < (3 if thorough else 2):
-        weak = _weak_joints(accepted.chain, barred, (14.0 if thorough else 8.0) * chord_error, chord_error)
+        weak = weak_joints(accepted.chain, barred, (14.0 if thorough else 8.0) * chord_error, chord_error)
         if not len(weak):
             break
         weak = weak[: max(1, int(np.ceil(share * len(weak))))]
-        result = yield _without(accepted.chain, weak), FIRM
-        if _fits(result, chord_error):
+        result = yield without(accepted.chain, weak), FIRM
+        if fits(result, chord_error):
             accepted, share = result, 1.0
             barred = np.delete(barred, weak)
         else:
@@ -225,69 +171,13 @@ def _shrunk(accepted: Polished, chord_error: float, thorough: bool) -> Generator
     return accepted
 
 
-def _weak_joints(chain: Chain, barred: BoolArray, most: float, sure: float) -> IntArray:
-    """Return the joints to take out, the weakest first: that if under `most`, others, none adjacent, if under `sure`.
-
-    The strength of a joint is its jump of curvature times (x y / (x + y))^2 with x, y the chords beside it: about eight
-    times the distance by which one arc over both would miss them.
-    """
-    joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
-    if chain.count < (3 if chain.closed else 2):
-        return np.zeros(0, dtype=np.intp)
-    chord = np.abs(np.diff(joints))
-    bend = _bends(chain, joints)
-    if chain.closed:
-        x, y, jump = np.roll(chord, 1), chord, bend - np.roll(bend, 1)
-        number = np.arange(chain.count)
-    else:
-        x, y, jump = chord[:-1], chord[1:], np.diff(bend)
-        number = 1 + np.arange(chain.count - 1)
-    strength = np.where(barred[number], np.inf, np.abs(jump) * (x * y / np.maximum(x + y, 1e-300)) ** 2)
-    order = np.argsort(strength)
-    if strength[order[0]] >= most:
-        return np.zeros(0, dtype=np.intp)
-    size = len(chain.joint)
-    taken = [int(number[order[0]])]
-    blocked = {(taken[0] - 1) % size, (taken[0] + 1) % size}  # the ends of an open chain are never taken
-    room = chain.count - (2 if chain.closed else 1)
-    for index in order[1:].tolist():
-        joint = int(number[index])
-        if strength[index] >= sure or len(taken) >= room:
-            break
-        if joint not in blocked:
-            taken.append(joint)
-            blocked |= {(joint - 1) % size, (joint + 1) % size}
-    return np.array(taken, dtype=np.intp)
-
-
-def _bends(chain: Chain, joints: ComplexArray) -> FloatArray:
-    """Return the curvature of every arc, from its chord and the tangent at its start."""
-    chord = np.diff(joints)
-    start = chain.angle if chain.closed else chain.angle[:-1]
-    return np.asarray(2.0 * np.sin(np.angle(chord * np.exp(-1j * start))) / np.maximum(np.abs(chord), 1e-300))
-
-
-def _without(chain: Chain, joints: IntArray) -> Chain:
-    """Return the chain with some joints taken out; arcs that were lines stay so only when whole."""
-    line = chain.line.copy()
-    line[joints - 1] = False
-    return Chain(
-        chain.piece,
-        np.delete(chain.joint, joints),
-        np.delete(chain.angle, joints),
-        np.delete(chain.s, joints),
-        np.delete(line, joints),
-        chain.closed,
-    )
-
-
 def _with_lines(accepted: Polished, chord_error: float, thorough: bool) -> Generator[Trial, Polished, Polished]:
     """Hold nearly straight arcs straight where the chain still fits, the boldest choice first."""
     for share in (3.0, 1.0, 0.25, 0.02) if thorough else (3.0, 0.25, 0.02):
         chain = accepted.chain
         joints = np.append(chain.joint, chain.joint[0]) if chain.closed else chain.joint
         chord = np.abs(np.diff(joints))
-        half = np.arcsin(np.clip(0.5 * chord * _bends(chain, joints), -1.0, 1.0))
+        half = np.arcsin(np.clip(0.5 * chord * bends(chain, joints), -1.0, 1.0))
         sagitta = 0.25 * chord * np.abs(half)
         line = chain.line.copy()
         for index in np.argsort(sagitta).tolist():
@@ -298,12 +188,12 @@ def _with_lines(accepted: Polished, chord_error: float, thorough: bool) -> Gener
                 line[index] = True
         if np.array_equal(line, chain.line):
             continue
-        result = yield Chain(chain.piece, chain.joint, chain.angle, chain.s, line, chain.closed), FIRM
-        if _fits(result, chord_error):
+        result = yield replace(chain, held=np.where(line, 0.0, np.nan)), FIRM
+        if fits(result, chord_error):
             return result
         if share == 3.0:  # settle: true lines then stand out from slight arcs
             settled = yield chain, EXACT
-            if _fits(settled, chord_error):
+            if fits(settled, chord_error):
                 accepted = settled
     return accepted
 
@@ -317,7 +207,7 @@ def _assembled(track: Track, chains: list[Chain | None]) -> ArcChain:
             points.append(track.points(track.s[track.first[piece]][None]))
             bulges.append(np.zeros(1))
             continue
-        joints, bent, _ = chain_bulges(track, chain)
+        joints, bent = chain_bulges(track, chain)
         points.append(joints[:-1])
         bulges.append(bent)
     if not track.chained:

@@ -50,7 +50,7 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
     along = np.append(_interleaved(s[:-1], half), s[-1])
     if track.closed:
         joints, angles, along = joints[:-1], angles[:-1], along[:-1]
-    return Chain(piece, joints, angles, along, np.zeros(2 * len(half), dtype=np.bool_), track.closed)
+    return Chain(piece, joints, angles, along, np.full(2 * len(half), np.nan), track.closed)
 
 
 def _middles(joint: ComplexArray, angle: FloatArray) -> tuple[ComplexArray, FloatArray]:
