@@ -14,6 +14,7 @@ SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no 
 TURN_LEVELS = (1.0, 8.0)  # a fit must not make more of what is small either, so counts hold at larger thresholds too
 LEAST_HEIGHT = 0.025  # share of the chord error: a bend that stands off its chord by this counts, whatever its turn
 PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
+PROMINENCE_LEVELS = (1.0, 5.0)  # a fit with more extrema is let pass in need only while they are small
 
 
 @dataclass(frozen=True, eq=False)
@@ -39,7 +40,7 @@ class Verdict:
 
     Attributes:
         worse: pieces with more extrema or inflections than allowed, shape (pieces,).
-        badly: those of them whose inflections are more at the last of `TURN_LEVELS`, or whose extrema are more.
+        badly: those of them that have more inflections or extrema at the last of `TURN_LEVELS` or `PROMINENCE_LEVELS`.
         where: extrema and inflections of such pieces that have no counterpart, shape (n,).
         turns: turning points of the fit, for each quantity its thresholds.
     """
@@ -75,7 +76,8 @@ class Guard:
         self._turn = np.full(len(starts), SMALLEST_TURN)
         self._checks: list[_Check] = []
         if source.degree > 2:
-            self._checks.append(_Check(k, [(self._prominence, np.inf)], source, source.periodic, slack))
+            levels = [(factor * self._prominence, np.inf) for factor in PROMINENCE_LEVELS]
+            self._checks.append(_Check(k, levels, source, source.periodic, slack))
         if len(source.point) == 2:
             angle, tall = turning(source.tangent, source.first), LEAST_HEIGHT * chord_error
             levels = [(factor * self._turn, factor * tall) for factor in TURN_LEVELS]
