@@ -51,7 +51,8 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     No piece gets more curvature extrema or more inflections than it had, as `geometry.economy.spline_shape` counts
     them (degree 2: inflections only, for its curvature jumps; 3-D: extrema only). Where that cannot be had
     cheaply, bends to the other side are let pass that turn less than 1 degree and stand off by less than a fifth of
-    the chord error. A piece for which even that finds nothing shorter comes back as it was.
+    the chord error; and where that finds nothing either, extrema that rise or fall by less than a tenth of the piece's
+    range of curvature. A piece for which nothing shorter is found comes back as it was.
 
     Args:
         spline: degree 1 to 3, 2-D or 3-D; degree 1 comes back unchanged.
@@ -72,6 +73,7 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     old = cut(rotated)
     new: list[Spline] = list(old)
     second: dict[int, Spline] = {}  # near enough, but with more bends of the small sort than the source
+    third: dict[int, Spline] = {}  # the same, with more small extrema of curvature
     line = straight(source, _LINE * chord_error)
     waiting = ~line
     for way, amount in _WAYS:
@@ -92,17 +94,20 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
         part = source.only(tried)
         near, verdict = _checked(part, dense.only(tried), state, chord_error)
         for i, at in enumerate(np.flatnonzero(tried).tolist()):
-            if not near[i] or verdict.badly[i]:
+            if not near[i] or verdict.unfair[i]:
                 continue
             better = _clamped(state.fit, source.high[0]) if source.periodic else _piece(state.fit, i, part)
             if not verdict.worse[i]:
                 waiting[at] = False
                 new[at] = _shorter(better, new[at])
+            elif verdict.badly[i]:
+                third[at] = _shorter(better, third.get(at, better))
             else:
                 second[at] = _shorter(better, second.get(at, better))
-    for at, better in second.items():
-        if new[at] is old[at]:
-            new[at] = _shorter(better, old[at])
+    for poorer in (second, third):
+        for at, better in poorer.items():
+            if new[at] is old[at]:
+                new[at] = _shorter(better, old[at])
     if source.periodic:
         return spline if new[0] is old[0] else new[0].moved(origin)
     for i in np.flatnonzero(line).tolist():

@@ -40,13 +40,15 @@ class Verdict:
 
     Attributes:
         worse: pieces with more extrema or inflections than allowed, shape (pieces,).
-        badly: those of them that have more inflections or extrema at the last of `TURN_LEVELS` or `PROMINENCE_LEVELS`.
+        badly: those of them whose inflections are more at the last of `TURN_LEVELS`, or whose extrema are more.
+        unfair: those of them that have more inflections or extrema at the last levels.
         where: extrema and inflections of such pieces that have no counterpart, shape (n,).
         turns: turning points of the fit, for each quantity its thresholds.
     """
 
     worse: BoolArray
     badly: BoolArray
+    unfair: BoolArray
     where: BoolArray
     turns: list[list[Turns]]
 
@@ -77,11 +79,11 @@ class Guard:
         self._checks: list[_Check] = []
         if source.degree > 2:
             levels = [(factor * self._prominence, np.inf) for factor in PROMINENCE_LEVELS]
-            self._checks.append(_Check(k, levels, source, source.periodic, slack))
+            self._checks.append(_Check(k, levels, source, source.periodic, slack, True))
         if len(source.point) == 2:
             angle, tall = turning(source.tangent, source.first), LEAST_HEIGHT * chord_error
             levels = [(factor * self._turn, factor * tall) for factor in TURN_LEVELS]
-            self._checks.append(_Check(angle, levels, source, False, slack))
+            self._checks.append(_Check(angle, levels, source, False, slack, False))
 
     def check(self, fit: Fit, u: FloatArray, base: Verdict | None = None) -> Verdict:
         """Tell which pieces of a fit are less fair than the source's, and at which samples.
@@ -93,7 +95,7 @@ class Guard:
         source = self._source
         span, t = fit.basis.locate(u)
         _, g1, g2 = fit.at(span, t)
-        worse, badly = np.zeros((2, len(source.low)), dtype=bool)
+        worse, badly, unfair = np.zeros((3, len(source.low)), dtype=bool)
         where = np.zeros(len(u), dtype=bool)
         values: list[FloatArray] = []
         if source.degree > 2:
@@ -104,17 +106,27 @@ class Guard:
             values.append(turning(g1, source.first))
         turns: list[list[Turns]] = []
         for i, (check, value) in enumerate(zip(self._checks, values, strict=True)):
-            turns.append(check.compare(value, None if base is None else base.turns[i], worse, badly, where))
-        return Verdict(worse, badly, where, turns)
+            mine, last = np.zeros((2, len(source.low)), dtype=bool)
+            turns.append(check.compare(value, None if base is None else base.turns[i], mine, last, where))
+            worse |= mine
+            badly |= mine if check.curvature else last
+            unfair |= last
+        return Verdict(worse, badly, unfair, where, turns)
 
 
 class _Check:
     """Turning points of one quantity along the source, at some thresholds, against which those of a fit are held."""
 
     def __init__(
-        self, values: FloatArray, thresholds: list[tuple[FloatArray, float]], source: Source, cyclic: bool, slack: float
+        self,
+        values: FloatArray,
+        thresholds: list[tuple[FloatArray, float]],
+        source: Source,
+        cyclic: bool,
+        slack: float,
+        curvature: bool,
     ) -> None:
-        self.first, self.cyclic, self.along = source.first, cyclic, source.along
+        self.first, self.cyclic, self.along, self.curvature = source.first, cyclic, source.along, curvature
         self.thresholds = thresholds
         self.turns = self._turns(values)
         self.counts = [turns.per_piece(source.first) for turns in self.turns]
@@ -127,7 +139,7 @@ class _Check:
         return [_significant(values, index, self.first, least, self.along, tall) for least, tall in self.thresholds]
 
     def compare(
-        self, values: FloatArray, base: list[Turns] | None, worse: BoolArray, badly: BoolArray, where: BoolArray
+        self, values: FloatArray, base: list[Turns] | None, worse: BoolArray, last: BoolArray, where: BoolArray
     ) -> list[Turns]:
         """Mark pieces with more turning points than allowed, and those of them that have no counterpart.
 
@@ -140,7 +152,9 @@ class _Check:
                 allowed = np.maximum(most, base[level].per_piece(self.first))
             for i in np.flatnonzero(count > allowed).tolist():
                 worse[i] = True
-                badly[i] |= level == len(found) - 1
+                last[i] |= level == len(found) - 1
+                if self.curvature and level:
+                    continue  # its places are among those of the first level
                 a, b = self.first[i], self.first[i + 1]
                 known = own if base is None or allowed[i] == most[i] else base[level]
                 ends = np.concatenate([[a], turns.at[(turns.at >= a) & (turns.at < b)], [b - 1]])
