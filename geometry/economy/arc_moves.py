@@ -24,16 +24,21 @@ def fits(result: Polished, chord_error: float) -> bool:
 
 
 def with_more(track: Track, result: Polished, chord_error: float, thorough: bool) -> Chain:
-    """Return a chain with joints added in the middle of its worst arcs."""
+    """Return a chain with joints added in the middle of its worst arcs; those beside worse ones that are held."""
     chain, errors = result.chain, result.errors
     n = chain.count
+    fixed = ~np.isnan(chain.held)
+    if fixed.any():
+        beside = np.where(fixed, errors, 0.0)
+        left, right = (np.roll(beside, by) if chain.closed else _shifted(beside, by) for by in (1, -1))
+        errors = np.where(fixed, 0.0, np.maximum(errors, 0.99 * np.maximum(left, right)))
     wanted = round(float(np.cbrt(np.minimum(errors / chord_error, 1e3)).sum()) - n)
     wanted = max(wanted, 1 if thorough else int(np.ceil(0.015 * n)), 1)
     wanted = min(wanted, max(1, int(0.3 * n)))
     left, right = (
         (np.roll(errors, 1), np.roll(errors, -1)) if chain.closed else (_shifted(errors, 1), _shifted(errors, -1))
     )
-    peaks = np.flatnonzero((errors >= left) & (errors >= right))
+    peaks = np.flatnonzero((errors >= left) & (errors >= right) & ~fixed)
     worst = np.sort(peaks[np.argsort(errors[peaks])[::-1][:wanted]])
     joints, angles, s = extended(track, chain)
     chord = np.diff(joints)
@@ -46,7 +51,7 @@ def with_more(track: Track, result: Polished, chord_error: float, thorough: bool
         np.insert(chain.joint, at, middle[worst]),
         np.insert(chain.angle, at, heading[worst]),
         np.insert(chain.s, at, 0.5 * (s[:-1] + s[1:])[worst]),
-        np.full(n + len(worst), np.nan),
+        np.insert(chain.held, at, np.nan),
         chain.closed,
     )
 

@@ -85,9 +85,12 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         r, points, seen = _distances(batch, shape)
         off = np.abs(r).max(axis=1)
         worst = np.maximum.reduceat(off, batch.first_arc)
-        defect = np.maximum.reduceat(np.abs(shape.defect), batch.first_arc)
-        # closing a kink g up moves the middle of an arc by about g length / 8
-        closed = np.maximum.reduceat(off + 0.125 * np.abs(shape.defect) * shape.length, batch.first_arc)
+        kink = np.maximum(np.abs(shape.defect), np.abs(shape.astray))
+        defect = np.maximum.reduceat(kink, batch.first_arc)
+        # closing a kink up moves the middle of an arc by about kink length / 8; a curvature off what it is held at may
+        # move a whole end by as much as the chord is to change
+        lever = np.where(np.abs(batch.held) * shape.length > 0.1, 1.0, 0.125)
+        closed = np.maximum.reduceat(off + lever * kink * shape.length, batch.first_arc)
         merit = np.where(np.isfinite(worst), closed / chord_error + 10.0 * defect, np.inf)
         better = merit < score[active]
         if better.any():

@@ -11,6 +11,7 @@ from geometry.bspline import Spline
 from geometry.economy.arc_batch import chain_bulges
 from geometry.economy.arc_moves import FIRM, Driver, Trial, bends, fits, weak_joints, with_more, without
 from geometry.economy.arc_newton import Polished, measure_chains, polish
+from geometry.economy.arc_radii import Radii, within_radii
 from geometry.economy.arc_start import Chain, arc_demand, start_chain
 from geometry.economy.biarcs import biarc_chain
 from geometry.economy.check import distance_to_arcs
@@ -27,7 +28,13 @@ ROUND = 2.5  # arcs asked for under which a closed curve may be a circle
 SHARP = 1e-3  # radius, in chord errors, under which a bend is a corner
 
 
-def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> ArcChain:
+def fewest_arcs(
+    spline: Spline,
+    chord_error: float,
+    thorough: bool = False,
+    least_radius: float | None = None,
+    most_radius: float | None = None,
+) -> ArcChain:
     """Return a chain of few lines and arcs within a chord error of a planar spline, both ways.
 
     Between corners the chain is tangent continuous, its joints need not lie on the curve; a closed spline without a
@@ -39,16 +46,23 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
         spline: degree 1 to 3, planar.
         chord_error: largest distance allowed between spline and chain, drawing units.
         thorough: whether to spend more time on a smaller count.
+        least_radius: arcs shall be no tighter, drawing units; corners have no radius.
+        most_radius: arcs shall be no flatter, drawing units; lines have no radius.
 
     Returns:
         The chain, closed when the spline is, checked on dense samples. Where the sparse method finds nothing within the
-        chord error, biarcs are halved until they are.
+        chord error, biarcs are halved until they are. The chord error goes before the limits of radius: where a limit
+        cannot be had within it, arcs pass the limit, and `arc_radii.outside_radii` tells which.
 
     Raises:
-        GeometryError: the spline is not planar or has no length, or the chord error is not positive.
+        GeometryError: the spline is not planar or has no length, the chord error or a limit is not positive, or the
+            least radius is over the largest.
     """
-    if not (chord_error > 0.0 and np.isfinite(chord_error)):
-        raise GeometryError(f"chord error {chord_error:g} is not a positive number")
+    for name, value in (("chord error", chord_error), ("least radius", least_radius), ("largest radius", most_radius)):
+        if value is not None and not (value > 0.0 and np.isfinite(value)):
+            raise GeometryError(f"{name} {value:g} is not a positive number")
+    if least_radius is not None and most_radius is not None and least_radius > most_radius:
+        raise GeometryError(f"the least radius {least_radius:g} is over the largest, {most_radius:g}")
     # in lengths near a common one, so that the count does not depend on the unit; by a power of two: nothing rounds
     size = float(np.abs(spline.control - spline.control[0]).max())
     unit = 2.0 ** round(np.log2(LENGTH / size)) if size > 0.0 else 1.0
@@ -57,19 +71,20 @@ def fewest_arcs(spline: Spline, chord_error: float, thorough: bool = False) -> A
     )
     track, error = track_of(local), chord_error * unit
     track = cut_at(track, sharp_nodes(track, SHARP * error))
-    out = _chain_of(track, error, thorough)
+    radii = Radii(0.0 if least_radius is None else least_radius * unit, (most_radius or np.inf) * unit)
+    out = _chain_of(track, error, thorough, radii)
     while track.chained and len(out.bulges) < 2:  # a loop smaller than the chord error must not fold to nothing
         error *= 0.25
-        out = _chain_of(track, error, thorough)
+        out = _chain_of(track, error, thorough, radii)
     return ArcChain(out.points / unit + spline.control[0], out.bulges, out.closed)
 
 
-def _chain_of(track: Track, chord_error: float, thorough: bool) -> ArcChain:
+def _chain_of(track: Track, chord_error: float, thorough: bool, radii: Radii) -> ArcChain:
     straight = _straight_pieces(track, chord_error)
     chains: list[Chain | None] = [None] * len(track.first)
     drivers: dict[int, Driver] = {}
     for piece in np.flatnonzero(~straight).tolist():
-        drivers[piece] = _drive(track, piece, chord_error, thorough)
+        drivers[piece] = _drive(track, piece, chord_error, thorough, radii)
     waiting = {piece: next(driver) for piece, driver in drivers.items()}
     while waiting:
         pieces = list(waiting)
@@ -98,8 +113,8 @@ def _straight_pieces(track: Track, chord_error: float) -> BoolArray:
     return np.asarray(np.maximum.reduceat(off, track.first) <= 0.99 * chord_error)
 
 
-def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driver:
-    """Find the chain of one piece: grow until it fits, shrink while it fits, make lines; yields chains to polish."""
+def _drive(track: Track, piece: int, chord_error: float, thorough: bool, radii: Radii) -> Driver:
+    """Find the chain of one piece: grow until it fits, shrink while it fits, make lines, heed the limits of radius."""
     demand = arc_demand(track, piece, chord_error)
     accepted = yield from _grown(track, piece, demand, chord_error, thorough)
     if accepted is None:
@@ -110,6 +125,7 @@ def _drive(track: Track, piece: int, chord_error: float, thorough: bool) -> Driv
         accepted = yield from _with_lines(accepted, chord_error, thorough)
         if not len(weak_joints(accepted.chain, np.zeros(count + 1, dtype=np.bool_), chord_error, chord_error)):
             break
+    accepted = yield from within_radii(track, accepted, chord_error, radii)
     return accepted.chain
 
 
@@ -202,17 +218,25 @@ def _assembled(track: Track, chains: list[Chain | None]) -> ArcChain:
     """Return the chains of all pieces as one; a piece without a chain is a line."""
     points: list[ComplexArray] = []
     bulges: list[FloatArray] = []
+    ends = track.node_points
     for piece, chain in enumerate(chains):
         if chain is None:
-            points.append(track.points(track.s[track.first[piece]][None]))
+            points.append(ends[track.first[piece]][None])
             bulges.append(np.zeros(1))
             continue
         joints, bent = chain_bulges(track, chain)
         points.append(joints[:-1])
         bulges.append(bent)
-    if not track.chained:
-        points.append(track.points(track.s[track.last[-1]][None]))
-    out = ArcChain(track.to_xy(np.concatenate(points)), np.concatenate(bulges), track.chained)
+    path, bent = np.concatenate([*points, ends[track.last[-1:]]]), np.concatenate(bulges)
+    if track.chained:
+        path[-1] = path[0]
+    # what a standstill or a cusp leaves behind: no line or arc of no length is written
+    solid = np.abs(np.diff(path)) > 1e-10 * LENGTH
+    if solid.sum() > 1 and not solid.all():
+        begin = path[0]
+        path, bent = np.append(path[:-1][solid], path[-1]), bent[solid]
+        path[0] = begin
+    out = ArcChain(track.to_xy(path[:-1] if track.chained else path), bent, track.chained)
     if track.closed and len(out.bulges) == 2:
         centre, radius = out.circles()
         if abs(radius[0] - radius[1]) <= 1e-9 * radius[0]:
