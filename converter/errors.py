@@ -9,6 +9,7 @@ __all__ = [
     "NoProfileError",
     "OutputError",
     "ReadError",
+    "SettingsError",
     "VersionError",
 ]
 
@@ -32,6 +33,10 @@ class NoProfileError(ConverterError):
 
 class LengthError(ConverterError):
     """A length or a unit on the command line cannot be used."""
+
+
+class SettingsError(ConverterError):
+    """Settings contradict one another or are out of range."""
 
 
 class OutputError(ConverterError):

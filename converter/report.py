@@ -8,13 +8,25 @@ from typing import Any
 from converter.files import write_text
 from converter.jobs.records import FairRecord, ProfileRecord
 
-__all__ = ["CAUTION", "FAIR_HEADINGS", "fair_rows", "fair_sentence", "write_json"]
+__all__ = [
+    "CAUTION",
+    "CHOICE_HEADINGS",
+    "FAIRNESS_HEADINGS",
+    "FAIR_HEADINGS",
+    "choice_rows",
+    "fair_rows",
+    "fair_sentence",
+    "fairness_rows",
+    "write_json",
+]
 
 CAUTION = (
     "Before cutting: check units and scale on a scrap piece. The tolerance is geometric; it leaves kerf, tool radius "
     "and material out. Load-bearing and flight parts need a licensed engineer's approval under local codes."
 )
-FAIR_HEADINGS = ("profile", "layer", "given", "written", "corners", "deviation", "of", "mean", "inflections")
+FAIR_HEADINGS = ("profile", "layer", "given", "written", "corners", "deviation", "of", "mean")
+FAIRNESS_HEADINGS = ("profile", "inflections", "curvature extrema", "least radius", "strain energy")
+CHOICE_HEADINGS = ("profile", "as", "entities", "least", "chord error", "deviation")
 
 
 def write_json(path: Path, record: dict[str, Any], force: bool, inputs: list[Path]) -> None:
@@ -38,13 +50,52 @@ def _finite(value: Any) -> Any:
 
 def fair_rows(record: FairRecord) -> list[tuple[str, ...]]:
     """Return a row of text for every profile, the one that uses most of its tolerance first."""
+    return [_row(profile) for profile in _worst_first(record)]
 
+
+def fairness_rows(record: FairRecord) -> list[tuple[str, ...]]:
+    """Return a row of text for every profile that was faired: its fairness before and after."""
+    rows = []
+    for profile in _worst_first(record):
+        if profile.fairness is not None:
+            before, after = profile.fairness["before"], profile.fairness["after"]
+            pairs = [
+                f"{_short(before[key])} -> {_short(after[key])}"
+                for key in ("inflections", "curvature_extrema", "least_radius", "strain_energy")
+            ]
+            rows.append((profile.id, *pairs))
+    return rows
+
+
+def choice_rows(record: FairRecord) -> list[tuple[str, ...]]:
+    """Return a row of text for every form that was counted; none where only one was asked for."""
+    return [
+        (
+            profile.id,
+            choice.form,
+            str(choice.entities),
+            "" if choice.least is None else str(math.ceil(choice.least - 1e-9)),
+            f"{choice.chord_error:.2g}",
+            f"{choice.certified:.3g}" + ("" if choice.within_tolerance else " OUT"),
+        )
+        for profile in _worst_first(record)
+        for choice in profile.choices
+    ]
+
+
+def _worst_first(record: FairRecord) -> list[ProfileRecord]:
     def used(profile: ProfileRecord) -> float:
         if profile.deviation is None or not profile.tolerance:
             return -1.0
         return profile.deviation.certified / profile.tolerance
 
-    return [_row(profile) for profile in sorted(record.profiles, key=used, reverse=True)]
+    return sorted(record.profiles, key=used, reverse=True)
+
+
+def _short(value: float | None) -> str:
+    if value is None or math.isinf(value):
+        return "none"
+    return str(value) if isinstance(value, int) else f"{value:.3g}"
 
 
 def _row(profile: ProfileRecord) -> tuple[str, ...]:
@@ -53,11 +104,8 @@ def _row(profile: ProfileRecord) -> tuple[str, ...]:
         given += f", {_counted(profile.vertices_in, 'vertex', 'vertices')}"
     given += "" if profile.closed else ", open"
     if profile.left_as_drawn is not None or profile.deviation is None:
-        return (profile.id, profile.layer, given, "left as drawn", "", "", "", "", "")
+        return (profile.id, profile.layer, given, "left as drawn", "", "", "", "")
     mean = profile.deviation.mean_signed
-    change = ""
-    if profile.fairness is not None:
-        change = f"{profile.fairness['before']['inflections']} -> {profile.fairness['after']['inflections']}"
     return (
         profile.id,
         profile.layer,
@@ -67,13 +115,13 @@ def _row(profile: ProfileRecord) -> tuple[str, ...]:
         f"{profile.deviation.certified:.3g}" + ("" if profile.within_tolerance else " OUT"),
         f"{profile.tolerance:.3g}",
         "" if mean is None else f"{mean:+.2g}",
-        change,
     )
 
 
 def _written(profile: ProfileRecord) -> str:
     size = f", diameter {profile.diameter:.4g}" if profile.diameter is not None else ""
-    return _form(profile) + size
+    least = "" if profile.least is None else f" (least {math.ceil(profile.least - 1e-9)})"
+    return _form(profile) + least + size
 
 
 def _form(profile: ProfileRecord) -> str:
@@ -107,4 +155,7 @@ def fair_sentence(record: FairRecord) -> str:
         parts.append(f"no fair curve found for {', '.join(unfit)}")
     out = [p.id for p in faired if not p.within_tolerance]
     parts.append(f"out of tolerance: {', '.join(out)}" if out else "none out of tolerance")
+    over = [p.id for p in faired if not p.within_budget]
+    if over:
+        parts.append(f"over the budget: {', '.join(over)}")
     return "; ".join(parts)

@@ -11,10 +11,9 @@ import pyogrio
 import pytest
 import shapely
 
-import converter.jobs.fair as job
 from converter.errors import LengthError, NoProfileError, OutputError, ReadError, VersionError
 from converter.jobs.fair import FairSettings, fair_drawing
-from converter.jobs.forms import best_curve
+from converter.jobs.forms import Search
 from geometry.polyline import Polyline
 from tests.dxf_text import handle, records
 from tests.traced_drawings import (
@@ -299,12 +298,15 @@ def test_the_record_has_the_agreed_keys(tmp_path):
 def test_a_profile_out_of_its_tolerance_is_named_and_never_called_within(tmp_path, monkeypatch):
     """No input is known that makes the search end out of tolerance, so its last word is replaced by a worse curve."""
 
-    def swollen(outline, *arguments):
-        result = best_curve(outline, *arguments)
-        centre = outline.points.mean(axis=0)
-        return dataclasses.replace(result, curve=Polyline(centre + 1.1 * (outline.points - centre), True))
+    search = Search.best
 
-    monkeypatch.setattr(job, "best_curve", swollen)
+    def swollen(self, *arguments):
+        result = search(self, *arguments)
+        points = self.outline.points
+        centre = points.mean(axis=0)
+        return dataclasses.replace(result, curve=Polyline(centre + 1.1 * (points - centre), True))
+
+    monkeypatch.setattr(Search, "best", swollen)
     record, output = faired(save_outline(tmp_path / "in.dxf"), "1")
     (profile,) = record.profiles
     assert not profile.within_tolerance
@@ -315,7 +317,7 @@ def test_a_profile_out_of_its_tolerance_is_named_and_never_called_within(tmp_pat
 
 
 def test_where_no_curve_fits_the_profile_is_left_and_named(tmp_path, monkeypatch):
-    monkeypatch.setattr(job, "best_curve", lambda *_: None)
+    monkeypatch.setattr(Search, "best", lambda *_: None)
     source = save_outline(tmp_path / "in.dxf")
     record, output = faired(source, "1")
     assert record.profiles[0].left_as_drawn == "no fair curve keeps the tolerance"

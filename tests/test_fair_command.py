@@ -9,7 +9,7 @@ import numpy as np
 import pytest
 
 import converter.cli
-import converter.jobs.fair as job
+from converter.jobs.forms import Search
 from tests.test_cli import one_line_error, run
 from tests.traced_drawings import HOOK, STADIUM, new_drawing, save_outline
 
@@ -46,14 +46,18 @@ def test_the_summary_names_profiles_deviation_tolerance_and_cautions(folder):
     assert lines[0] == "in.dxf -> out.dxf, units: mm"
     assert lines[1].split() == [
         *("profile", "layer", "given", "written", "corners"),
-        *("deviation", "of", "mean", "inflections"),
+        *("deviation", "of", "mean"),
     ]
     record = json.loads((folder / "r.json").read_text())
     (profile,) = record["profiles"]
     assert lines[2].split()[:3] == [profile["id"], "TRACE", "LWPOLYLINE,"]
     assert f"{profile['control_points']} control points" in lines[2]
     assert f"{profile['deviation']['certified']:.3g}" in lines[2].split()
-    assert "pitch 1" in lines[3]
+    assert lines[3].split() == ["profile", "inflections", "curvature", "extrema", "least", "radius", "strain", "energy"]
+    before, after = profile["fairness"]["before"], profile["fairness"]["after"]
+    assert lines[4].split()[1:4] == [str(before["inflections"]), "->", str(after["inflections"])]
+    assert lines[4].split()[-3:] == [f"{before['strain_energy']:.3g}", "->", f"{after['strain_energy']:.3g}"]
+    assert "pitch 1" in lines[5]
     assert lines[-2].startswith("1 profile faired; certified deviation at most ")
     assert lines[-2].endswith(" mm; none out of tolerance")
     for caution in ("scrap piece", "kerf", "licensed engineer"):
@@ -93,12 +97,12 @@ def test_several_drawings_go_to_a_folder_and_one_failure_stops_no_other(folder):
 def test_a_profile_out_of_tolerance_is_exit_code_1_and_named(folder, monkeypatch, capsys):
     """No input is known that ends out of tolerance, so the search's last word is replaced by a curve moved aside."""
 
-    def aside(*arguments, _search=job.best_curve):
+    def aside(*arguments, _search=Search.best):
         result = _search(*arguments)
         object.__setattr__(result, "curve", result.curve.moved(np.array([1.5, 0.0])))
         return result
 
-    monkeypatch.setattr(job, "best_curve", aside)
+    monkeypatch.setattr(Search, "best", aside)
     monkeypatch.chdir(folder)
     assert faired_in_this_process("in.dxf", "-o", "out.dxf", "--report", "r.json") == 1
     printed = capsys.readouterr()

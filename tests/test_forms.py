@@ -1,7 +1,9 @@
 import numpy as np
 import pytest
 
-from converter.jobs.forms import best_curve, corner_turns, outline_corners
+from converter.jobs.corners import corner_turns, outline_corners
+from converter.jobs.forms import Search
+from converter.jobs.writing import Writing
 from geometry.deviation import hausdorff
 from geometry.polyline import Polyline
 from geometry.simple import is_simple
@@ -16,7 +18,7 @@ NO_MARKS = np.zeros((0, 2))
 def test_every_form_keeps_the_tolerance_with_few_entities(form, degree):
     outline = Polyline(staircase(turned(dense(BRACKET), 17)), True)
     corners, _ = outline_corners(outline, 1.0, None, NO_MARKS)
-    result = best_curve(outline, corners, 1.0, 0.1, form, degree, 0.0)
+    result = Search(outline, corners, 1.0, degree, 0.0).best(0.1, Writing(form))
     assert result.within
     assert hausdorff(outline, result.curve, 0.01).certified <= 1.0
     count = len(result.curve.control if form == "spline" else result.curve.points)
@@ -31,7 +33,7 @@ def test_walls_nearer_than_the_tolerance_do_not_cross():
         if not is_simple(outline):
             continue
         corners, _ = outline_corners(outline, 0.6, None, NO_MARKS)
-        result = best_curve(outline, corners, 0.6, 0.06, "spline", 3, 0.0)
+        result = Search(outline, corners, 0.6, 3, 0.0).best(0.06, Writing("spline"))
         assert result.within
         assert not result.crosses
         assert is_simple(result.curve.flatten(1e-4))
@@ -40,7 +42,7 @@ def test_walls_nearer_than_the_tolerance_do_not_cross():
 def test_corner_turns_are_those_of_the_outline():
     outline = Polyline(staircase(turned(dense(BRACKET), 17)), True)
     corners, _ = outline_corners(outline, 1.0, None, NO_MARKS)
-    result = best_curve(outline, corners, 1.0, 0.1, "spline", 3, 0.0)
+    result = Search(outline, corners, 1.0, 3, 0.0).best(0.1, Writing("spline"))
     places, turns = corner_turns(result.faired.spline)
     assert len(places) == len(BRACKET)
     assert np.degrees(turns.sum()) == pytest.approx(360.0, abs=2.0)  # all the turning of a polygon is at its corners

@@ -159,7 +159,7 @@ def keys_in(title, heading):
 
 
 def test_the_keys_of_the_record_are_those_listed(tmp_path):
-    whole = {field.name for field in dataclasses.fields(FairRecord)} | {"within_tolerance"}
+    whole = {field.name for field in dataclasses.fields(FairRecord)} | {"within_tolerance", "within_budget"}
     assert keys_in("Record", "key") == whole
     assert keys_in("Record", "key of a profile") == {field.name for field in dataclasses.fields(ProfileRecord)}
     parts = section("Record")

@@ -1,5 +1,6 @@
 """The command `fair`."""
 
+from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
 
@@ -17,7 +18,17 @@ from converter.options import (
     option,
     units_option,
 )
-from converter.report import CAUTION, FAIR_HEADINGS, fair_rows, fair_sentence, write_json
+from converter.report import (
+    CAUTION,
+    CHOICE_HEADINGS,
+    FAIR_HEADINGS,
+    FAIRNESS_HEADINGS,
+    choice_rows,
+    fair_rows,
+    fair_sentence,
+    fairness_rows,
+    write_json,
+)
 from converter.units import Length
 from geometry.errors import GeometryError
 
@@ -27,6 +38,7 @@ if TYPE_CHECKING:
 __all__ = ["fair"]
 
 _CURVE = "The curve"
+_LIMITS = "Limits of one form"
 _SHOWN = 40
 _VERSIONS = ("R12", "R2000", "R2004", "R2007", "R2010", "R2013", "R2018")
 
@@ -44,11 +56,12 @@ _VERSIONS = ("R12", "R2000", "R2004", "R2007", "R2010", "R2013", "R2018")
 )
 @option(
     "--as",
-    "form",
+    "forms",
     type=click.Choice(["spline", "arcs", "lines"]),
-    default="spline",
-    show_default=True,
-    help="Write SPLINE entities, lines and arcs (LWPOLYLINE with bulges), or vertices only.",
+    multiple=True,
+    default=("spline",),
+    help="Write SPLINE entities, lines and arcs (LWPOLYLINE with bulges), or vertices only. May be repeated: all are "
+    "counted for choosing, and the first is written if there is somewhere to write to.  [default: spline]",
 )
 @layer_option
 @option("--report", metavar="FILE", type=click.Path(path_type=Path), help="Write the record of the job as JSON.")
@@ -74,11 +87,39 @@ _VERSIONS = ("R12", "R2000", "R2004", "R2007", "R2010", "R2013", "R2018")
     help="Share of the tolerance that writing few entities may spend.  [default: a tenth of it]",
 )
 @option(
+    "--budget",
+    metavar="N",
+    type=click.IntRange(2),
+    heading=_CURVE,
+    help="Most control points, arcs and lines, or vertices a profile; takes the smallest chord error that keeps it.",
+)
+@option(
     "--degree", type=click.Choice(["2", "3"]), default="3", show_default=True, heading=_CURVE, help="Degree of splines."
 )
 @option("--redraw", is_flag=True, heading=_CURVE, help="Draw true curves (circles, arcs, splines) afresh as well.")
+@option(
+    "--vertices",
+    type=click.Choice(["free", "on-curve"]),
+    default="free",
+    show_default=True,
+    heading=_LIMITS,
+    help="Lines: vertices about the curve, fewest of them, or on the curve.",
+)
+@option("--max-step", type=LengthType(), heading=_LIMITS, help="Lines: longest segment.")
+@option(
+    "--max-turn", metavar="DEG", type=float, heading=_LIMITS, help="Lines: largest turn at a vertex that is no corner."
+)
+@option("--least-radius", type=LengthType(), heading=_LIMITS, help="Arcs: smallest radius; named where it is not kept.")
+@option("--most-radius", type=LengthType(), heading=_LIMITS, help="Arcs: largest radius; named where it is not kept.")
 @gap_option
 @units_option
+@option(
+    "--decimals",
+    metavar="N",
+    type=click.IntRange(0, 15),
+    heading=OUTPUT,
+    help="Round coordinates to N places; what is certified is the rounded curve.  [default: in full]",
+)
 @option(
     "--dxf-version",
     "version",
@@ -93,7 +134,7 @@ def fair(
     output: Path | None,
     out_dir: Path | None,
     tolerance: Length | str,
-    form: Any,
+    forms: tuple[Any, ...],
     layers: tuple[str, ...],
     report: Path | None,
     force: bool,
@@ -101,24 +142,39 @@ def fair(
     corner_angle: float | None,
     corners_on: str | None,
     chord_error: Length | None,
+    budget: int | None,
     degree: str,
     redraw: bool,
+    vertices: str,
+    max_step: Length | None,
+    max_turn: float | None,
+    least_radius: Length | None,
+    most_radius: Length | None,
     gap: Length | None,
     units: str | None,
+    decimals: int | None,
     version: str | None,
 ) -> int:
     """Fair the traced profiles of the drawings IN within a tolerance, keep their true corners, and write new drawings.
 
     What needs no fairing (circles, arcs, splines, clean polygons) and everything that is not a profile stays as it
-    is. Exit code 1 means that a profile misses its tolerance; the summary and the record name it.
+    is. Exit code 1 means that a profile misses its tolerance or the budget; the summary and the record name it.
     """
     from converter.jobs.fair import FairSettings, fair_drawing  # slow to import, and the help needs none of it
 
     settings = FairSettings(
         tolerance=tolerance if isinstance(tolerance, Length) else None,
-        form=form,
+        form=forms[0],
+        also=tuple(dict.fromkeys(form for form in forms if form != forms[0])),
         degree=int(degree),
         chord_error=chord_error,
+        budget=budget,
+        on_curve=vertices == "on-curve",
+        max_step=max_step,
+        max_turn=max_turn,
+        least_radius=least_radius,
+        most_radius=most_radius,
+        decimals=decimals,
         corner_angle=corner_angle,
         corners_on=corners_on,
         redraw=redraw,
@@ -128,7 +184,7 @@ def fair(
         version=version,
         force=force,
     )
-    places = _outputs(context, drawings, output, out_dir)
+    places = _outputs(context, drawings, output, out_dir, needed=not settings.also)
     if report is not None:
         check_output(report, force, drawings)
         if report in places:
@@ -162,13 +218,15 @@ def fair(
         print(CAUTION)
     if failed:
         return 2
-    return 0 if all(record.within_tolerance for record in records) else 1
+    return 0 if all(record.within_tolerance and record.within_budget for record in records) else 1
 
 
 def _outputs(
-    context: click.Context, drawings: tuple[Path, ...], output: Path | None, out_dir: Path | None
-) -> list[Path]:
-    """Return where each drawing is written to."""
+    context: click.Context, drawings: tuple[Path, ...], output: Path | None, out_dir: Path | None, needed: bool
+) -> Sequence[Path | None]:
+    """Return where each drawing is written to, None for nowhere."""
+    if output is None and out_dir is None and not needed:
+        return [None] * len(drawings)
     if (output is None) == (out_dir is None):
         raise click.UsageError("state where to write: -o OUT for one drawing, or --out-dir DIR", context)
     if output is not None:
@@ -186,13 +244,12 @@ def _outputs(
 
 
 def _print(record: "FairRecord") -> None:
-    print(f"{record.input} -> {record.output}, units: {record.units}")
+    print(f"{record.input} -> {record.output or 'nothing written'}, units: {record.units}")
     for warning in record.warnings:
         print(f"note: {warning}")
-    rows = fair_rows(record)
-    print_table(FAIR_HEADINGS, rows[:_SHOWN], right=("corners", "deviation", "of", "mean", "inflections"))
-    if len(rows) > _SHOWN:
-        print(f"and {len(rows) - _SHOWN} more; --report lists them all")
+    _print_rows(FAIR_HEADINGS, fair_rows(record), right=("corners", "deviation", "of", "mean"))
+    _print_rows(FAIRNESS_HEADINGS, fairness_rows(record), right=FAIRNESS_HEADINGS[1:])
+    _print_rows(CHOICE_HEADINGS, choice_rows(record), right=CHOICE_HEADINGS[2:])
     told: dict[str, list[str]] = {}
     for profile in record.profiles:
         if profile.left_as_drawn is None:
@@ -211,3 +268,11 @@ def _print(record: "FairRecord") -> None:
     if passed:
         print(f"passed through untouched: {passed}")
     print(fair_sentence(record))
+
+
+def _print_rows(headings: Sequence[str], rows: list[tuple[str, ...]], right: Sequence[str]) -> None:
+    if not rows:
+        return
+    print_table(headings, rows[:_SHOWN], right=right)
+    if len(rows) > _SHOWN:
+        print(f"and {len(rows) - _SHOWN} more; --report lists them all")

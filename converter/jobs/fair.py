@@ -3,23 +3,21 @@
 import math
 import time
 from collections.abc import Callable
-from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 
 import converter
-from converter.drawing import AnyCurve, Drawing, Profile, Written, read_drawing, replace, save, supports
-from converter.errors import LengthError
+from converter.drawing import Drawing, Profile, Written, read_drawing, replace, save, supports
 from converter.files import check_output
 from converter.jobs.assess import Assessment, assess
-from converter.jobs.forms import Form, best_curve, corner_turns, outline_corners
+from converter.jobs.corners import corner_turns, outline_corners
+from converter.jobs.forms import Result, Search
 from converter.jobs.marks import Marks, read_marks
-from converter.jobs.records import DeviationRecord, FairRecord, ProfileRecord
-from converter.units import Length
-from geometry.arcs import ArcChain
+from converter.jobs.records import ChoiceRecord, DeviationRecord, FairRecord, ProfileRecord
+from converter.jobs.settings import CHORD_SHARE, FairSettings, Stated, stated
+from converter.jobs.writing import Form, Writing, beyond_radii, counts_of, least_of, rounded
 from geometry.arrays import FloatArray
-from geometry.bspline import Spline
 from geometry.deviation import hausdorff
 from geometry.fairness import fairness
 from geometry.polyline import Polyline
@@ -27,51 +25,19 @@ from geometry.signed import deviation_statistics
 
 __all__ = ["FairSettings", "fair_drawing"]
 
-_CHORD_SHARE = 0.1  # of the tolerance, when no chord error is stated
 _WIDTH = 1.0 / 200.0
-
-
-@dataclass(frozen=True, slots=True)
-class FairSettings:
-    """How to fair.
-
-    Attributes:
-        tolerance: largest distance between given and written, both ways; None chooses it for each profile.
-        form: what to write.
-        degree: of splines, 2 or 3.
-        chord_error: share of the tolerance that writing few entities may spend; None takes a tenth.
-        corner_angle: degrees above which a vertex is a corner; None finds the true corners.
-        corners_on: layer whose POINT entities mark corners; None for none.
-        redraw: whether true curves (CIRCLE, ARC, ELLIPSE, SPLINE) are drawn afresh too.
-        layers: layers to take profiles from; empty for all.
-        gap: ends nearer than this are joined; None takes 1e-6 of the extent.
-        units: name of the drawing's unit, overriding $INSUNITS.
-        version: DXF version to write; None keeps the drawing's.
-        force: whether an existing output may be replaced.
-    """
-
-    tolerance: Length | None = None
-    form: Form = "spline"
-    degree: int = 3
-    chord_error: Length | None = None
-    corner_angle: float | None = None
-    corners_on: str | None = None
-    redraw: bool = False
-    layers: tuple[str, ...] = ()
-    gap: Length | None = None
-    units: str | None = None
-    version: str | None = None
-    force: bool = False
+_ROUNDING = 0.25  # most of a tolerance that rounding may take
+_PLACES = 3  # of arcs beyond a limit that are named
 
 
 def fair_drawing(
-    source: Path, output: Path, settings: FairSettings, progress: Callable[[int, int], None] | None = None
+    source: Path, output: Path | None, settings: FairSettings, progress: Callable[[int, int], None] | None = None
 ) -> FairRecord:
     """Fair the profiles of a drawing and write it.
 
     Args:
         source: DXF file, never changed.
-        output: DXF file; it appears whole or not at all.
+        output: DXF file; it appears whole or not at all. None writes nothing and only reports.
         settings: see `FairSettings`.
         progress: called with profiles done and profiles in all, after each.
 
@@ -79,91 +45,157 @@ def fair_drawing(
         ConverterError: the input or the settings cannot be used, or the output cannot be written.
     """
     clock = time.perf_counter()
-    check_output(output, settings.force, [source])
+    if output is not None:
+        check_output(output, settings.force, [source])
     drawing = read_drawing(source, settings.layers, settings.gap, settings.units)
     drawing.require_profiles()
-    tolerance = _positive(drawing, settings.tolerance, "tolerance")
-    chord_error = _positive(drawing, settings.chord_error, "chord error")
-    if tolerance is not None and chord_error is not None and chord_error >= tolerance:
-        raise LengthError(
-            f"chord error {settings.chord_error} is not below the tolerance {settings.tolerance}, of which it is a "
-            "share; state a smaller one"
-        )
+    lengths = stated(settings, drawing)
     version = (settings.version or drawing.version).upper()
     record = FairRecord(
         "fair",
         converter.__version__,
         str(source),
-        str(output),
+        None if output is None else str(output),
         drawing.units.symbol,
-        tolerance if tolerance is not None else "auto",
-        chord_error if chord_error is not None else f"{_CHORD_SHARE:g} of the tolerance",
+        lengths.tolerance if lengths.tolerance is not None else "auto",
+        _chord_error(settings, lengths),
         settings.form,
         settings.degree,
         drawing.gap,
+        settings.budget,
+        settings.decimals,
     )
     record.seconds["read"] = time.perf_counter() - clock
     clock = time.perf_counter()
     count = len(drawing.profiles)
     marks = read_marks(drawing, settings.corners_on)
     for done, profile in enumerate(list(drawing.profiles), start=1):
-        record.profiles.append(_fair_profile(drawing, profile, tolerance, chord_error, version, marks, settings))
+        record.profiles.append(_fair_profile(drawing, profile, lengths, version, marks, settings))
         if progress is not None:
             progress(done, count)
     record.seconds["fair"] = time.perf_counter() - clock
     clock = time.perf_counter()
-    record.warnings += marks.unused()
-    record.warnings += [*drawing.warnings, *save(drawing, output, settings.version, settings.force)]
+    record.warnings += [*marks.unused(), *drawing.warnings]
+    if output is not None:
+        record.warnings += save(drawing, output, settings.version, settings.force)
     record.passed_through = dict(drawing.passed_through)
     record.skipped = [{"handle": s.handle, "type": s.type, "reason": s.reason} for s in drawing.skipped]
     record.seconds["write"] = time.perf_counter() - clock
     return record
 
 
-def _positive(drawing: Drawing, length: Length | None, name: str) -> float | None:
-    if length is None:
-        return None
-    value = drawing.length(length)
-    if value <= 0.0 or not math.isfinite(value):
-        raise LengthError(f"{name} {length} is not a length above 0; state one such as 0.2 or 0.2mm")
-    return value
+def _chord_error(settings: FairSettings, lengths: Stated) -> float | str:
+    if settings.budget is not None:
+        return f"the smallest that keeps {settings.budget} entities a profile"
+    return lengths.chord_error if lengths.chord_error is not None else f"{CHORD_SHARE:g} of the tolerance"
 
 
 def _fair_profile(
-    drawing: Drawing,
-    profile: Profile,
-    tolerance: float | None,
-    chord_error: float | None,
-    version: str,
-    marks: Marks,
-    settings: FairSettings,
+    drawing: Drawing, profile: Profile, lengths: Stated, version: str, marks: Marks, settings: FairSettings
 ) -> ProfileRecord:
-    need = assess(profile, tolerance, settings.redraw)
+    need = assess(profile, lengths.tolerance, settings.redraw)
     if need.as_drawn or need.outline is None:
         return _as_drawn(profile, need, need.reason)
-    form, said = _possible_form(settings.form, profile, version)
     angle = None if settings.corner_angle is None else math.radians(settings.corner_angle)
     origin = need.outline.points[0]  # a given point: far from the origin of the drawing nothing is rounded by this
     outline = need.outline.moved(-origin)
     corners, used = outline_corners(outline, need.tolerance, angle, marks.in_frame(profile) - origin)
     marks.used |= used
-    allowed = chord_error if chord_error is not None else _CHORD_SHARE * need.tolerance
-    result = best_curve(
-        outline, corners, need.tolerance, min(allowed, 0.9 * need.tolerance), form, settings.degree, need.slack
-    )
+    form, said = _possible_form(settings.form, profile, version)
+    writing = lengths.writing_as(form)
+    if writing.rounding > _ROUNDING * need.tolerance:
+        return _failed(
+            profile,
+            need,
+            f"{settings.decimals} decimals move points by up to {writing.rounding:.3g}, too much for a tolerance of "
+            f"{need.tolerance:.3g}; state more of them",
+        )
+    search = Search(outline, corners, need.tolerance, settings.degree, need.slack)
+    result, reached = _result(search, writing, lengths, settings.budget)
     if result is None:
-        record = _as_drawn(profile, need, "no fair curve keeps the tolerance")
-        record.within_tolerance = False
-        record.warnings.append("no fair curve keeps the tolerance, so the profile is left as drawn; state a larger one")
-        return record
-    written = replace(drawing, profile, result.curve.moved(origin), version)
-    record = _record(profile, need, written, result.faired.spline.moved(origin), result.faired.circle)
+        return _failed(profile, need, "no fair curve keeps the tolerance; state a larger one")
+    circle = result.faired.circle is not None
+    curve = rounded(result.curve.moved(origin), circle and form == "arcs", settings.decimals)
+    written = replace(drawing, profile, curve, version)
+    record = _record(profile, need, written, result, origin)
+    record.least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
+    record.within_budget = reached
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
-    if result.crosses:
-        record.warnings.append("the curve crosses or touches itself: two walls are closer than the tolerance")
-    if need.jaggedness is not None and need.jaggedness.kind == "stations":
-        record.warnings.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
+    record.warnings += _doubts(result, writing, origin, need, settings.budget, reached)
+    record.choices = _choices(search, record, lengths, settings, profile, version)
     return record
+
+
+def _result(search: Search, writing: Writing, lengths: Stated, budget: int | None) -> tuple[Result | None, bool]:
+    """Return the curve to write, and whether it keeps the budget."""
+    chord_error = lengths.chord_error_for(search.tolerance)
+    if budget is None:
+        return search.best(chord_error, writing), True
+    inside = search.within_budget(budget, writing)
+    return (inside, True) if inside is not None else (search.best(chord_error, writing), False)
+
+
+def _doubts(
+    result: Result, writing: Writing, origin: FloatArray, need: Assessment, budget: int | None, reached: bool
+) -> list[str]:
+    """Return what a person has to know about a curve."""
+    said = []
+    if result.crosses:
+        said.append("the curve crosses or touches itself: two walls are closer than the tolerance")
+    if need.jaggedness is not None and need.jaggedness.kind == "stations":
+        said.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
+    if not reached:
+        said.append(
+            f"a budget of {budget} entities is not reached within the tolerance: "
+            f"{counts_of(result.curve).entities} are written; state more of them or a larger tolerance"
+        )
+    beyond = beyond_radii(result.curve, writing)
+    if beyond:
+        low = "" if writing.least_radius is None else f" from {writing.least_radius:.4g}"
+        high = "" if writing.most_radius is None else f" to {writing.most_radius:.4g}"
+        places = ", ".join(
+            f"{radius:.4g} near ({point[0] + origin[0]:.4g}, {point[1] + origin[1]:.4g})"
+            for radius, point in beyond[:_PLACES]
+        )
+        more = f" and {len(beyond) - _PLACES} more" if len(beyond) > _PLACES else ""
+        said.append(f"radii{low}{high} are not kept within the tolerance: {places}{more}")
+    return said
+
+
+def _choices(
+    search: Search, record: ProfileRecord, lengths: Stated, settings: FairSettings, profile: Profile, version: str
+) -> list[ChoiceRecord]:
+    """Return what every form that was asked for takes, the written one first."""
+    if not settings.also:
+        return []
+    assert record.deviation is not None
+    assert record.chord_error is not None
+    choices = [
+        ChoiceRecord(
+            settings.form,
+            record.entities,
+            record.least,
+            record.chord_error,
+            record.deviation.certified,
+            record.within_tolerance,
+        )
+    ]
+    for other in settings.also:
+        form, _ = _possible_form(other, profile, version)
+        if form != other:
+            continue
+        writing = lengths.writing_as(form)
+        result, _ = _result(search, writing, lengths, settings.budget)
+        if result is not None:
+            least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
+            entities = _entities(result, form)
+            certified = result.deviation.certified + search.slack + writing.rounding
+            choices.append(ChoiceRecord(form, entities, least, result.chord_error, certified, result.within))
+    return choices
+
+
+def _entities(result: Result, form: Form) -> int:
+    return counts_of(result.curve, result.faired.circle is not None and form == "arcs").entities
 
 
 def _possible_form(form: Form, profile: Profile, version: str) -> tuple[Form, list[str]]:
@@ -205,6 +237,14 @@ def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
     return record
 
 
+def _failed(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
+    """Return the record of a profile that could not be faired as it was asked for."""
+    record = _as_drawn(profile, need, reason.split(";")[0])
+    record.within_tolerance = False
+    record.warnings.append(f"left as drawn: {reason}")
+    return record
+
+
 def _kinds(profile: Profile) -> str:
     return "/".join(sorted(set(profile.types)))
 
@@ -216,7 +256,7 @@ def _jaggedness(need: Assessment) -> dict[str, float | str] | None:
 
 
 def _record(
-    profile: Profile, need: Assessment, written: Written, fair: Spline, circle: tuple[FloatArray, float] | None
+    profile: Profile, need: Assessment, written: Written, result: Result, origin: FloatArray
 ) -> ProfileRecord:
     """Return the record of a faired profile; the certificate is of the curve as the file will hold it."""
     outline, curve, tolerance = need.outline, written.curve, need.tolerance
@@ -224,7 +264,9 @@ def _record(
     deviation = hausdorff(outline, curve, _WIDTH * tolerance)
     certified = deviation.certified + need.slack
     statistics = deviation_statistics(curve, outline, tolerance)
-    points, turns = corner_turns(fair)
+    points, turns = corner_turns(result.faired.spline.moved(origin))
+    circle = result.faired.circle
+    counts = counts_of(curve, written.type == "CIRCLE")
     record = ProfileRecord(
         profile.id,
         profile.layer,
@@ -236,6 +278,13 @@ def _record(
         need.reason,
         _jaggedness(need),
         None,
+        pieces=counts.pieces,
+        control_points=counts.control_points,
+        arcs=counts.arcs,
+        lines=counts.lines,
+        vertices_out=counts.vertices,
+        entities=counts.entities,
+        chord_error=result.chord_error,
         corners=[
             {"x": float(p[0]), "y": float(p[1]), "turn_deg": math.degrees(float(t))}
             for p, t in zip(points, turns, strict=True)
@@ -254,7 +303,6 @@ def _record(
         area_out=curve.area(),
         within_tolerance=certified <= tolerance,
     )
-    _count(record, curve, written.type)
     if not record.within_tolerance:
         said = f"out of tolerance: certified {certified:.4g} of {tolerance:.4g}; state a larger tolerance"
         record.warnings.append(said)
@@ -265,19 +313,3 @@ def _alongs(outline: Polyline, points: FloatArray) -> FloatArray:
     """Return the arc length of the vertex nearest to each point."""
     nearest = [int(((outline.points - point) ** 2).sum(axis=1).argmin()) for point in points]
     return outline.alongs()[np.array(nearest, dtype=np.intp)]
-
-
-def _count(record: ProfileRecord, curve: AnyCurve, entity: str) -> None:
-    """Count what the controller will see."""
-    if isinstance(curve, Spline):
-        record.pieces, record.control_points = len(curve.spans), len(curve.control)
-    elif isinstance(curve, ArcChain):
-        if entity == "CIRCLE":
-            record.pieces, record.arcs, record.vertices_out = 1, 1, 0
-            return
-        record.arcs = int(np.count_nonzero(curve.bulges))
-        record.lines = len(curve.bulges) - record.arcs
-        record.pieces, record.vertices_out = len(curve.bulges), len(curve.points)
-    elif isinstance(curve, Polyline):
-        record.lines = record.pieces = len(curve.points) - (0 if curve.closed else 1)
-        record.vertices_out = len(curve.points)

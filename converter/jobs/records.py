@@ -3,7 +3,7 @@
 from dataclasses import asdict, dataclass, field
 from typing import Any
 
-__all__ = ["DeviationRecord", "FairRecord", "ProfileRecord"]
+__all__ = ["ChoiceRecord", "DeviationRecord", "FairRecord", "ProfileRecord"]
 
 
 @dataclass(slots=True)
@@ -21,6 +21,27 @@ class DeviationRecord:
     measured: float
     rms: float
     mean_signed: float | None
+
+
+@dataclass(slots=True)
+class ChoiceRecord:
+    """What one form takes for a profile, whether it is written or only counted.
+
+    Attributes:
+        form: spline, arcs or lines.
+        entities: control points, arcs and lines, or vertices.
+        least: theoretical least number of them; None for splines, which have no such formula.
+        chord_error: share of the tolerance that was spent on it, drawing units.
+        certified: proven distance to the given outline.
+        within_tolerance: whether that keeps the tolerance.
+    """
+
+    form: str
+    entities: int
+    least: float | None
+    chord_error: float
+    certified: float
+    within_tolerance: bool
 
 
 @dataclass(slots=True)
@@ -42,6 +63,11 @@ class ProfileRecord:
     arcs: int = 0
     lines: int = 0
     vertices_out: int = 0
+    entities: int = 0
+    least: float | None = None
+    chord_error: float | None = None
+    within_budget: bool = True
+    choices: list[ChoiceRecord] = field(default_factory=list)
     corners: list[dict[str, float]] = field(default_factory=list)
     deviation: DeviationRecord | None = None
     fairness: dict[str, dict[str, Any]] | None = None
@@ -61,13 +87,15 @@ class FairRecord:
     command: str
     version: str
     input: str
-    output: str
+    output: str | None
     units: str
     tolerance: float | str
     chord_error: float | str
     form: str
     degree: int
     gap: float
+    budget: int | None = None
+    decimals: int | None = None
     profiles: list[ProfileRecord] = field(default_factory=list)
     passed_through: dict[str, int] = field(default_factory=dict)
     skipped: list[dict[str, str]] = field(default_factory=list)
@@ -79,6 +107,11 @@ class FairRecord:
         """Whether every profile keeps its tolerance."""
         return all(profile.within_tolerance for profile in self.profiles)
 
+    @property
+    def within_budget(self) -> bool:
+        """Whether every profile keeps the budget."""
+        return all(profile.within_budget for profile in self.profiles)
+
     def as_json(self) -> dict[str, Any]:
         """Return the record as plain dictionaries, lists, numbers and text."""
-        return {**asdict(self), "within_tolerance": self.within_tolerance}
+        return {**asdict(self), "within_tolerance": self.within_tolerance, "within_budget": self.within_budget}
