@@ -1,9 +1,13 @@
+from itertools import pairwise
+from pathlib import Path
+
+import ezdxf
 import numpy as np
 import pytest
 from hypothesis import given, settings
 from hypothesis import strategies as st
 
-from geometry.arcs import ArcChain, full_circle
+from geometry.arcs import ArcChain, bulge_points, full_circle
 from geometry.bspline import Spline, join
 from geometry.deviation import hausdorff, within
 from geometry.economy.arcs import fewest_arcs
@@ -75,6 +79,45 @@ SIDES = ArcChain(
 )
 
 
+def exactly(chain: ArcChain, per_turn: int) -> Spline:
+    """Lines and arcs as cubic pieces joined smoothly; every arc is cut into `per_turn` pieces a whole turn."""
+    path, (begin, _), sweeps = chain.path(), chain.headings(), chain.sweeps()
+    pieces = []
+    for i, (start, end) in enumerate(pairwise(path)):
+        if sweeps[i] == 0.0:
+            pieces.append(np.linspace(start, end, 4))
+            continue
+        count = int(np.ceil(abs(sweeps[i]) / (2.0 * np.pi) * per_turn))
+        step = sweeps[i] / count
+        points = bulge_points(
+            np.tile(start, (count + 1, 1)),
+            np.tile(end - start, (count + 1, 1)),
+            np.full(count + 1, chain.bulges[i]),
+            np.linspace(0.0, 1.0, count + 1),
+        )
+        angle = begin[i] + step * np.arange(count + 1)
+        arm = 4.0 / 3.0 * np.tan(0.25 * abs(step)) * chain.circles()[1][i]
+        tangent = arm * np.stack([np.cos(angle), np.sin(angle)], axis=1)
+        for k in range(count):
+            pieces.append(np.stack([points[k], points[k] + tangent[k], points[k + 1] - tangent[k + 1], points[k + 1]]))
+    control = np.concatenate([pieces[0][:1], *(piece[1:] for piece in pieces)])
+    if chain.closed:
+        control[-1] = control[0]
+    knots = np.concatenate([[0.0], np.repeat(np.arange(len(pieces) + 1.0), 3), [len(pieces)]])
+    return Spline(knots, control, 3, chain.closed, chain.closed)
+
+
+@pytest.mark.parametrize("true", [SLOT, SLOT.reversed(), ROUNDED, SIDES], ids=["slot", "mirrored", "rounded", "sides"])
+@pytest.mark.parametrize("error", [0.1, 0.01, 0.001])
+@pytest.mark.parametrize("per_turn", [16, 32])
+def test_an_exact_slot_is_four_and_a_rounded_rectangle_eight(true: ArcChain, error: float, per_turn: int) -> None:
+    chain = fewest_arcs(exactly(true, per_turn), error)
+    assert len(chain.bulges) == len(true.bulges)
+    assert (chain.bulges == 0.0).sum() == (true.bulges == 0.0).sum()
+    assert within(true, chain, 1.001 * error).inside
+    assert kinks(chain).max() < 1e-9
+
+
 @pytest.mark.parametrize("true", [SLOT, SLOT.reversed(), ROUNDED, SIDES], ids=["slot", "mirrored", "rounded", "sides"])
 @pytest.mark.parametrize("error", [0.1, 0.01])
 def test_lines_and_true_arcs_come_back_one_for_one(true: ArcChain, error: float) -> None:
@@ -133,6 +176,21 @@ def test_no_arc_is_so_slight_that_it_should_be_a_line() -> None:
         assert sagitta[bent].min() > 0.01 * 0.01, name
 
 
+@pytest.mark.parametrize("name", list(SHAPES))
+def test_bulges_survive_a_file(name: str, tmp_path: Path) -> None:
+    chain = fewest_arcs(made(name).moved(np.array([1e5, -2e5])), 0.01)
+    document = ezdxf.new("R2010")
+    rows = np.column_stack([chain.points, np.append(chain.bulges, np.zeros(len(chain.points) - len(chain.bulges)))])
+    document.modelspace().add_lwpolyline(rows, format="xyb", close=chain.closed)
+    document.saveas(tmp_path / "arcs.dxf")
+    polyline = ezdxf.readfile(tmp_path / "arcs.dxf").modelspace()[0]
+    read = np.array(polyline.get_points("xyb"))
+    back = ArcChain(read[:, :2], read[: len(chain.bulges), 2], bool(polyline.closed))
+    extent = np.ptp(chain.points, axis=0).max()
+    assert hausdorff(chain, back, 1e-10 * extent).certified <= 1e-9 * extent
+    assert kinks(back).max() < 1e-6
+
+
 def test_a_wobble_inside_the_chord_error_asks_for_no_more_arcs() -> None:
     rng = np.random.default_rng(5)
     spline = spline_through(*by_length(SHAPES["ellipse"][0], 2.0), True)
@@ -174,6 +232,14 @@ def test_a_spline_in_space_and_a_chord_error_that_is_no_length_are_refused() -> 
         fewest_arcs(Spline(np.repeat([0.0, 1.0], 4), np.eye(4, 3), 3), 0.1)
     with pytest.raises(GeometryError, match="chord error"):
         fewest_arcs(made("ellipse"), -0.1)
+
+
+def test_a_standstill_leaves_nothing_of_no_length() -> None:
+    control = np.array([[40.0, 40.0], [40.0, 40.0], [40.0, 0.0], [-40.0, 0.0], [40.0, 0.0], [40.0, 0.0], [0.0, 0.0]])
+    knots = np.array([0.0, 0.0, 0.0, 0.0, 0.1, 0.5, 0.8, 1.0, 1.0, 1.0, 1.0])
+    chain = fewest_arcs(Spline(knots, control, 3), 0.03)
+    assert chain.chord_lengths().min() > 1e-9
+    np.testing.assert_array_equal(chain.points[[0, -1]], control[[0, -1]])
 
 
 @settings(max_examples=25, deadline=None)

@@ -15,12 +15,13 @@ Trial = tuple[Chain, float]  # a chain to polish, and the share of the chord err
 Driver = Generator[Trial, Polished, Chain]
 
 FIRM = 0.985  # share of the chord error at which polishing stops
+NEAR = 0.999  # share of the chord error up to which samples may lie off
 DEFECT = 1e-9  # radians a joint may kink
 
 
 def fits(result: Polished, chord_error: float) -> bool:
     """Tell whether a chain is within the chord error and tangent continuous."""
-    return result.worst <= chord_error and result.defect < DEFECT
+    return result.worst <= NEAR * chord_error and result.defect < DEFECT
 
 
 def with_more(track: Track, result: Polished, chord_error: float, thorough: bool) -> Chain:

@@ -8,6 +8,7 @@ from geometry.arrays import FloatArray
 from geometry.bspline import Spline
 from geometry.economy.check import two_sided
 from geometry.economy.cuts import cut_at, sharp_nodes
+from geometry.economy.even_links import even_vertices
 from geometry.economy.gates import PER_LINK, Gates, Limits, place_gates
 from geometry.economy.links import Vertices, lay_free_links, lay_on_curve_links
 from geometry.economy.space_lines import fewest_space_vertices
@@ -73,7 +74,7 @@ def fewest_vertices(
         vertices = _within_turn(gates, track, tried)
         enough = not track.chained or len(vertices.point) > 2  # a loop must not fold to nothing
         if enough and _worst(gates, track, vertices, chord_error) <= chord_error:
-            return _polyline(gates, track, vertices)
+            return _polyline(gates, track, vertices, None if max_step or max_turn else tried)
     return spline.flatten(chord_error)
 
 
@@ -139,6 +140,13 @@ def _worst(gates: Gates, track: Track, vertices: Vertices, limit: float) -> floa
     return float(two_sided(track, path[:-1], path[1:], np.zeros(len(here)), s, group, limit, samples).max())
 
 
-def _polyline(gates: Gates, track: Track, vertices: Vertices) -> Polyline:
+def _polyline(gates: Gates, track: Track, vertices: Vertices, limits: Limits | None) -> Polyline:
+    """Return the polyline; with limits, pieces for which even shares take fewer vertices have those."""
     path = _path(gates, track, vertices)
+    if limits is not None:
+        piece = np.searchsorted(track.s[track.first], gates.s[vertices.gate], side="right") - 1
+        even = even_vertices(track, limits, np.bincount(piece, minlength=len(track.first)))
+        if even:
+            parts = [even[k] if k in even else path[:-1][piece == k] for k in range(len(track.first))]
+            path = np.concatenate([*parts, path[-1:]])
     return Polyline(track.to_xy(path[:-1] if track.chained else path), track.chained)
