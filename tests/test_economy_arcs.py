@@ -235,8 +235,10 @@ def test_a_spline_in_space_and_a_chord_error_that_is_no_length_are_refused() -> 
 
 
 def test_a_standstill_leaves_nothing_of_no_length() -> None:
-    control = np.array([[40.0, 40.0], [40.0, 40.0], [40.0, 0.0], [-40.0, 0.0], [40.0, 0.0], [40.0, 0.0], [0.0, 0.0]])
-    knots = np.array([0.0, 0.0, 0.0, 0.0, 0.1, 0.5, 0.8, 1.0, 1.0, 1.0, 1.0])
+    corners = [(1, 1), (1, 1), (1, 0), (-1, 0), (1, 0), (1, 0), (0, 0), (0, 1), (0, 0), (0, -1), (-1, 0)]
+    control = 40.0 * np.array(corners, dtype=np.float64)
+    inner = [0.05356552, 0.34843554, 0.43065513, 0.64417723, 0.68309814, 0.71440535, 0.83014564]
+    knots = np.concatenate([np.zeros(4), inner, np.ones(4)])
     chain = fewest_arcs(Spline(knots, control, 3), 0.03)
     assert chain.chord_lengths().min() > 1e-9
     np.testing.assert_array_equal(chain.points[[0, -1]], control[[0, -1]])
