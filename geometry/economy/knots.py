@@ -33,6 +33,7 @@ _WAYS = (
     ("even", 8.0),
     ("even", 11.0),
     ("thin", 4.0),
+    ("last", 4.0),
     ("last", 16.0),
     ("last", 0.0),
 )  # tried in turn until a piece is near enough and fair: equal spans, or knots laid for a finer chord error by a
@@ -88,7 +89,7 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
         if way == "even":
             tried, state = evenly(source, waiting, chord_error, int(amount))
         else:
-            tried, state = waiting.copy(), thinned(source.only(waiting), chord_error, amount)
+            tried, state = waiting.copy(), thinned(source.only(waiting), chord_error, amount, strict=way == "last")
         if state is None:
             continue
         part = source.only(tried)

@@ -213,12 +213,15 @@ def _apart(value: FloatArray, slot: IntArray, distance: int) -> BoolArray:
     return chosen[slot + distance]
 
 
-def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, rounds: int = 40) -> State:
+def remove(
+    source: Source, state: State, allowed: FloatArray, guard: Guard, strict: bool = False, rounds: int = 40
+) -> State:
     """Take out knots one here and one there, as long as the fit stays within what is allowed and fair.
 
     Every round removes the least significant knots, several spans apart, and puts back those near which the refit
     is over or less fair than the source; a knot put back is left alone until a close neighbour goes. Accepting and
-    refusing are local, so the number of rounds does not grow with the length of the profile.
+    refusing are local, so the number of rounds does not grow with the length of the profile; unless it is strict, a
+    little fairness may be lost on the way, for which no knot can be blamed.
     """
     frozen = np.zeros(len(state.inner), dtype=bool)
     verdict = guard.check(state.fit, state.u)
@@ -237,7 +240,7 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
         if not out.any():
             break
         tried = out.copy()
-        good = _without(source, state, out, allowed, guard, verdict)
+        good = _without(source, state, out, allowed, guard, verdict, strict)
         if good is None:
             frozen |= tried
             barren += 1
@@ -258,12 +261,13 @@ def remove(source: Source, state: State, allowed: FloatArray, guard: Guard, roun
 
 
 def _without(
-    source: Source, state: State, out: BoolArray, allowed: FloatArray, guard: Guard, base: Verdict
+    source: Source, state: State, out: BoolArray, allowed: FloatArray, guard: Guard, base: Verdict, strict: bool
 ) -> tuple[State, Verdict] | None:
     """Refit without some knots; `out` loses those that have to stay. None if all have to.
 
     Args:
         base: fairness of the state, which is let pass.
+        strict: whether a loss of fairness that no removed knot is near to is blamed on the nearest all the same.
 
     Returns:
         The new state and its fairness.
@@ -280,13 +284,25 @@ def _without(
         blamed = _blamed(inner, out, state.u[trial.ratio > 1.0])
         if not blamed.any():
             verdict = guard.check(trial.fit, trial.u, base)
-            blamed = _blamed(inner, out, state.u[verdict.where])
+            wrong = state.u[verdict.where]
+            blamed = _blamed(inner, out, wrong)
+            if strict and not blamed.any() and verdict.worse.any():
+                blamed = _nearest(inner, out, wrong)
             if not blamed.any():
                 return trial, verdict
         out[blamed] = False
         if not out.any():
             break
     return None
+
+
+def _nearest(inner: FloatArray, out: BoolArray, wrong: FloatArray) -> BoolArray:
+    """Return the knots of `out` that lie nearest to wrong places."""
+    taken = np.flatnonzero(out)
+    blamed = np.zeros(len(inner), dtype=bool)
+    between = 0.5 * (inner[taken][1:] + inner[taken][:-1])
+    blamed[taken[np.searchsorted(between, wrong)]] = True
+    return blamed
 
 
 def _blamed(inner: FloatArray, out: BoolArray, wrong: FloatArray, reach: int = _REACH) -> BoolArray:

@@ -45,8 +45,13 @@ def evenly(source: Source, pieces: BoolArray, chord_error: float, number: int) -
     return pieces, state
 
 
-def thinned(source: Source, chord_error: float, finer: float) -> State | None:
-    """Lay knots, finer than the chord error asks for by a factor (0: as close as the source's own), then thin them."""
+def thinned(source: Source, chord_error: float, finer: float, strict: bool) -> State | None:
+    """Lay knots and thin them.
+
+    Args:
+        finer: factor by which knots are laid finer than the chord error asks for; 0 lays them as close as the source's.
+        strict: whether thinning may lose no fairness at all.
+    """
     allowed = np.full(len(source.along), _AIM * chord_error)
     closest = 0.5 * source.lengths / source.spans
     guard = Guard(source, chord_error)
@@ -56,8 +61,7 @@ def thinned(source: Source, chord_error: float, finer: float) -> State | None:
         state = refit(source, Basis(source, uniform(source, source.spans)), source.along, source.step, allowed)
     if state is None:
         return None
-    state = remove(source, state, allowed, guard)
-    state = _mend(source, state, allowed, closest)
+    state = _mend(source, remove(source, state, allowed, guard, strict), allowed, closest)
     for _ in range(_RESPACED):
         again = respaced(source, state, allowed, guard)
         if again is None or again.ratio.max() > 1.0:
