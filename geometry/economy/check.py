@@ -13,6 +13,9 @@ from geometry.economy.track import ComplexArray, Track
 __all__ = ["arc_samples", "distance_to_arcs", "nearby_distance", "two_sided"]
 
 
+FEW = 8  # samples up to which one step of Newton's method does
+
+
 def two_sided(
     track: Track,
     start: ComplexArray,
@@ -52,7 +55,8 @@ def two_sided(
         piece = np.searchsorted(track.s[track.first], 0.5 * (s[:, 0] + s[:, 1]), side="right") - 1
         low = np.maximum(low, track.s[track.first][piece][:, None])
         high = np.minimum(high, track.s[track.last][piece][:, None])
-    to_curve = nearby_distance(track, points, guess, low, high).max(axis=1)
+    steps = 2 if samples > FEW else 1  # few samples are asked for where there are many short lines; feet are near then
+    to_curve = nearby_distance(track, points, guess, low, high, steps).max(axis=1)
     to_chain = to_chain.max(axis=1)
     doubt = np.flatnonzero(to_curve > limit)  # a wrong foot, may be: look again from the nearest of many places
     if doubt.size:

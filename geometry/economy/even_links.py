@@ -14,7 +14,7 @@ from geometry.economy.track import ComplexArray, Track
 __all__ = ["even_vertices"]
 
 MARGINS = (1.0, 1.002)  # links tried, in multiples of the demand
-MANY = 5_000  # links over which the check takes fewer samples of each
+MANY = 5_000  # links on a piece from which the greedy ones are as good
 
 
 def even_vertices(track: Track, limits: Limits, present: IntArray) -> dict[int, ComplexArray]:
@@ -25,6 +25,8 @@ def even_vertices(track: Track, limits: Limits, present: IntArray) -> dict[int, 
         limits: the chord error; without caps on step and turn.
         present: links laid so far on every piece, shape (p,).
     """
+    if present.min() > MANY:
+        return {}
     running = track.integral(_density(track.curvature, limits))
     demand = running[track.last] - running[track.first]
     out: dict[int, ComplexArray] = {}
@@ -33,7 +35,7 @@ def even_vertices(track: Track, limits: Limits, present: IntArray) -> dict[int, 
         tried = [
             piece
             for piece in np.flatnonzero(counts < present).tolist()
-            if piece not in out and _may_fit(track, piece, limits)
+            if piece not in out and counts[piece] <= MANY and _may_fit(track, piece, limits)
         ]
         if not tried:
             continue
@@ -42,8 +44,7 @@ def even_vertices(track: Track, limits: Limits, present: IntArray) -> dict[int, 
         end = np.concatenate([points[1:] for points, _ in laid])
         s = np.concatenate([np.stack([along[:-1], along[1:]], axis=1) for _, along in laid])
         group = np.repeat(np.arange(len(laid)), [len(along) - 1 for _, along in laid])
-        samples = 16 if len(start) < MANY else 4
-        errors = two_sided(track, start, end, np.zeros(len(start)), s, group, limits.chord_error, samples)
+        errors = two_sided(track, start, end, np.zeros(len(start)), s, group, limits.chord_error)
         for index, (piece, (points, _)) in enumerate(zip(tried, laid, strict=True)):
             if errors[group == index].max() <= limits.chord_error:
                 out[piece] = points[:-1]

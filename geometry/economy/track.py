@@ -22,6 +22,7 @@ ComplexArray = NDArray[np.complex128]
 CELLS = 8  # least table cells a knot span
 CELL_TURN = 0.1  # radians a table cell may turn before its span is cut finer
 CELL_QUICKENING = 0.5  # change of the logarithm of speed in a cell before its span is cut finer
+PORTION = 1 << 14  # values worked on at once, so that they stay in the cache
 MOST_CELLS = 4096  # most table cells a knot span
 SMOOTH_TURN = 1e-4  # radians: a knot of full multiplicity that turns less is no corner
 
@@ -112,6 +113,20 @@ class Track:
         near = self.angle[node]
         angle = near + _argument(slope * np.exp(-1j * near)) + winding * self.turn
         return point, angle, _curvature(slope, bend)
+
+    def headings(self, s: FloatArray) -> tuple[ComplexArray, ComplexArray, FloatArray]:
+        """Return points, unit tangents and curvature at arc lengths, each of shape (n,); in portions, for many."""
+        point, heading = np.empty(len(s), dtype=np.complex128), np.empty(len(s), dtype=np.complex128)
+        bend = np.empty(len(s))
+        for start in range(0, len(s), PORTION):
+            part = slice(start, start + PORTION)
+            node, t, _ = self.locate(s[part])
+            point[part], slope, second = _derivatives(self.power[self.span[node]], t)
+            speed = np.abs(slope)
+            still = speed < 1e-9 * speed.max(initial=0.0)
+            heading[part] = np.where(still, np.exp(1j * self.angle[node]), slope / np.where(still, 1.0, speed))
+            bend[part] = _curvature(slope, second)
+        return point, heading, bend
 
     def motion(self, s: FloatArray) -> tuple[ComplexArray, ComplexArray, ComplexArray]:
         """Return points and their first two derivatives by the arc length of the table, each the shape of s."""
