@@ -16,7 +16,7 @@ _HOPEFUL = 4.0  # ratio up to which levelling may still bring a fit within the c
 _BENT = (0.01, 0.03)  # pull of the source's curvature where a thinned fit is not fair
 _RESPACED = 2  # times that the knots are laid anew after thinning
 _DENSER = 2  # times that knots are laid a third more densely in pieces that start out unfair
-_EXTRA = 1.25  # knots to begin with, over what the spacing field asks for
+_EXTRA = 1.1  # knots to begin with, over what the spacing field asks for
 
 
 def evenly(source: Source, pieces: BoolArray, chord_error: float, number: int) -> tuple[BoolArray, State | None]:
