@@ -110,6 +110,15 @@ def test_where_the_chord_error_has_no_room_the_tight_arcs_are_named() -> None:
     assert others.min() >= 60.0
 
 
+@pytest.mark.parametrize("bow", [0.4, -0.4])
+def test_a_side_bowed_inside_the_chord_error_is_a_line_and_no_arc_of_absurd_radius(bow: float) -> None:
+    bulges = ROUNDED.bulges.copy()
+    bulges[0] = 2.0 * bow * 0.05 / 80.0  # sagitta 0.4 of the chord error: a radius of 40 000
+    chain = fewest_arcs(traced(ArcChain(ROUNDED.points, bulges, True)), 0.05)
+    assert len(chain.bulges) == 8
+    assert radii(chain).max() < 20.0
+
+
 def test_limits_that_bind_nothing_change_nothing() -> None:
     for name in ("lissajous", "slot", "clothoid"):
         free = fewest_arcs(made(name), 0.1)

@@ -20,6 +20,7 @@ GROWTHS = 5  # times that joints are added round a blended bend
 WIDER = (0, 1, 2)  # arcs on either side that are tried to be merged into a blended bend
 DENSER = (1.0, 1.4, 2.0, 3.0)  # short arcs in a flat stretch, in multiples of what should do
 FILL = 0.8  # share of the chord error that this reckons with
+ABSURD = 100.0  # radius, in extents of the curve, that no one would draw
 WILD = 10.0  # chord errors over which adding joints does not help
 
 Steps = Generator[Trial, Polished, Polished]
@@ -75,8 +76,13 @@ def within_radii(track: Track, accepted: Polished, chord_error: float, radii: Ra
 
     A bend that is too tight is laid as one arc of the least radius, its neighbours and more joints beside it taking up
     the difference; a stretch too flat becomes a line, one arc of the largest radius, or lines joined by short arcs of
-    the largest radius. What does not fit in the chord error that way stays as it was.
+    the largest radius. What does not fit in the chord error that way stays as it was. Without a largest radius, arcs
+    over a hundred times as large as the whole curve become lines where those fit.
     """
+    if not np.isfinite(radii.most):
+        absurd = replace(radii, most=ABSURD * track.extent)
+        line = [_one_line(track, chord_error)]
+        accepted = yield from _treated(track, accepted, chord_error, absurd, line, absurd.flat, _flat_runs)
     for _ in range(3):  # what one limit asks for may touch the other
         before = _missed(accepted.chain, radii)
         if before == 0:

@@ -79,6 +79,12 @@ class Track:
         return self.points(self.s)
 
     @property
+    def extent(self) -> float:
+        """Longer side of the box round the nodes."""
+        points = self.node_points
+        return float(max(np.ptp(points.real), np.ptp(points.imag)))
+
+    @property
     def cells(self) -> BoolArray:
         """Whether a cell (not a gap) lies behind every node but the last, shape (n - 1,)."""
         inside = np.ones(len(self.s) - 1, dtype=np.bool_)
