@@ -61,7 +61,9 @@ def supports(version: str, kind: str) -> bool:
     return version.upper() != "R12" or kind in {"POLYLINE", "LINE", "ARC", "CIRCLE"}
 
 
-def replace(drawing: Drawing, profile: Profile, curve: AnyCurve, version: str | None = None) -> Written:
+def replace(
+    drawing: Drawing, profile: Profile, curve: AnyCurve, version: str | None = None, decimals: int | None = None
+) -> Written:
     """Put a curve in the place of a profile.
 
     A spline becomes one SPLINE; an arc chain one LWPOLYLINE with bulges, or a CIRCLE when it is a whole circle; a
@@ -73,6 +75,8 @@ def replace(drawing: Drawing, profile: Profile, curve: AnyCurve, version: str | 
         drawing, profile: as read; the profile is used up by this.
         curve: in the frame of the profile, drawing units, its dimension that of the profile.
         version: DXF version it will be saved in; None for that of the drawing.
+        decimals: places that `curve` was rounded to; centre and radius of a CIRCLE, which are computed from it, are
+            rounded to as many. None leaves them in full.
 
     Raises:
         VersionError: the version has no such entity.
@@ -102,7 +106,7 @@ def replace(drawing: Drawing, profile: Profile, curve: AnyCurve, version: str | 
             set[str](),
         )
     else:
-        entity, kept = _add_planar(space, curve, profile.frame, first, attributes, version)
+        entity, kept = _add_planar(space, curve, profile.frame, first, attributes, version, decimals)
     lost = _lost(first, kept)
     space.entity_space.pop()  # it was added as the last one
     index = drawing.order[profile.id]
@@ -184,7 +188,13 @@ def _add_spline(space: Any, curve: Spline, frame: Frame, attributes: dict[str, A
 
 
 def _add_planar(
-    space: Any, curve: Polyline | ArcChain, frame: Frame, source: Any, attributes: dict[str, Any], version: str
+    space: Any,
+    curve: Polyline | ArcChain,
+    frame: Frame,
+    source: Any,
+    attributes: dict[str, Any],
+    version: str,
+    decimals: int | None,
 ) -> tuple[Any, set[str]]:
     """Add a planar polyline or circle in the source's own coordinate system; return which properties it keeps."""
     below = frame.level and source.dxf.is_supported("extrusion") and source.dxf.get("extrusion", (0, 0, 1))[2] < 0.0
@@ -197,7 +207,9 @@ def _add_planar(
         attributes["thickness"] = source.dxf.thickness
     circle = circle_of(curve) if isinstance(curve, ArcChain) else None
     if circle is not None:
-        (x, y), radius = circle
+        x, y, radius = (
+            value if decimals is None else round(value, decimals) for value in (*circle[0].tolist(), circle[1])
+        )
         return space.add_circle((mirror * float(x), float(y), elevation), radius, dxfattribs=attributes), kept
     width = _constant_width(source)
     flags = (_CLOSED if curve.closed else 0) | (_flags(source) & _CONTINUOUS_LINETYPE)

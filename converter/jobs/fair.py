@@ -116,7 +116,7 @@ def _fair_profile(
         return _failed(profile, need, "no fair curve keeps the tolerance; state a larger one")
     circle = result.faired.circle is not None
     curve = rounded(result.curve.moved(origin), circle and form == "arcs", settings.decimals)
-    written = replace(drawing, profile, curve, version)
+    written = replace(drawing, profile, curve, version, settings.decimals)
     record = _record(profile, need, written, result, origin)
     record.least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
     record.within_budget = reached
