@@ -8,9 +8,12 @@ from geometry.corners import find_corners
 from geometry.deviation import hausdorff
 from geometry.economy.arcs import fewest_arcs
 from geometry.fairing import fair_outline
+from geometry.fairing.arcs import _is_staircase
 from geometry.fairing.easing import eased
+from geometry.fairing.fair import _attempt, _spline
 from geometry.fairing.merging import merged_stretches
 from geometry.fairing.tangent_chain import Ends, TangentChain, fit_chain
+from geometry.fairing.trace import Trace
 from geometry.fairness import fairness
 from geometry.polyline import Polyline
 from tests.tracing import noisy, staircase, turned
@@ -63,7 +66,7 @@ SHAPE = TangentChain(
 
 
 def both_ends():
-    return Ends(pins=(complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
+    return Ends((complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
 
 
 def test_a_chain_is_found_again_from_exact_points():
@@ -95,7 +98,7 @@ def test_standard_errors_of_curvature_are_those_of_repeated_noise():
 
 def test_pins_and_closing_are_kept():
     points, owner = chain_points(SHAPE)
-    ends = Ends(pins=(complex(points[0]) + 0.2j, complex(points[-1]) - 0.1))
+    ends = Ends((complex(points[0]) + 0.2j, complex(points[-1]) - 0.1))
     fitted = fit_chain(SHAPE, owner, points, ends, 1e-6, 20, near=False)
     joints, _ = fitted.chain.joints()
     assert abs(joints[0] - ends.pins[0]) < 0.01
@@ -119,7 +122,7 @@ def test_stretches_of_one_circle_are_merged_and_pieces_kept_apart():
 
 def test_an_eased_chain_keeps_its_ends_and_lies_beside_the_sharp_one():
     points, owner = chain_points(SHAPE)
-    ends = Ends(pins=(complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
+    ends = Ends((complex(SHAPE.joints()[0][0]), complex(SHAPE.joints()[0][-1])))
     fitted = fit_chain(SHAPE, owner, points, ends, 1e-9, 20, near=True)
     curve, feet = eased(fitted, points, ends, 1e-9, 1.0)
     assert abs(curve.points[0] - ends.pins[0]) < 1e-9
@@ -164,6 +167,45 @@ def test_a_rounded_rectangle_comes_back_as_four_lines_and_four_arcs(kind):
     assert shaped(rounded(130.0, 110.0, 15.0), kind, 8, 8, 15.0) >= 4
 
 
+@pytest.mark.parametrize(("kind", "radius"), [("clean", 6.0), ("points", 10.0), ("raster", 10.0)])
+def test_small_fillets_keep_their_radius_wherever_the_outline_begins(kind, radius):
+    true = rounded(100.0, 60.0, radius)
+    found = 0
+    for turn, degrees in enumerate((8.0, 20.0, 33.0)):
+        if kind == "clean":
+            shape = turned(true.flatten(1e-4).points, degrees)
+            outline, tolerance = Polyline(noisy(shape, 0.5, 0.002, turn), True), 1.0
+        else:
+            outline, tolerance = traced(true, degrees, kind)
+        for share in (0.0, 0.3, 0.7):
+            rolled = Polyline(np.roll(outline.points, int(share * len(outline.points)), axis=0), True)
+            faired = fair_outline(rolled, find_corners(rolled, tolerance), tolerance)
+            after = fairness(faired.spline, tolerance)
+            found += after.curvature_extrema == 8 and abs(after.least_radius / radius - 1.0) < 0.12
+    assert found >= 6
+
+
+def test_chains_are_held_against_the_trace_and_not_against_themselves():
+    outline, tolerance = traced(slot(95.0, 21.0), 17.0, "raster")
+    scaled = outline.points / tolerance
+    trace = Trace(np.vstack([scaled, scaled[:1]]), True)
+    fit, nodes, check = _attempt(trace, np.zeros(0), np.zeros((0, 2)), 3)
+    assert fit.sampled.aims is not None
+    assert not np.array_equal(fit.sampled.aims, fit.sampled.points)
+    far = hausdorff(_spline(fit, nodes), Polyline(scaled, True), 0.01)
+    assert check.worst == pytest.approx(far.measured, abs=0.1)
+
+
+def test_a_dense_smooth_outline_is_no_staircase():
+    angle = 2.0 * np.pi * np.arange(400) / 400
+    smooth = np.stack([80.0 * np.cos(angle), 45.0 * np.sin(angle)], axis=1)
+    assert not _is_staircase(Trace(np.vstack([smooth, smooth[:1]]), True))
+    steps = staircase(smooth)
+    for degrees in (0.0, 30.0):
+        path = turned(np.vstack([steps, steps[:1]]), degrees)
+        assert _is_staircase(Trace(path, True))
+
+
 def test_a_side_with_a_rounded_end_between_corners():
     """Half of a slot, cut off square: two corners and one smooth piece of line, arc, line."""
     points = np.array([[-60.0, -15.0], [30.0, -15.0], [30.0, 15.0], [-60.0, 15.0]])
@@ -177,13 +219,13 @@ def test_a_side_with_a_rounded_end_between_corners():
     assert after.least_radius == pytest.approx(15.0, rel=0.06)
 
 
-@pytest.mark.parametrize("kind", ["raster", "points"])
+@pytest.mark.parametrize("kind", ["raster", "points", "clean"])
 def test_an_ellipse_is_not_made_of_arcs(kind):
     angle = 2.0 * np.pi * np.arange(4000) / 4000
     outline = np.stack([80.0 * np.cos(angle), 45.0 * np.sin(angle)], axis=1)
     place = turned(outline, 17.0) + np.array([0.3, 0.6])
-    trace = staircase(place) if kind == "raster" else noisy(place, 2.0, 0.15, 4)
-    tolerance = 1.0 if kind == "raster" else 0.7
+    made = {"raster": staircase(place), "points": noisy(place, 2.0, 0.15, 4), "clean": place[::8]}
+    trace, tolerance = made[kind], 0.7 if kind == "points" else 1.0
     faired = fair_outline(Polyline(trace, True), find_corners(Polyline(trace, True), tolerance), tolerance)
     along = np.linspace(0.0, 1.0, 401)[:-1]
     knots = faired.spline.knots

@@ -56,8 +56,13 @@ def test_least_numbers_of_a_circle_are_those_of_the_sagitta():
     exact = np.pi / np.arccos(1.0 - error / RADIUS)
     assert least_of(RING, None, error, Writing("lines", on_curve=True)) == pytest.approx(exact, rel=1e-4)
     assert least_of(RING, None, error, Writing("lines")) == pytest.approx(exact / np.sqrt(2.0), rel=1e-4)
-    assert least_of(RING, None, error, Writing("spline")) is None
     assert least_of(RING, None, error, Writing("lines", max_step=1.0)) is None
+
+
+def test_the_yardstick_of_splines_is_near_what_is_written():
+    found = search(rounded_outline()).best(0.1, Writing("spline"))
+    least = least_of(found.faired.spline, None, found.chord_error, Writing("spline"))
+    assert 0.5 < counts_of(found.curve).entities / least < 2.0
 
 
 def test_counts_are_what_the_controller_sees():

@@ -30,7 +30,7 @@ class ChoiceRecord:
     Attributes:
         form: spline, arcs or lines.
         entities: control points, arcs and lines, or vertices.
-        least: theoretical least number of them; None for splines, which have no such formula.
+        least: theoretical least number of them, for splines a yardstick; None where no formula applies.
         chord_error: share of the tolerance that was spent on it, drawing units.
         certified: proven distance to the given outline.
         within_tolerance: whether that keeps the tolerance.

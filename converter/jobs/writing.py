@@ -153,15 +153,17 @@ def least_of(
 ) -> float | None:
     """Return the theoretical least number of entities for a fair curve, a chord error and a form.
 
-    Of arcs and lines, and of vertices, by the asymptotic formulas of `geometry.economy.least`; None for splines, for
-    which there is no such formula, and where limits on steps and turns ask for more than the chord error does.
+    By the asymptotic formulas of `geometry.economy.least`; for splines that is a yardstick and no bound. None for
+    splines in space, and where limits on steps and turns ask for more than the chord error does.
     """
-    if writing.form == "spline" or chord_error <= 0.0:
+    if chord_error <= 0.0:
         return None
     if writing.form == "arcs" and circle is not None:
         return 1.0
-    from geometry.economy.least import least_arcs, least_vertices
+    from geometry.economy.least import least_arcs, least_control_points, least_vertices
 
+    if writing.form == "spline":
+        return least_control_points(spline, chord_error, spline.degree) if spline.dimension == 2 else None
     if writing.form == "arcs":
         return least_arcs(spline, chord_error)
     if writing.max_step is not None or writing.max_turn is not None:

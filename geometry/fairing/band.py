@@ -151,7 +151,7 @@ def repair(trace: Trace, fit: Fit, nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]
         straightness = np.where(soft, 0.0, straightness)
         old = fit.sampled
         sampled = replace(old, dead=dead)
-        system = System(layout, old.points, sampled.live, nodes.pins)
+        system = System(layout, old.targets, sampled.live, nodes.pins)
         fit = Fit(sampled, system.solve(stiffness, None, straightness), stiffness, straightness)
         check = check_band(trace, fit, nodes)
         if check.worst < best[2].worst:

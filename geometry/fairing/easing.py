@@ -71,15 +71,16 @@ def _ease(chain: TangentChain, ends: Ends, knot: float) -> tuple[Eased, FloatArr
     count = max(2, int(np.ceil(stops[-1] / _STEP)) + 1)
     along = np.linspace(0.0, stops[-1], count)
     middle = 0.5 * (along[1:] + along[:-1])
-    heading = _heading(chain, headings, stops, along, ends.closed, knot)
-    direction, between = np.exp(1j * heading), np.exp(1j * _heading(chain, headings, stops, middle, ends.closed, knot))
+    closed = ends.pins is None
+    heading = _heading(chain, headings, stops, along, closed, knot)
+    direction, between = np.exp(1j * heading), np.exp(1j * _heading(chain, headings, stops, middle, closed, knot))
     step = along[1] - along[0]
     run = np.cumsum((direction[:-1] + 4.0 * between + direction[1:]) * (step / 6.0))  # Simpson's rule
     points = joints[0] + np.concatenate([[0.0], run])
     share = along / stops[-1]
-    if ends.closed:
+    if ends.pins is None:
         points = points - (points[-1] - points[0]) * share
-    elif ends.pins is not None:
+    else:
         first, last = ends.pins
         points = points + (first - points[0]) * (1.0 - share) + (last - points[-1]) * share
     segment = np.clip(np.searchsorted(stops, along, side="right") - 1, 0, len(chain) - 1)
@@ -99,6 +100,7 @@ def _heading(
     width = np.minimum(np.clip(width, _NARROWEST * knot, _WIDEST * knot), room)
     for k in range(len(chain) if closed else len(chain) - 1):
         for centre in (stops[k + 1], 0.0) if k == len(chain) - 1 else (stops[k + 1],):
-            away = np.maximum(0.5 - np.abs(along - centre) / width[k], 0.0)
-            out = out + jump[k] * width[k] * away**3 * (1.0 - 0.5 * away)
+            near = slice(*np.searchsorted(along, [centre - 0.5 * width[k], centre + 0.5 * width[k]]))
+            away = np.maximum(0.5 - np.abs(along[near] - centre) / width[k], 0.0)
+            out[near] += jump[k] * width[k] * away**3 * (1.0 - 0.5 * away)
     return out

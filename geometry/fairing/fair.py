@@ -8,7 +8,7 @@ from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, join
 from geometry.circle import circle_spline, whole_circle
 from geometry.corners import Corners
-from geometry.fairing.arcs import drawn_as_chains
+from geometry.fairing.arcs import Drawn, recognised, with_chains
 from geometry.fairing.band import CORNER_SEARCH, LIMIT, BandCheck, Nodes, repair
 from geometry.fairing.ends import corner_points
 from geometry.fairing.layout import Layout
@@ -141,11 +141,30 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
     nodes = _settled(trace, fit, nodes)
     again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
     fit = relax(again, _carried(fit, again.layout), nodes.pins, straightness_of(again, straight))
-    chained = drawn_as_chains(trace, fit, nodes.pins)
-    done = repair(trace, remove_lobes(chained, nodes.pins), nodes)
-    if chained is fit or done[2].worst <= LIMIT:
-        return done
-    return repair(trace, remove_lobes(fit, nodes.pins), nodes)
+    return _repaired(trace, remove_lobes(fit, nodes.pins), recognised(trace, fit, nodes.pins), nodes)
+
+
+def _repaired(trace: Trace, fit: Fit, drawn: list[Drawn], nodes: Nodes) -> tuple[Fit, Nodes, BandCheck]:
+    """Hold a fit in the band, with the pieces that are lines and arcs drawn as such where that does not break it.
+
+    A chain runs between the corners that it was found with: one whose corner moves, or that leaves the band, is given
+    up, and the rest is held in the band again.
+    """
+    while True:
+        done = repair(trace, with_chains(fit, drawn, nodes.pins), nodes)
+        lost = _given_up(fit, drawn, nodes, done)
+        if not lost:
+            return done
+        drawn = [one for one in drawn if one.piece not in lost]
+
+
+def _given_up(fit: Fit, drawn: list[Drawn], nodes: Nodes, done: tuple[Fit, Nodes, BandCheck]) -> set[int]:
+    layout, check = fit.sampled.layout, done[2]
+    curve, trace = np.flatnonzero((check.curve > LIMIT).any(axis=1)), check.trace_interval[check.trace > LIMIT]
+    lost = set(layout.piece[np.concatenate([curve, trace])].tolist())
+    if nodes.pins is not None and done[1].pins is not None:
+        lost |= set(np.flatnonzero((nodes.pins != done[1].pins).any(axis=(1, 2))).tolist())
+    return lost & {one.piece for one in drawn}
 
 
 def _nodes(trace: Trace, own: FloatArray, found: FloatArray, layout: Layout, coefficients: FloatArray) -> Nodes:

@@ -80,6 +80,7 @@ class _Flattening:
         start, stop = _small_lobes(self.layout, self.curvature, self.points)
         length = np.zeros(len(self.layout))
         owner, member, _ = ragged_ranges(start, stop)
+        member = np.mod(member, len(self.layout))
         length[member] = np.maximum(1.0, _STRAIGHT * (stop - start)[owner] * self.layout.h[member])
         chosen = (length > 0.0) & ~frozen
         self.straightness = np.where(chosen, np.maximum(_STRAIGHTER * self.straightness, length), self.straightness)
@@ -121,9 +122,14 @@ class _Flattening:
 
 
 def _small_lobes(layout: Layout, curvature: FloatArray, points: FloatArray) -> tuple[IntArray, IntArray]:
-    """Return [start, stop) of the small lobes that have a neighbour lobe in their piece, in intervals."""
+    """Return [start, stop) of the small lobes that have a neighbour lobe in their piece, in intervals.
+
+    On a loop they may begin or end beyond the last interval.
+    """
     curvature = curvature.copy()
     curvature[np.abs(curvature) < _FLAT] = 0.0
+    shift = _change_of_sign(curvature) if layout.periodic else 0  # a lobe through the seam is one lobe
+    curvature, points = np.roll(curvature, -shift), np.roll(points, -shift, axis=0)
     start, stop = _runs(layout, np.sign(curvature))
     chord = points[stop - 1] - points[start]
     chord = chord / np.maximum(np.hypot(chord[:, 0], chord[:, 1]), 1e-9)[:, None]
@@ -137,7 +143,15 @@ def _small_lobes(layout: Layout, curvature: FloatArray, points: FloatArray) -> t
         same = pieces[1:] == pieces[:-1]
         neighbour = np.concatenate([same, [False]]) | np.concatenate([[False], same])
     small = neighbour & (height < _HEIGHT)
-    return start[small], stop[small]
+    return start[small] + shift, stop[small] + shift
+
+
+def _change_of_sign(curvature: FloatArray) -> int:
+    """Return an interval of a loop where curvature begins that has another sign than the one before, 0 for none."""
+    bent = np.flatnonzero(curvature)
+    signs = np.sign(curvature[bent])
+    changed = np.flatnonzero(signs != np.roll(signs, 1))
+    return int(bent[changed[0]]) if len(changed) else 0
 
 
 def _covered(layout: Layout, start: IntArray, stop: IntArray) -> BoolArray:
@@ -145,8 +159,8 @@ def _covered(layout: Layout, start: IntArray, stop: IntArray) -> BoolArray:
     size = len(layout)
     change = np.zeros(3 * size + 1)
     if layout.periodic:
-        np.add.at(change, start + size, 1.0)
-        np.add.at(change, stop + size, -1.0)
+        np.add.at(change, np.maximum(start, -size) + size, 1.0)
+        np.add.at(change, np.minimum(stop, 2 * size) + size, -1.0)
         inside = (np.cumsum(change[:-1]) > 0.5).reshape(3, size)
         return np.asarray(inside.any(axis=0))
     piece = layout.piece[(start + stop) // 2]

@@ -28,6 +28,7 @@ class Sampled:
         own_nodes, fit_nodes: the map from the trace's arc length to the parameter counted through all pieces.
         dead: zones without weight at both ends of each piece, shape (p, 2).
         tread: longest tread of a staircase beside each interval, shape (m,).
+        aims: what the curve shall follow in place of the trace, shape (m, q, d); None for the trace itself.
     """
 
     layout: Layout
@@ -38,6 +39,12 @@ class Sampled:
     fit_nodes: FloatArray
     dead: FloatArray
     tread: FloatArray
+    aims: FloatArray | None = None
+
+    @property
+    def targets(self) -> FloatArray:
+        """Points that the curve is fitted to, shape (m, q, d)."""
+        return self.points if self.aims is None else self.aims
 
     @cached_property
     def live(self) -> BoolArray:

@@ -65,34 +65,29 @@ class TangentChain:
 
 @dataclass(frozen=True, slots=True)
 class Ends:
-    """What holds a chain: it closes, or it runs between two points, or neither."""
+    """What holds a chain: it runs between two points, or it closes."""
 
-    closed: bool = False
     pins: tuple[complex, complex] | None = None
 
     @property
     def held(self) -> int:
         """Number of conditions."""
-        return 3 if self.closed else 4 if self.pins is not None else 0
+        return 3 if self.pins is None else 4
 
     def misses(self, joints: ComplexArray, headings: FloatArray) -> FloatArray:
         """Return by how much the conditions are missed, shape (held,)."""
-        if self.closed:
+        if self.pins is None:
             gap, turn = joints[-1] - joints[0], headings[-1] - headings[0]
             return np.array([gap.real, gap.imag, _HEADING * (turn - 2.0 * np.pi * np.round(turn / (2.0 * np.pi)))])
-        if self.pins is not None:
-            first, last = joints[0] - self.pins[0], joints[-1] - self.pins[1]
-            return np.array([first.real, first.imag, last.real, last.imag])
-        return np.zeros(0)
+        first, last = joints[0] - self.pins[0], joints[-1] - self.pins[1]
+        return np.array([first.real, first.imag, last.real, last.imag])
 
     def slopes(self, by_joint: ComplexArray, by_heading: FloatArray) -> FloatArray:
         """Return the derivatives of `misses` by the numbers of a chain, shape (held, 3 + 2 k)."""
-        if self.closed:
+        if self.pins is None:
             gap, turn = by_joint[-1] - by_joint[0], by_heading[-1] - by_heading[0]
             return np.array([gap.real, gap.imag, _HEADING * turn])
-        if self.pins is not None:
-            return np.array([by_joint[0].real, by_joint[0].imag, by_joint[-1].real, by_joint[-1].imag])
-        return np.zeros((0, by_heading.shape[1]))
+        return np.array([by_joint[0].real, by_joint[0].imag, by_joint[-1].real, by_joint[-1].imag])
 
 
 @dataclass(frozen=True, slots=True)
@@ -104,7 +99,8 @@ class Fitted:
         segment: segment of every point, not decreasing, shape (n,).
         offsets: distance of every point, right of travel positive, shape (n,).
         miss: largest condition missed at the ends.
-        spread: standard error of the curvatures for points that scatter by 1, infinite for lines, shape (k,).
+        spread: standard error of the curvatures for points that scatter by 1, to first order before the last step,
+            infinite for lines, shape (k,).
     """
 
     chain: TangentChain
@@ -153,7 +149,7 @@ def fit_chain(
         near: whether the chain begins near the answer, its ends held.
 
     Returns:
-        None where no step can be made.
+        The best chain that the steps led to; None where the numbers of the chain depend on one another.
     """
     state = _state(chain, segment, points, ends)
     damping = 1e-3
