@@ -12,6 +12,7 @@ __all__ = ["biarc_chain"]
 ROUNDS = 40
 SAMPLES = 16
 MOST_SWEEP = 2.0  # radians an arc may turn
+SHORTEST = 1e-9  # share of the track down to which stretches are halved
 
 
 def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> Chain:
@@ -19,7 +20,8 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
 
     Every stretch between two joints gets two arcs that meet the curve's points and tangents at both ends and each
     other; a stretch that is over the chord error, or turns too far, is halved. The error of a stretch falls with the
-    cube of its length, so this ends soon; stretches under a billionth of the track are left as they are.
+    cube of its length, so this ends soon; stretches under a billionth of the track, as at a cusp, become lines where
+    their arcs turn too far.
 
     Args:
         track: the curve.
@@ -40,7 +42,7 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
         error = two_sided(track, start, end, bulges, spans, np.zeros(len(bulges), dtype=np.intp), chord_error, SAMPLES)
         wild = (np.abs(sweep).max(axis=1) > MOST_SWEEP) | (np.abs(sweep.sum(axis=1) - np.diff(angle)) > 1e-6)
         over = wild | ~(error.reshape(-1, 2).max(axis=1) <= chord_error)
-        over &= np.diff(s) > 1e-9 * track.s[-1]
+        over &= np.diff(s) > SHORTEST * track.s[-1]
         if not over.any():
             break
         s = np.insert(s, 1 + np.flatnonzero(over), half[over])
@@ -48,9 +50,10 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
     turning = angle[:-1] + sweep[:, 0]
     angles = np.append(_interleaved(angle[:-1], turning), angle[-1])
     along = np.append(_interleaved(s[:-1], half), s[-1])
+    held = np.repeat(np.where(wild, 0.0, np.nan), 2)
     if track.closed:
         joints, angles, along = joints[:-1], angles[:-1], along[:-1]
-    return Chain(piece, joints, angles, along, np.full(2 * len(half), np.nan), track.closed)
+    return Chain(piece, joints, angles, along, held, track.closed)
 
 
 def _middles(joint: ComplexArray, angle: FloatArray) -> tuple[ComplexArray, FloatArray]:

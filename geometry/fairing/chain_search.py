@@ -22,7 +22,7 @@ _WORSE = {True: 1.3, False: 3.0}  # chi-square lost for every degree of freedom 
 _MOST_LOST = {True: 0.15, False: 0.4}  # of the fair curve's sum of squares, whatever is saved
 _LEAST_SCATTER, _STEPPED_SCATTER = 0.03, 0.2  # sides along a raster's lines show none, its arcs do
 _ALIKE, _SHORT = 2.5, 10.0  # standard errors; tolerances
-_HOPELESS, _PROMISING, _ROUNDS, _OPTIONS = 30.0, 5.0, 12, 5
+_HOPELESS, _PROMISING, _TRIALS, _OPTIONS = 30.0, 5.0, 20, 5
 _ROUGHLY, _CLOSELY, _EXACTLY = (6, 1.0), (12, 0.1), (20, 0.02)  # rounds, and the gain in chi-square that ends them
 _MISS = 0.01
 
@@ -121,8 +121,10 @@ def simplest_chain(piece: Piece, starts: IntArray) -> tuple[Piece, Fitted] | Non
     score = piece.judged(best)
     if score > fair - _PROMISING:
         return None
-    for _ in range(_ROUNDS):
+    trials = 0
+    while trials < _TRIALS:
         for chain, segment in _simpler(piece, best):
+            trials += 1
             trial = piece.fit(chain, segment, *_CLOSELY, near=True)
             if trial is not None and piece.judged(trial) < score - 1e-6:
                 best, score = trial, piece.judged(trial)
