@@ -2,7 +2,7 @@
 
 Between corners a side bows by whatever the raster or the noise happens to say, unless a straight line is preferred
 where nothing speaks against it. A piece may be straight when its samples keep the band about their own line, their
-local means stay small, and the sagitta of a parabola through them is within two standard errors of none.
+local means stay small, and the sagitta of a parabola through them is within two and a half standard errors of none.
 """
 
 import numpy as np
@@ -16,7 +16,7 @@ __all__ = ["straight_pieces", "straightness_of"]
 # standard error of the sagitta of a least-squares parabola over a length of n tolerances, independent samples one
 # tolerance apart with a standard deviation of 0.3 tolerances: sqrt(720) / 8 * 0.3 / sqrt(n)
 _SAGITTA_ERROR = np.sqrt(720.0) / 8.0 * 0.3
-_ERRORS = 2.0
+_ERRORS = 2.5
 _BEAM = 2.0  # straightness of a straight piece over its length
 
 
