@@ -24,7 +24,7 @@ __all__ = ["Faired", "fair_outline"]
 
 _CIRCLE = 1e-3  # how near the spline of a circle lies to it
 _CORNER_REACH = 0.97  # a corner may lie this far from the trace
-_SETTLE = 0.5  # a corner may move this far when its sides pull
+_SETTLE, _SETTLINGS = 0.5, 3  # a corner may move this far when its sides pull, and how often at most
 _ONE_SIDED = 6.0  # stiffness of the first fits
 _INSERTIONS = 8
 _APART = 8.0  # stretches outside the band nearer than this get one corner between them
@@ -135,12 +135,15 @@ def _attempt(trace: Trace, own: FloatArray, found: FloatArray, degree: int) -> t
     sampled = reparametrised(trace, sampled, coefficients, nodes.pins)
     straight = straight_pieces(sampled)
     fit = relax(sampled, start_stiffness(sampled.layout), nodes.pins, straightness_of(sampled, straight))
-    # a corner that was off may have cost a piece its straightness: it is asked for again where corners have settled
-    stiffness = np.where(straight[sampled.layout.piece], start_stiffness(sampled.layout), fit.stiffness)
-    fit = Fit(sampled, fit.coefficients, stiffness, straightness_of(sampled, straight))
-    nodes = _settled(trace, fit, nodes)
-    again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
-    fit = relax(again, _carried(fit, again.layout), nodes.pins, straightness_of(again, straight))
+    for _ in range(_SETTLINGS):
+        # a corner that was off may have cost a piece its straightness: it is asked for again where corners have settled
+        stiffness = np.where(straight[sampled.layout.piece], start_stiffness(sampled.layout), fit.stiffness)
+        nodes = _settled(trace, Fit(sampled, fit.coefficients, stiffness, straightness_of(sampled, straight)), nodes)
+        again = reparametrised(trace, sampled, fit.coefficients, nodes.pins)
+        stiffness = _carried(stiffness, sampled.layout, again.layout)
+        fit, sampled = relax(again, stiffness, nodes.pins, straightness_of(again, straight)), again
+        if not (straight[sampled.layout.piece] & (fit.straightness == 0.0)).any():
+            break
     return _repaired(trace, remove_lobes(fit, nodes.pins), recognised(trace, fit, nodes.pins), nodes)
 
 
@@ -213,13 +216,12 @@ def _settled(trace: Trace, fit: Fit, nodes: Nodes) -> Nodes:
     return nodes.moved(points)
 
 
-def _carried(fit: Fit, layout: Layout) -> FloatArray:
-    """Return the stiffness of a fit at the same relative places of another layout of the same pieces."""
-    old = fit.sampled.layout
+def _carried(stiffness: FloatArray, old: Layout, layout: Layout) -> FloatArray:
+    """Return the stiffness of a layout at the same relative places of another layout of the same pieces."""
     at = np.interp(
         layout.piece + (layout.local + 0.5) / layout.counts[layout.piece],
         old.piece + (old.local + 0.5) / old.counts[old.piece],
-        fit.stiffness,
+        stiffness,
     )
     return np.asarray(at)
 
