@@ -24,6 +24,7 @@ CAUTION = (
     "Before cutting: check units and scale on a scrap piece. The tolerance is geometric; it leaves kerf, tool radius "
     "and material out. Load-bearing and flight parts need a licensed engineer's approval under local codes."
 )
+_NOTHING = 1e-12  # of the number before: less is rounding
 FAIR_HEADINGS = ("profile", "layer", "given", "written", "corners", "deviation", "of", "mean")
 FAIRNESS_HEADINGS = ("profile", "inflections", "curvature extrema", "least radius", "strain energy")
 CHOICE_HEADINGS = ("profile", "as", "entities", "least", "chord error", "deviation")
@@ -60,7 +61,7 @@ def fairness_rows(record: FairRecord) -> list[tuple[str, ...]]:
         if profile.fairness is not None:
             before, after = profile.fairness["before"], profile.fairness["after"]
             pairs = [
-                f"{_short(before[key])} -> {_short(after[key])}"
+                f"{_short(before[key])} -> {_short(after[key], before[key])}"
                 for key in ("inflections", "curvature_extrema", "least_radius", "strain_energy")
             ]
             rows.append((profile.id, *pairs))
@@ -92,10 +93,13 @@ def _worst_first(record: FairRecord) -> list[ProfileRecord]:
     return sorted(record.profiles, key=used, reverse=True)
 
 
-def _short(value: float | None) -> str:
+def _short(value: float | None, beside: float | None = None) -> str:
+    """Return a number with three figures; one that is nothing but rounding beside another is 0."""
     if value is None or math.isinf(value):
         return "none"
-    return str(value) if isinstance(value, int) else f"{value:.3g}"
+    if isinstance(value, int):
+        return str(value)
+    return "0" if beside is not None and abs(value) < _NOTHING * abs(beside) else f"{value:.3g}"
 
 
 def _row(profile: ProfileRecord) -> tuple[str, ...]:
