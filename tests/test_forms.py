@@ -58,3 +58,14 @@ def test_corners_of_an_outline_in_space_are_found_in_its_plane():
     true = np.array(BRACKET, dtype=float) @ tilt
     assert len(corners) == len(BRACKET)
     assert np.linalg.norm(corners.points[:, None] - true[None], axis=2).min(axis=0).max() < 1.0
+
+
+def test_steps_of_a_raster_are_no_corners_however_small_the_tolerance():
+    angle = 2.0 * np.pi * np.arange(2000) / 2000
+    oval = np.stack([40.0 * np.cos(angle), 25.0 * np.sin(angle)], axis=1)
+    outline = Polyline(staircase(turned(oval, 20)), True)
+    assert len(outline_corners(outline, 0.75, None, NO_MARKS, pitch=1.0)[0]) == 0
+    bracket = Polyline(staircase(turned(dense(BRACKET), 17)), True)
+    assert len(outline_corners(bracket, 0.75, None, NO_MARKS, pitch=1.0)[0]) == len(BRACKET)
+    finer, coarser = (outline_corners(bracket, tolerance, None, NO_MARKS, pitch=1.0)[0] for tolerance in (0.6, 1.0))
+    assert np.array_equal(finer.along, coarser.along)

@@ -39,6 +39,12 @@ class Assessment:
     unusable: bool = False
     slack: float = 0.0
 
+    @property
+    def pitch(self) -> float:
+        """Pixel pitch of the raster that the outline was traced from, drawing units, 0 where it was not."""
+        raster = self.jaggedness is not None and self.jaggedness.kind in ("staircase", "chamfered")
+        return self.jaggedness.size if raster and self.jaggedness is not None else 0.0
+
 
 def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessment:
     """Decide what a profile needs.

@@ -11,7 +11,7 @@ __all__ = ["corner_turns", "outline_corners"]
 
 
 def outline_corners(
-    outline: Polyline, tolerance: float, angle: float | None, marks: FloatArray
+    outline: Polyline, tolerance: float, angle: float | None, marks: FloatArray, pitch: float = 0.0
 ) -> tuple[Corners, BoolArray]:
     """Return the corners of an outline, and which marks belong to it.
 
@@ -20,13 +20,16 @@ def outline_corners(
         tolerance: drawing units; marks farther from the outline do not belong to it.
         angle: turn, radians, above which a vertex is a corner; None finds the true corners.
         marks: points that the user has marked as corners, shape (n, 2 or 3).
+        pitch: of the raster that the outline was traced from, drawing units, 0 where it was not: steps of that size
+            say nothing of corners, however small the tolerance is.
     """
+    scale = max(tolerance, pitch)
     if angle is not None:
         found = corners_by_angle(outline, angle)
     elif outline.dimension == 2:
-        found = find_corners(outline, tolerance)
+        found = find_corners(outline, scale)
     else:
-        found = _spatial_corners(outline, tolerance)
+        found = _spatial_corners(outline, scale)
     return pin_corners(found, outline, marks, tolerance)
 
 

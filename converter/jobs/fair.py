@@ -99,7 +99,8 @@ def _fair_profile(
     angle = None if settings.corner_angle is None else math.radians(settings.corner_angle)
     origin = need.outline.points[0]  # a given point: far from the origin of the drawing nothing is rounded by this
     outline = need.outline.moved(-origin)
-    corners, used = outline_corners(outline, need.tolerance, angle, marks.in_frame(profile) - origin)
+    pins = marks.in_frame(profile) - origin
+    corners, used = outline_corners(outline, need.tolerance, angle, pins, need.pitch)
     marks.used |= used
     form, said = _possible_form(settings.form, profile, version)
     writing = lengths.writing_as(form)
