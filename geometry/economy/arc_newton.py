@@ -25,7 +25,6 @@ _EVEN = (np.arange(SAMPLES) + 0.5) / SAMPLES
 SHARES = 0.5 * (_EVEN + 0.5 * (1.0 - np.cos(np.pi * _EVEN)))  # halfway between even and Chebyshev points
 POWERS = (2, 2, 3, 3, 4, 4, 6, 6, 8, 8, 8, 8, 10, 10, 10, 12, 12, 12, 16, 16, 16, 16)
 PINNED = 1e14
-HOPE = 1.03  # merit, in chord errors, up to which a chain is measured
 CHECKS = 24  # samples per arc and way in the final measure
 
 
@@ -63,9 +62,7 @@ def _distances(batch: Batch, shape: Shape) -> tuple[FloatArray, ComplexArray, Co
 
 @np.errstate(over="ignore", invalid="ignore")  # a chain that runs away is dropped
 def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[float]) -> list[Polished]:
-    """Lower the largest error of chains; make continuous and measure those that come near the chord error.
-
-    What stays farther off is returned as it is, with the errors seen on the way and an infinite defect.
+    """Lower the largest error of chains, make their tangents continuous and measure them.
 
     Args:
         track: the curve.
@@ -75,9 +72,8 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
     """
     whole = batch = batch_of(track, chains)
     joint, angle, s = whole.joint.copy(), whole.angle.copy(), whole.s.copy()  # the best seen
-    errors = np.full(len(whole.start), np.inf)
     score = np.full(len(chains), np.inf)
-    active, rows, arcs = np.arange(len(chains)), np.arange(len(whole.joint)), np.arange(len(whole.start))
+    active, rows = np.arange(len(chains)), np.arange(len(whole.joint))
     goal = np.array(goals) * chord_error
     history = np.full((len(POWERS), len(chains)), np.inf)
     for step, power in enumerate(POWERS):
@@ -95,8 +91,6 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         better = merit < score[active]
         if better.any():
             score[active[better]] = merit[better]
-            mine = better[batch.arc_owner]
-            errors[arcs[mine]] = off[mine]
             mine = better[batch.owner]
             joint[rows[mine]], angle[rows[mine]], s[rows[mine]] = batch.joint[mine], batch.angle[mine], batch.s[mine]
         history[step, active] = worst
@@ -109,22 +103,13 @@ def polish(track: Track, chord_error: float, chains: list[Chain], goals: list[fl
         if not done.all():
             done |= _advance(batch, shape, r, points, seen, worst, goal[active], power)
         if done.any():
-            active, rows, arcs = active[~done], rows[~done[batch.owner]], arcs[~done[batch.arc_owner]]
+            active, rows = active[~done], rows[~done[batch.owner]]
             if not len(active):
                 break
             batch = batch.without(done)
     whole.joint, whole.angle, whole.s = joint, angle, s
-    hopeless = ~(score <= HOPE)
-    out: list[Polished] = [
-        Polished(whole.chain(k), part, np.inf) for k, part in enumerate(np.split(errors, whole.first_arc[1:]))
-    ]
-    if not hopeless.all():
-        near = whole.without(hopeless)
-        _close_up(near)
-        shut = [near.chain(k) for k in range(len(near.piece))]
-        for k, result in zip(np.flatnonzero(~hopeless).tolist(), _measured(near, shut, chord_error), strict=True):
-            out[k] = result
-    return out
+    _close_up(whole)
+    return _measured(whole, [whole.chain(k) for k in range(len(chains))], chord_error)
 
 
 def _advance(
