@@ -10,8 +10,11 @@ from hypothesis import strategies as st
 from geometry.arcs import ArcChain, bulge_points, full_circle
 from geometry.bspline import Spline, join
 from geometry.deviation import hausdorff, within
+from geometry.economy.arc_batch import chain_bulges
 from geometry.economy.arcs import fewest_arcs
+from geometry.economy.biarcs import biarc_chain
 from geometry.economy.least import least_arcs
+from geometry.economy.track import track_of
 from geometry.errors import GeometryError
 from tests.spline_shapes import SHAPES, by_length, made, spline_through
 from tests.test_economy_lines import rounded_corner_outline, wild_splines
@@ -232,6 +235,14 @@ def test_a_spline_in_space_and_a_chord_error_that_is_no_length_are_refused() -> 
         fewest_arcs(Spline(np.repeat([0.0, 1.0], 4), np.eye(4, 3), 3), 0.1)
     with pytest.raises(GeometryError, match="chord error"):
         fewest_arcs(made("ellipse"), -0.1)
+
+
+@pytest.mark.parametrize("middle", [(40.0, 0.0), (40.0, 10.0)])
+def test_biarcs_down_to_a_cusp_hold_no_arc_that_turns_right_round(middle: tuple[float, float]) -> None:
+    track = track_of(Spline(np.array([0.0, 0.0, 0.0, 1.0, 1.0, 1.0]), np.array([(0.0, 0.0), middle, (0.0, 0.0)]), 2))
+    chain = biarc_chain(track, 0, track.s[[0, -1]], 0.01)
+    _, bulges = chain_bulges(track, chain)
+    assert np.abs(bulges).max() < 1.0  # under a half turn; one of a whole turn would reach as far as its bulge is large
 
 
 def test_a_standstill_leaves_nothing_of_no_length() -> None:
