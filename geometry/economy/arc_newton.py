@@ -254,7 +254,8 @@ def _measured(batch: Batch, chains: list[Chain], chord_error: float) -> list[Pol
     keep = good[owner]
     if keep.any():
         start, end = batch.joint[batch.start], batch.joint[batch.end]
-        errors[keep] = two_sided(track, start[keep], end[keep], bulges[keep], s[keep], owner[keep], chord_error, CHECKS)
+        parts = (start[keep], end[keep], bulges[keep], s[keep], owner[keep])
+        errors[keep] = two_sided(track, *parts, chord_error, CHECKS, peaks=True)
     defects = np.maximum.reduceat(np.maximum(np.abs(shape.defect), np.abs(shape.astray)), batch.first_arc)
-    parts = np.split(errors, batch.first_arc[1:])
-    return [Polished(*parts_) for parts_ in zip(chains, parts, defects.tolist(), strict=True)]
+    per_chain = np.split(errors, batch.first_arc[1:])
+    return [Polished(*values) for values in zip(chains, per_chain, defects.tolist(), strict=True)]

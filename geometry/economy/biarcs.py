@@ -39,7 +39,8 @@ def biarc_chain(track: Track, piece: int, s: FloatArray, chord_error: float) -> 
         start, end = _interleaved(joint[:-1], middle), _interleaved(middle, joint[1:])
         bulges = np.tan(0.25 * sweep.ravel())
         spans = np.stack([_interleaved(s[:-1], half), _interleaved(half, s[1:])], axis=1)
-        error = two_sided(track, start, end, bulges, spans, np.zeros(len(bulges), dtype=np.intp), chord_error, SAMPLES)
+        one = np.zeros(len(bulges), dtype=np.intp)
+        error = two_sided(track, start, end, bulges, spans, one, chord_error, SAMPLES, peaks=True)
         wild = (np.abs(sweep).max(axis=1) > MOST_SWEEP) | (np.abs(sweep.sum(axis=1) - np.diff(angle)) > 1e-6)
         over = wild | ~(error.reshape(-1, 2).max(axis=1) <= chord_error)
         over &= np.diff(s) > SHORTEST * track.s[-1]
