@@ -19,6 +19,7 @@ ROOT = Path(__file__).parent.parent
 README = ROOT / "README.md"
 _BLOCK = re.compile(r"^```console\n(.*?)^```$", re.MULTILINE | re.DOTALL)
 _COUNTED = re.compile(r" (control points|arcs|lines|vertices)")
+_COUNTED_AFTER = re.compile(r"(-> | (spline|arcs|lines) (\d+ )?|\(least )$")  # before a count in a table
 _NUMBER = re.compile(r"[-+]?\d+\.?\d*(?:e[-+]?\d+)?")
 
 
@@ -88,7 +89,7 @@ def agrees(shown, printed):
 
     Words and whole numbers must be the same, but other processors and library releases round otherwise: numbers
     written with a point may differ by a twentieth or by 0.005, whichever is more, and how many control points, arcs,
-    lines, vertices and inflections come out by a fifth or by 2. Spaces count as one, since columns are as wide as their
+    lines, vertices and inflections come out, or are the least, by a fifth or by 2. Spaces count as one, since columns are as wide as their
     numbers.
     """
     a, b = " ".join(shown.split()), " ".join(printed.split())
@@ -100,7 +101,7 @@ def agrees(shown, printed):
 def _near(one, other, line):
     if any("." in number or "e" in number for number in (one[0], other[0])):
         share, least = 0.05, 0.005
-    elif _COUNTED.match(line, one.end()) or line.endswith("-> ", 0, one.start()):
+    elif _COUNTED.match(line, one.end()) or _COUNTED_AFTER.search(line, 0, one.start()):
         share, least = 0.2, 2.0
     else:
         return one[0] == other[0]
