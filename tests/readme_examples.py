@@ -89,8 +89,8 @@ def agrees(shown, printed):
 
     Words and whole numbers must be the same, but other processors and library releases round otherwise: numbers
     written with a point may differ by a twentieth or by 0.005, whichever is more, and how many control points, arcs,
-    lines, vertices and inflections come out, or are the least, by a fifth or by 2. Spaces count as one, since columns are as wide as their
-    numbers.
+    lines, vertices and inflections come out, or are the least, by a fifth or by 2. Spaces count as one, since columns
+    are as wide as their numbers.
     """
     a, b = " ".join(shown.split()), " ".join(printed.split())
     if _NUMBER.sub("#", a) != _NUMBER.sub("#", b):
