@@ -6,16 +6,18 @@ local parameter t enter, one set a span, so a fit takes time linear in samples p
 """
 
 from dataclasses import dataclass
+from functools import cache
 
 import numpy as np
 from scipy.linalg.lapack import dpbsv
 
 from geometry.arrays import FloatArray, IntArray
-from geometry.economy.spline_source import Source
+from geometry.economy.spline_source import Source, cross
 
 __all__ = ["Basis", "Bend", "Fit", "measure", "solve"]
 
-_BLOCK = 4096  # samples summed at a time
+_BLOCK = 256  # runs of samples summed at a time
+_HOLD = 1e10  # weight that holds the ends of pieces, over the largest weight of any control point
 
 
 class Basis:
@@ -82,23 +84,25 @@ class Basis:
 
 
 def _polynomials(knots: FloatArray, span: IntArray, p: int) -> FloatArray:
-    """Return the basis functions on each span as powers of the local parameter (de Boor's recurrence)."""
+    """Return the basis functions on each span as powers of the local parameter (de Boor's recurrence).
+
+    All functions of one degree at a time; of the two terms of each, the second falls off where the first rises.
+    """
+    near = knots[span[:, None] + np.arange(1 - p, p + 1)]  # knots span - p + 1 .. span + p
     start, width = knots[span], knots[span + 1] - knots[span]
-    rows = [np.ones((1, len(span)))]
+    rows = np.ones((1, 1, len(span)))  # function, power, span
     for r in range(1, p + 1):
-        new = [np.zeros((r + 1, len(span))) for _ in range(r + 1)]
-        for k, poly in enumerate(rows):
-            left, right = knots[span - r + 1 + k], knots[span + 1 + k]
-            w = 1.0 / (right - left)
-            a, b = (start - left) * w, width * w  # (u - left) / (right - left) = a + b t
-            rise = np.zeros((r + 1, len(span)))
-            rise[:-1] = a * poly
-            rise[1:] += b * poly
-            new[k + 1] += rise
-            new[k] -= rise
-            new[k][:-1] += poly
+        left, right = near[:, p - r : p].T, near[:, p : p + r].T
+        w = 1.0 / (right - left)
+        rise = np.zeros((r, r + 1, len(span)))
+        rise[:, :-1] = ((start - left) * w)[:, None] * rows  # (u - left) / (right - left) = a + b t
+        rise[:, 1:] += (width * w)[:, None] * rows
+        new = np.zeros((r + 1, r + 1, len(span)))
+        new[1:] = rise
+        new[:-1] -= rise
+        new[:-1, :-1] += rows
         rows = new
-    return np.stack(rows).transpose(2, 0, 1)
+    return np.ascontiguousarray(rows.transpose(2, 0, 1))
 
 
 @dataclass(frozen=True, eq=False)
@@ -132,6 +136,11 @@ class Fit:
                 break
         return out
 
+    def curvature(self, u: FloatArray) -> FloatArray:
+        """Return the curvature at parameters u, shape (n,), signed in 2-D."""
+        _, slope, second = self.at(*self.basis.locate(u))
+        return cross(slope, second) / np.maximum((slope * slope).sum(axis=0), 1e-200) ** 1.5
+
 
 @dataclass(frozen=True, eq=False)
 class Bend:
@@ -158,98 +167,117 @@ def solve(
         bend: if given, second derivatives are fitted too.
     """
     span, t = basis.locate(u)
-    local, load = _normal(source, basis, span, t, weight, slide, source.point, basis.matrix)
+    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    there = span[runs]
+    sums = _normal(source, runs, t, weight, slide, source.point, basis.matrix[there])
     if bend is not None:
-        p = source.degree
-        powers = np.arange(2, p + 1)
-        second = basis.matrix[:, :, 2:] * (powers * (powers - 1)) / basis.width[:, None, None] ** 2
-        more, pull = _normal(source, basis, span, t, bend.weight, 0.0, source.bend * bend.speed**2, second)
-        local, load = local + more, load + pull
-    return _solve_spans(source, basis, local, load)
+        powers = np.arange(2, source.degree + 1)
+        second = basis.matrix[there, :, 2:] * (powers * (powers - 1)) / basis.width[there, None, None] ** 2
+        sums = sums + _normal(source, runs, t, bend.weight, 0.0, source.bend * bend.speed**2, second)
+    return _solved(source, basis, there, sums)
+
+
+class _Table:
+    """Which products of basis functions and coordinates make up the lower half of a span's normal matrix.
+
+    Attributes:
+        left, right: the pairs of basis functions i <= j, shape (q,).
+        row, column: function and coordinate of either side, shape (2, m).
+        product: index of the sum that belongs there: pair times number of coordinate pairs plus coordinate pair.
+        squares: coordinate pairs that are one coordinate twice.
+    """
+
+    def __init__(self, p: int, d: int) -> None:
+        self.left, self.right = np.triu_indices(p + 1)
+        self.squares = [0, 2] if d == 2 else [0, 3, 5]
+        forms = {pair: k for k, pair in enumerate((i, j) for i in range(d) for j in range(i, d))}
+        entries = [
+            (i, c, j, e, pair * len(forms) + forms[min(c, e), max(c, e)])
+            for pair, (i, j) in enumerate(zip(self.left.tolist(), self.right.tolist(), strict=True))
+            for c in range(d)
+            for e in range(d)
+            if i < j or c <= e
+        ]
+        i, c, j, e, self.product = np.array(entries).T
+        self.row, self.column = np.stack([i, c]), np.stack([j, e])
+
+
+@cache
+def _table(p: int, d: int) -> _Table:
+    return _Table(p, d)
 
 
 def _normal(
     source: Source,
-    basis: Basis,
-    span: IntArray,
+    runs: IntArray,
     t: FloatArray,
     weight: FloatArray,
     slide: float,
     target: FloatArray,
     matrix: FloatArray,
-) -> tuple[FloatArray, FloatArray]:
-    """Return each span's share of the normal equations for sum weight |target - value|^2, tangential part cut.
+) -> FloatArray:
+    """Return the share of spans in the normal equations for sum weight |target - value|^2.
+
+    The tangential part of the residual counts for `slide` only. Sums of powers of t are made first, with which the
+    products of any two basis functions, themselves polynomials, are summed up at once.
 
     Args:
-        matrix: powers of t of the basis functions (or of derivatives of theirs), shape (s, p + 1, q).
+        runs: first sample in every span that holds any, shape (r,).
+        matrix: powers of t of the basis functions there (or of derivatives of theirs), shape (r, p + 1, q).
 
     Returns:
-        Matrices, shape (s, p + 1, d, p + 1, d), and right-hand sides, shape (s, p + 1, d).
+        Products in the order of `_Table.product`, then right-hand sides by function and coordinate, shape (.., r).
     """
-    q, d, n = matrix.shape[2], len(target), len(t)
-    pairs = [(i, j) for i in range(d) for j in range(i, d)]
+    d, n, size, q = len(target), len(t), matrix.shape[1], matrix.shape[2]
+    table, most = _table(size - 1, d), 2 * q - 1
     pull = weight * (1.0 - slide)
     form = -pull * source.along_tangent
-    for row, (i, j) in enumerate(pairs):
-        if i == j:
-            form[row] += weight
-    right = weight * target - pull * (source.tangent * target).sum(axis=0) * source.tangent
-    cut, s = (2 * q - 1) * len(pairs), len(basis.start)
-    sums = np.zeros((cut + q * d, s))
-    for start in range(0, n, _BLOCK):  # blocks that stay in the cache
-        block = slice(start, min(start + _BLOCK, n))
-        powers = np.empty((2 * q - 1, block.stop - start))
+    form[table.squares] += weight
+    right = weight * target - (pull * (source.tangent * target).sum(axis=0)) * source.tangent
+    cut = most * len(form)
+    moments = np.empty((cut + q * d, len(runs)))
+    for first in range(0, len(runs), _BLOCK):  # blocks that stay in the cache
+        starts = runs[first : first + _BLOCK]
+        low, high = starts[0], runs[first + _BLOCK] if first + _BLOCK < len(runs) else n
+        powers = np.empty((most, high - low))
         powers[0] = 1.0
-        for k in range(1, 2 * q - 1):
-            np.multiply(powers[k - 1], t[block], out=powers[k])
-        rows = np.empty((cut + q * d, powers.shape[1]))
-        np.multiply(powers[:, None], form[:, block], out=rows[:cut].reshape(2 * q - 1, len(pairs), -1))
-        np.multiply(powers[:q, None], right[:, block], out=rows[cut:].reshape(q, d, -1))
-        runs = np.flatnonzero(np.diff(span[block], prepend=-1))
-        sums[:, span[block][runs]] += np.add.reduceat(rows, runs, axis=1)
-    forms = sums[:cut].reshape(2 * q - 1, len(pairs), s)
-    rights = sums[cut:].reshape(q, d, s).transpose(2, 0, 1)
-    product = matrix[:, :, None, :, None] * matrix[:, None, :, None, :]
-    size = matrix.shape[1]
-    by_power = np.zeros((s, size, size, 2 * q - 1))
-    for a in range(q):
-        by_power[..., a : a + q] += product[..., a, :]
-    local = by_power.reshape(s, size * size, 2 * q - 1) @ forms.transpose(2, 0, 1)
-    which = np.empty((d, d), dtype=np.intp)
-    for row, (i, j) in enumerate(pairs):
-        which[i, j] = which[j, i] = row
-    stiff = local.reshape(s, size, size, len(pairs))[..., which].transpose(0, 1, 3, 2, 4)
-    return stiff, matrix @ rights
+        for k in range(1, most):
+            np.multiply(powers[k - 1], t[low:high], out=powers[k])
+        rows = np.empty((cut + q * d, high - low))
+        np.multiply(powers[:, None], form[:, low:high], out=rows[:cut].reshape(most, len(form), -1))
+        np.multiply(powers[:q, None], right[:, low:high], out=rows[cut:].reshape(q, d, -1))
+        moments[:, first : first + _BLOCK] = np.add.reduceat(rows, starts - low, axis=1)
+    product = np.zeros((len(runs), len(table.left), most))
+    one, other = matrix[:, table.left], matrix[:, table.right]
+    for k in range(q):
+        product[:, :, k : k + q] += one[:, :, k, None] * other
+    sums = np.matmul(product, moments[:cut].T.reshape(len(runs), most, len(form)))
+    loads = np.matmul(matrix, moments[cut:].T.reshape(len(runs), q, d))
+    return np.concatenate([sums.reshape(len(runs), -1), loads.reshape(len(runs), -1)], axis=1).T
 
 
-def _solve_spans(source: Source, basis: Basis, stiff: FloatArray, load: FloatArray) -> Fit | None:
-    """Assemble the band matrix from the share of every span, pin the ends, solve."""
-    p, d, s, m = source.degree, len(source.point), len(basis.start), basis.matrix
-    size = basis.count * d
-    free = np.ones(basis.count)
-    held = np.zeros((basis.count, d))
-    if basis.fixed.size:
-        free[basis.fixed] = 0.0
-        ends = np.stack([source.first[:-1], source.first[1:] - 1], axis=1).ravel()
-        held[basis.fixed] = source.point[:, ends].T
-        load = load - np.einsum("sicjd,sjd->sic", stiff, held[basis.ids])
-        mask = free[basis.ids]
-        stiff = stiff * mask[:, :, None, None, None] * mask[:, None, None, :, None]
-        load = load * mask[:, :, None]
-    unknown = (basis.order[basis.ids][:, :, None] * d + np.arange(d)).reshape(s, -1)
-    row, column = unknown[:, :, None], unknown[:, None, :]
-    lower = row >= column
+def _solved(source: Source, basis: Basis, there: IntArray, sums: FloatArray) -> Fit | None:
+    """Assemble the band matrix from the sums of the spans that hold samples, hold the ends, solve."""
+    p, d = source.degree, len(source.point)
+    table, size = _table(p, d), basis.count * d
+    ids = basis.ids[there].T
+    unknown = basis.order[ids] * d
+    row, column = unknown[table.row[0]] + table.row[1][:, None], unknown[table.column[0]] + table.column[1][:, None]
+    flat = np.abs(row - column) * size + np.minimum(row, column)
+    products = len(sums) - (p + 1) * d
     band = (basis.reach + 1) * d
-    flat = ((row - column) * size + column)[lower]
-    ab = np.bincount(flat, weights=stiff.reshape(s, (p + 1) * d, -1)[lower], minlength=band * size)
-    ab = ab.reshape(band, size)
-    b = np.bincount(unknown.ravel(), weights=load.ravel(), minlength=size)
+    ab = np.bincount(flat.ravel(), weights=sums[table.product].ravel(), minlength=band * size).reshape(band, size)
+    place = unknown[:, None] + np.arange(d)[:, None]
+    b = np.bincount(place.ravel(), weights=sums[products:].ravel(), minlength=size)
     scale = float(ab[0].max())
     if not (np.isfinite(scale) and scale > 0.0):
         return None
-    pinned = (basis.order[basis.fixed][:, None] * d + np.arange(d)).ravel()
-    ab[0, pinned] = scale
-    b[pinned] = scale * held[basis.fixed].ravel()
+    if basis.fixed.size:
+        ends = np.stack([source.first[:-1], source.first[1:] - 1], axis=1).ravel()
+        held = source.point[:, ends].T
+        pinned = (basis.order[basis.fixed][:, None] * d + np.arange(d)).ravel()
+        ab[0, pinned] += _HOLD * scale
+        b[pinned] += _HOLD * scale * held.ravel()
     for ridge in (0.0, 1e-12, 1e-9, 1e-6):
         ab[0] += ridge * scale
         _, x, info = dpbsv(ab, b, lower=1)
@@ -259,8 +287,8 @@ def _solve_spans(source: Source, basis: Basis, stiff: FloatArray, load: FloatArr
         return None
     control = x.reshape(-1, d)[basis.order]
     if basis.fixed.size:
-        control[basis.fixed] = held[basis.fixed]
-    coefficients = np.matmul(m.transpose(0, 2, 1), control[basis.ids]).transpose(1, 2, 0)
+        control[basis.fixed] = held
+    coefficients = np.matmul(basis.matrix.transpose(0, 2, 1), control[basis.ids]).transpose(1, 2, 0)
     return Fit(basis, control, np.ascontiguousarray(coefficients))
 
 

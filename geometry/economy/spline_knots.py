@@ -13,12 +13,13 @@ from geometry.economy.spline_shape import Guard, Verdict
 from geometry.economy.spline_source import Source
 from geometry.economy.spline_spacing import least_spans, place_number
 
-__all__ = ["State", "add_where_over", "bent", "level", "refit", "remove", "respaced"]
+__all__ = ["State", "add_where_over", "bent", "halved", "level", "pieces_at", "refit", "remove", "respaced"]
 
 _SLIDE = 1e-3  # share of a tangential residual that counts once parameters follow the foot points
 _LEVELLINGS = 2  # refits with levelled weights before knots are put back
 _HOPELESS = 4.0  # ratio over which levelling is not tried
 _SPARE = 0.3  # spans more than errors alike would need, when knots are laid anew
+_LONG = 200  # knots a piece from which on all fairness lost is put down to the nearest knot taken out
 _BARREN = 8  # rounds in a row without a knot removed after which removal ends
 _APART, _LATER_APART = 5, 8  # knots between those taken out in one round, at first and after six rounds
 _REACH = 5  # knots taken out farther than this from what went wrong, in knots, are not blamed for it
@@ -116,16 +117,16 @@ def respaced(source: Source, state: State, allowed: FloatArray, guard: Guard) ->
         return None
     if good.all():
         return trial
-    inner = np.sort(
-        np.concatenate([trial.inner[good[_pieces(source, trial.inner)]], old.inner[~good[_pieces(source, old.inner)]]])
-    )
+    new_kept, old_kept = good[pieces_at(source, trial.inner)], ~good[pieces_at(source, old.inner)]
+    inner = np.sort(np.concatenate([trial.inner[new_kept], old.inner[old_kept]]))
     here = good[source.piece]
     return refit(
         source, Basis(source, inner), np.where(here, trial.u, old.u), np.where(here, trial.weight, old.weight), allowed
     )
 
 
-def _pieces(source: Source, u: FloatArray) -> IntArray:
+def pieces_at(source: Source, u: FloatArray) -> IntArray:
+    """Return the piece of every parameter."""
     return np.maximum(np.searchsorted(source.low, u, side="right") - 1, 0)
 
 
@@ -133,7 +134,7 @@ def number_of_spans(source: Source, state: State) -> IntArray:
     """Return how many spans every piece of a fit has."""
     if source.periodic:
         return np.array([len(state.inner)])
-    return 1 + np.bincount(_pieces(source, state.inner), minlength=len(source.low))
+    return 1 + np.bincount(pieces_at(source, state.inner), minlength=len(source.low))
 
 
 def _need(source: Source, state: State, order: float) -> tuple[FloatArray, IntArray]:
@@ -223,6 +224,7 @@ def remove(
     refusing are local, so the number of rounds does not grow with the length of the profile; unless it is strict, a
     little fairness may be lost on the way, for which no knot can be blamed.
     """
+    strict = strict or len(state.inner) > _LONG * len(source.low)
     frozen = np.zeros(len(state.inner), dtype=bool)
     verdict = guard.check(state.fit, state.u)
     least = source.degree + 2 if source.periodic else 0
@@ -281,7 +283,10 @@ def _without(
             if trial.ratio.max() <= 1.0 or trial.ratio.max() > _HOPELESS:
                 break
             trial = level(source, trial, allowed) or trial
-        blamed = _blamed(inner, out, state.u[trial.ratio > 1.0])
+        over = trial.ratio > 1.0
+        blamed = _blamed(inner, out, state.u[over])
+        if strict and not blamed.any() and (over & (state.ratio <= 1.0)).any():
+            blamed = _nearest(inner, out, state.u[over & (state.ratio <= 1.0)])
         if not blamed.any():
             verdict = guard.check(trial.fit, trial.u, base)
             wrong = state.u[verdict.where]

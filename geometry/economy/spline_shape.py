@@ -11,7 +11,7 @@ from geometry.economy.spline_source import Source, cross, turning
 __all__ = ["Guard", "Turns", "Verdict", "turning_points"]
 
 SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no inflection
-TURN_LEVELS = (1.0, 8.0)  # a fit must not make more of what is small either, so counts hold at larger thresholds too
+TURN_LEVELS = (1.0, 4.0, 8.0)
 LEAST_HEIGHT = 0.025  # share of the chord error: a bend that stands off its chord by this counts, whatever its turn
 PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
 PROMINENCE_LEVELS = (1.0, 5.0)  # a fit with more extrema is let pass in need only while they are small
@@ -32,6 +32,11 @@ class Turns:
     def per_piece(self, first: IntArray) -> IntArray:
         """Return their number in every piece."""
         return np.diff(np.searchsorted(self.at, first))
+
+    def within(self, a: int, b: int) -> "Turns":
+        """Return those at samples a to b, b not included."""
+        low, high = np.searchsorted(self.at, (a, b))
+        return Turns(self.at[low:high], self.top[low:high])
 
 
 @dataclass(frozen=True, eq=False)
@@ -69,16 +74,16 @@ class Guard:
             slack: factor on the thresholds for what is compared with it; over 1, a fit that was held to the
                 same thresholds at other samples is not refused for rounding.
         """
-        self._source, self._limit = source, 0.1 / chord_error
+        self._source, self.limit = source, 0.1 / chord_error
         starts = source.first[:-1]
-        k = np.clip(source.curvature, -self._limit, self._limit)
+        k = np.clip(source.curvature, -self.limit, self.limit)
         reach = np.maximum(np.maximum.reduceat(k, starts), 0.0) - np.minimum(np.minimum.reduceat(k, starts), 0.0)
         flat = 0.16 * chord_error / np.maximum(source.lengths, 1e-300) ** 2  # stands off 0.02 of chord_error
-        self._prominence = np.maximum(PROMINENCE * reach, flat)
+        self.prominence = np.maximum(PROMINENCE * reach, flat)
         self._turn = np.full(len(starts), SMALLEST_TURN)
         self._checks: list[_Check] = []
         if source.degree > 2:
-            levels = [(factor * self._prominence, np.inf) for factor in PROMINENCE_LEVELS]
+            levels = [(factor * self.prominence, np.inf) for factor in PROMINENCE_LEVELS]
             self._checks.append(_Check(k, levels, source, source.periodic, slack, True))
         if len(source.point) == 2:
             angle, tall = turning(source.tangent, source.first), LEAST_HEIGHT * chord_error
@@ -100,7 +105,7 @@ class Guard:
         values: list[FloatArray] = []
         if source.degree > 2:
             speed = np.sqrt((g1 * g1).sum(axis=0))
-            k = np.clip(cross(g1, g2) / np.maximum(speed, 1e-300) ** 3, -self._limit, self._limit)
+            k = np.clip(cross(g1, g2) / np.maximum(speed, 1e-300) ** 3, -self.limit, self.limit)
             values.append(k)
         if len(source.point) == 2:
             values.append(turning(g1, source.first))
@@ -128,15 +133,14 @@ class _Check:
     ) -> None:
         self.first, self.cyclic, self.along, self.curvature = source.first, cyclic, source.along, curvature
         self.thresholds = thresholds
-        self.turns = self._turns(values)
+        self.turns = self._turns(_Extrema(values, source.first, cyclic))
         self.counts = [turns.per_piece(source.first) for turns in self.turns]
+        self.least_counts = np.min(self.counts, axis=0)
         self.thresholds = [(slack * least, slack * tall) for least, tall in thresholds]
 
-    def _turns(self, values: FloatArray) -> list[Turns]:
-        if self.cyclic:
-            return [turning_points(values, self.first, least, True) for least, _ in self.thresholds]
-        index = _local_extrema(values, self.first)
-        return [_significant(values, index, self.first, least, self.along, tall) for least, tall in self.thresholds]
+    def _turns(self, extrema: "_Extrema") -> list[Turns]:
+        sideways = None if self.curvature else _Sideways(extrema.values, self.along)
+        return [extrema.that_count(least, sideways, tall) for least, tall in self.thresholds]
 
     def compare(
         self, values: FloatArray, base: list[Turns] | None, worse: BoolArray, last: BoolArray, where: BoolArray
@@ -145,7 +149,11 @@ class _Check:
 
         Counterparts are sought in the source, or in the base where that has more turning points.
         """
-        found = self._turns(values)
+        extrema = _Extrema(values, self.first, self.cyclic)
+        every = extrema.every()
+        if np.all(every.per_piece(self.first) <= self.least_counts):  # no more even with the smallest among them
+            return [every] * len(self.thresholds)
+        found = self._turns(extrema)
         for level, (turns, own, most) in enumerate(zip(found, self.turns, self.counts, strict=True)):
             count, allowed = turns.per_piece(self.first), most
             if base is not None:
@@ -155,18 +163,14 @@ class _Check:
                 last[i] |= level == len(found) - 1
                 if self.curvature and level:
                     continue  # its places are among those of the first level
-                a, b = self.first[i], self.first[i + 1]
+                a, b = self.first[i : i + 2].tolist()
                 known = own if base is None or allowed[i] == most[i] else base[level]
-                ends = np.concatenate([[a], turns.at[(turns.at >= a) & (turns.at < b)], [b - 1]])
+                here, there = turns.within(a, b), known.within(a, b)
+                ends = np.concatenate([[a], here.at, [b - 1]])
                 for top in (False, True):
-                    old, new = (t.at[(t.at >= a) & (t.at < b) & (t.top == top)] for t in (known, turns))
-                    extra = _unmatched(old, new)
-                    place = np.searchsorted(ends[1:-1], extra)
-                    for beside in (
-                        extra,
-                        ends[place],
-                        ends[place + 2],
-                    ):  # the point, and the middles of the bends there
+                    extra = _unmatched(there.at[there.top == top], here.at[here.top == top])
+                    place = np.searchsorted(here.at, extra)
+                    for beside in (extra, ends[place], ends[place + 2]):  # the point, the middles of the bends there
                         where[(extra + beside) // 2] = True
         return found
 
@@ -179,94 +183,107 @@ def _unmatched(old: IntArray, new: IntArray) -> IntArray:
     return np.delete(new, nearest)
 
 
-def turning_points(
-    values: FloatArray,
-    first: IntArray,
-    threshold: FloatArray,
-    cyclic: bool,
-    along: FloatArray | None = None,
-    tall: float = np.inf,
-) -> Turns:
+def turning_points(values: FloatArray, first: IntArray, threshold: FloatArray, cyclic: bool) -> Turns:
     """Return the samples where a rise of at least a threshold turns into such a fall or back.
-
-    For tangent angles, a rise may also count by how far the curve stands off its chord halfway along the rise.
 
     Args:
         values: shape (n,).
         first: first sample of every piece, and n; the ends of pieces are no turning points.
         threshold: for every piece, shape (pieces,), positive.
         cyclic: whether the (only) piece closes; `values` then repeats from its start.
-        along: arc lengths, shape (n,); with `tall`, not for cyclic values.
-        tall: distance from the chord from which on a rise counts even if it is under the threshold.
     """
-    if cyclic:
-        shift = int(np.argmax(values))
-        loop = np.concatenate([values[shift:], values[: shift + 1]])
-        turns = turning_points(loop, np.array([0, len(loop)]), threshold, False)
-        if not turns.at.size:
-            return turns
-        at = (np.append(0, turns.at) + shift) % len(values)
-        order = np.argsort(at)
-        return Turns(at[order], np.append(True, turns.top)[order])
-    index = _local_extrema(values, first)
-    return _significant(values, index, first, threshold, along, tall)
-
-
-def _local_extrema(values: FloatArray, first: IntArray) -> IntArray:
-    """Return the ends of pieces and the samples between them where values turn at all, ascending."""
-    step = np.sign(np.diff(values))
-    step[first[1:-1] - 1] = 0.0
-    moving = np.flatnonzero(step)
-    turns = moving[1:][step[moving[1:]] != step[moving[:-1]]]
-    return np.unique(np.concatenate([first[:-1], turns, first[1:] - 1]))
+    return _Extrema(values, first, cyclic).that_count(threshold, None, np.inf)
 
 
 class _Sideways:
     """How far a curve stands off chords, from its tangent angles (small angles)."""
 
-    def __init__(self, angle: FloatArray, along: FloatArray, tall: float) -> None:
-        self.along, self.tall = along, tall
+    def __init__(self, angle: FloatArray, along: FloatArray) -> None:
+        self.along = along
         steps = 0.5 * (angle[1:] + angle[:-1]) * np.diff(along)
         self.offset = np.concatenate([[0.0], np.cumsum(steps)])
 
-    def counts(self, a: int, b: int) -> bool:
-        """Tell whether the curve from sample a to sample b stands off its chord far enough halfway."""
+    def height(self, a: int, b: int) -> float:
+        """Return how far the curve from sample a to sample b stands off its chord halfway."""
         if b - a < 2:
-            return False
+            return 0.0
         middle = (a + b) // 2
         x, y = self.along, self.offset
         share = (x[middle] - x[a]) / (x[b] - x[a])
-        return bool(abs(y[middle] - y[a] - share * (y[b] - y[a])) >= self.tall)
+        return float(abs(y[middle] - y[a] - share * (y[b] - y[a])))
 
 
-def _significant(
-    values: FloatArray, index: IntArray, first: IntArray, threshold: FloatArray, along: FloatArray | None, tall: float
-) -> Turns:
-    """Pick the turning points that count from the local extrema; arguments as of `turning_points`."""
-    fresh = np.zeros(len(index), dtype=bool)
-    fresh[np.searchsorted(index, first[:-1])] = True
-    limit = threshold[np.searchsorted(first, index, side="right") - 1]
-    found: list[int] = []
-    tops: list[bool] = []
-    sideways = _Sideways(values, along, tall) if along is not None else None
-    direction, high, low, start, high_at, low_at, start_at = 0, 0.0, 0.0, 0.0, 0, 0, 0
-    rows = zip(index.tolist(), values[index].tolist(), limit.tolist(), fresh.tolist(), strict=True)
-    for at, value, least, new in rows:
-        if new:
-            direction, high, low, start, high_at, low_at, start_at = 0, value, value, value, at, at, at
-            continue
-        if direction >= 0 and value > high:
-            high, high_at = value, at
-        if direction <= 0 and value < low:
-            low, low_at = value, at
-        if direction >= 0 and (high - value >= least or (sideways and sideways.counts(high_at, at))):
-            if direction or high - start >= least or (sideways and sideways.counts(start_at, high_at)):
-                found.append(high_at)
-                tops.append(True)
-            direction, low, low_at = -1, value, at
-        elif direction <= 0 and (value - low >= least or (sideways and sideways.counts(low_at, at))):
-            if direction or start - low >= least or (sideways and sideways.counts(start_at, low_at)):
-                found.append(low_at)
-                tops.append(False)
-            direction, high, high_at = 1, value, at
-    return Turns(np.array(found, dtype=np.intp), np.array(tops, dtype=bool))
+class _Extrema:
+    """Samples where values turn, however little; a cyclic piece is begun and ended at its largest value.
+
+    Attributes:
+        index: the ends of pieces and the turns between them, ascending, in the order of `values`.
+    """
+
+    def __init__(self, values: FloatArray, first: IntArray, cyclic: bool) -> None:
+        self.cyclic, self.shift, self.count = cyclic, 0, len(values)
+        if cyclic:
+            self.shift = int(np.argmax(values))
+            values = np.concatenate([values[self.shift :], values[: self.shift + 1]])
+            first = np.array([0, len(values)])
+        self.values, self.first = values, first
+        rising = values[1:] > values[:-1]
+        moving = values[1:] != values[:-1]
+        moving[first[1:-1] - 1] = False
+        at = np.flatnonzero(moving)
+        turns = at[1:][rising[at[1:]] != rising[at[:-1]]]
+        marked = np.zeros(len(values), dtype=bool)
+        marked[turns] = True
+        marked[first[:-1]] = marked[first[1:] - 1] = True
+        self.index = np.flatnonzero(marked)
+
+    def _in_place(self, at: IntArray, top: BoolArray) -> Turns:
+        """Return turns between the ends of pieces as turns of the values that were given."""
+        if not self.cyclic or not at.size:
+            return Turns(at, top)
+        at = (np.append(0, at) + self.shift) % self.count
+        order = np.argsort(at)
+        return Turns(at[order], np.append(True, top)[order])
+
+    def every(self) -> Turns:
+        """Return all of them."""
+        inner = np.ones(len(self.index), dtype=bool)
+        inner[np.searchsorted(self.index, self.first[:-1])] = False
+        inner[np.searchsorted(self.index, self.first[1:] - 1)] = False
+        at = self.index[inner]
+        return self._in_place(at, self.values[at] > self.values[at - 1])
+
+    def that_count(self, threshold: FloatArray, sideways: _Sideways | None, tall: float) -> Turns:
+        """Pick those where a rise of at least a threshold turns into such a fall or back.
+
+        Args:
+            threshold: for every piece, shape (pieces,).
+            sideways: for tangent angles; a rise then counts too where the curve stands `tall` off its chord halfway.
+        """
+        index, values = self.index, self.values[self.index]
+        fresh = np.zeros(len(index), dtype=bool)
+        fresh[np.searchsorted(index, self.first[:-1])] = True
+        limit = threshold[np.cumsum(fresh) - 1]
+        found: list[int] = []
+        tops: list[bool] = []
+        direction, high, low, start, high_at, low_at, start_at = 0, 0.0, 0.0, 0.0, 0, 0, 0
+        rows = zip(index.tolist(), values.tolist(), limit.tolist(), fresh.tolist(), strict=True)
+        for at, value, least, new in rows:
+            if new:
+                direction, high, low, start, high_at, low_at, start_at = 0, value, value, value, at, at, at
+                continue
+            if direction >= 0 and value > high:
+                high, high_at = value, at
+            if direction <= 0 and value < low:
+                low, low_at = value, at
+            if direction >= 0 and (high - value >= least or (sideways and sideways.height(high_at, at) >= tall)):
+                if direction or high - start >= least or (sideways and sideways.height(start_at, high_at) >= tall):
+                    found.append(high_at)
+                    tops.append(True)
+                direction, low, low_at = -1, value, at
+            elif direction <= 0 and (value - low >= least or (sideways and sideways.height(low_at, at) >= tall)):
+                if direction or start - low >= least or (sideways and sideways.height(start_at, low_at) >= tall):
+                    found.append(low_at)
+                    tops.append(False)
+                direction, high, high_at = 1, value, at
+        return self._in_place(np.array(found, dtype=np.intp), np.array(tops, dtype=bool))

@@ -7,9 +7,11 @@ from itertools import pairwise
 import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
-from geometry.bspline import Spline, bezier_evaluate
+from geometry.bspline import Spline, bezier_chord_error, bezier_evaluate
 
 __all__ = ["Source", "cross", "cut", "sample", "straight", "turned_to_corner", "turning"]
+
+_MOST = 32  # samples a span
 
 
 @dataclass(frozen=True, eq=False)
@@ -51,6 +53,24 @@ class Source:
             self.curvature[chosen], np.repeat(np.arange(len(count)), count), np.concatenate([[0], np.cumsum(count)]),
             self.low[pieces], self.high[pieces], self.spans[pieces], self.degree, self.periodic,
         )  # fmt: skip
+
+    def picked(self, chosen: IntArray) -> "Source":
+        """Return the source with some of its samples only, ascending, the first and last of every piece among them."""
+        piece = self.piece[chosen]
+        first = np.concatenate([[0], np.cumsum(np.bincount(piece, minlength=len(self.low)))])
+        return Source(
+            self.along[chosen], self.point[:, chosen], self.tangent[:, chosen], self.bend[:, chosen],
+            self.curvature[chosen], piece, first, self.low, self.high, self.spans, self.degree, self.periodic,
+        )  # fmt: skip
+
+    def few(self, number: int) -> IntArray:
+        """Return about `number` samples of every piece, evenly in their order; all where there are not that many."""
+        count = np.diff(self.first)
+        stride = np.maximum(count // number, 1)[self.piece]
+        order = np.arange(len(self.along)) - self.first[self.piece]
+        chosen = order % stride == 0
+        chosen[self.first[1:] - 1] = True
+        return np.flatnonzero(chosen)
 
     @property
     def lengths(self) -> FloatArray:
@@ -133,25 +153,33 @@ def cut(spline: Spline) -> list[Spline]:
     return pieces
 
 
-def sample(spline: Spline, per_span: int) -> Source:
-    """Sample a spline: `per_span` samples a span from its start on, and the end of every piece.
+def sample(spline: Spline, least: int, turn: float = 0.1) -> Source:
+    """Sample a spline, each span from its start on, and the end of every piece.
 
     Places where the curve stands still take the tangent of the chord to the next sample.
+
+    Args:
+        least: samples a span.
+        turn: radians from one sample to the next, about; spans that turn more get more samples, up to 32.
     """
     corners = spline.corner_breaks
     periodic = spline.closed and spline.smooth_seam and not corners.size
     spans = np.diff(np.concatenate([[0], corners, [len(spline.spans)]]))
-    t = np.arange(per_span) / per_span
     b, width = spline.beziers, np.diff(spline.breaks)
-    values = [bezier_evaluate(b[:, None], t[None, :], r) / (width[:, None, None] ** r) for r in range(3)]
-    columns = [v.reshape(-1, v.shape[-1]) for v in values]
+    legs = np.linalg.norm(np.diff(b, axis=1), axis=-1).sum(axis=1)
+    turns = 8.0 * bezier_chord_error(b) / np.maximum(legs, 1e-300)  # radians, about
+    number = np.clip(np.ceil(turns / turn), least, max(least, _MOST)).astype(np.intp)
     last = np.cumsum(spans)  # one past the last span of each piece
+    count = np.add.reduceat(number, last - spans) + (0 if periodic else 1)
+    shown = np.cumsum(number)
+    t = (np.arange(shown[-1]) - np.repeat(shown - number, number)) / np.repeat(number, number)
+    each, wide = np.repeat(b, number, axis=0), np.repeat(width, number)[:, None]
+    columns = [bezier_evaluate(each, t, r) / wide**r for r in range(3)]
     if not periodic:
         one = np.ones(len(last))
         ends = [bezier_evaluate(b[last - 1], one, r) / (width[last - 1, None] ** r) for r in range(3)]
-        columns = [np.insert(v, last * per_span, end, axis=0) for v, end in zip(columns, ends, strict=True)]
+        columns = [np.insert(v, shown[last - 1], end, axis=0) for v, end in zip(columns, ends, strict=True)]
     point, slope, second = (np.ascontiguousarray(v.T) for v in columns)
-    count = spans * per_span + (0 if periodic else 1)
     first = np.concatenate([[0], np.cumsum(count)])
     piece = np.repeat(np.arange(len(spans)), count)
     follow = np.diff(point, axis=1, append=point[:, :1])  # at piece ends only used where all else fails
