@@ -74,7 +74,7 @@ def choice_rows(record: FairRecord) -> list[tuple[str, ...]]:
         (
             profile.id,
             choice.form,
-            str(choice.entities),
+            str(choice.entities) + ("" if choice.within_budget else " OVER"),
             "" if choice.least is None else str(math.ceil(choice.least - 1e-9)),
             f"{choice.chord_error:.2g}",
             f"{choice.certified:.3g}" + ("" if choice.within_tolerance else " OUT"),

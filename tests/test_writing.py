@@ -5,7 +5,16 @@ import pytest
 
 from converter.jobs.corners import outline_corners
 from converter.jobs.forms import Search
-from converter.jobs.writing import Writing, beyond_radii, counts_of, economised, least_of, rounded
+from converter.jobs.writing import (
+    Writing,
+    beyond_radii,
+    counts_of,
+    economised,
+    least_of,
+    rounded,
+    rounding_of,
+    sharper_turns,
+)
 from geometry.arcs import ArcChain, full_circle
 from geometry.bspline import Spline
 from geometry.circle import circle_spline
@@ -105,20 +114,63 @@ def test_a_budget_is_kept_with_the_smallest_chord_error(form):
     writing = Writing(form)
     looking = search(rounded_outline())
     usual = looking.best(0.1, writing)
-    budget = counts_of(usual.curve).entities + 6
-    inside = looking.within_budget(budget, writing)
-    assert counts_of(inside.curve).entities <= budget
+    budget = usual.entities + 6
+    inside, reached = looking.within_budget(budget, writing)
+    assert reached
+    assert inside.entities == counts_of(inside.curve).entities <= budget
     assert inside.kept
     assert inside.chord_error <= 0.1 * (1.0 + 1e-9)  # more entities than a tenth of the tolerance takes
     finer = looking._feasible(0.7 * inside.chord_error, writing)
     assert counts_of(finer.curve).entities > budget
 
 
-def test_a_budget_out_of_reach_gives_nothing():
-    assert search().within_budget(4, Writing("arcs")) is None
+def test_a_budget_out_of_reach_gives_the_fewest_entities():
+    looking, writing = search(rounded_outline()), Writing("arcs")
+    fewest, reached = looking.within_budget(4, writing)
+    assert not reached
+    assert fewest.kept
+    usual = looking.best(0.1, writing)
+    assert 4 < fewest.entities < usual.entities
+    assert fewest.chord_error > usual.chord_error
 
 
 def test_rounding_and_slack_are_held_against_the_tolerance():
     result = search(slack=0.2).best(0.1, Writing("arcs", decimals=1))
     assert result.within
-    assert result.deviation.certified + 0.2 + Writing("arcs", decimals=1).rounding <= 1.0
+    assert result.deviation.certified + 0.2 + rounding_of(result.curve, 1) <= 1.0
+
+
+@pytest.mark.parametrize("seed", range(10))
+def test_rounding_moves_no_point_farther_than_its_bound(seed):
+    """Arcs up to three quarters of a circle, whose tops move farther than their ends do."""
+    rng = np.random.default_rng(seed)
+    points, bulges = rng.uniform(-9.0, 9.0, (12, 2)), rng.uniform(-2.4, 2.4, 12)
+    chain, ring = ArcChain(points, bulges, True), full_circle(points[0], 5.0 + rng.uniform())
+    for curve, circle in ((chain, False), (ring, True), (Polyline(points, True), False)):
+        out = rounded(curve, circle, 0)
+        moved = hausdorff(curve, out, 1e-3).measured
+        assert moved <= rounding_of(curve, 0)
+
+
+def test_the_top_of_a_half_circle_moves_farther_than_its_ends():
+    """Ends that move by 0.57 make the radius grow from 4.6 to 5 and lift the centre by 0.4: the top rises by 0.8."""
+    half = ArcChain(np.array([[0.4, -0.4], [9.6, -0.4]]), np.array([-1.0]))
+    assert hausdorff(half, rounded(half, False, 0), 1e-4).measured == pytest.approx(0.8, abs=1e-3)
+    assert 0.8 < rounding_of(half, 0) < 1.3
+
+
+def test_arcs_between_vertices_that_become_one_are_left_out():
+    chain = ArcChain(np.array([[0.0, 0.0], [5.0, 0.0], [5.02, 0.01], [5.0, 5.0]]), np.array([0.0, 0.3, 0.2]))
+    out = rounded(chain, False, 1)
+    assert np.array_equal(out.points, [[0.0, 0.0], [5.0, 0.0], [5.0, 5.0]])
+    assert np.array_equal(out.bulges, [0.0, 0.2])
+
+
+def test_turns_that_rounding_sharpens_are_counted():
+    angle = 2.0 * np.pi * np.arange(90) / 90  # turns of 4 degrees
+    path = Polyline(10.0 * np.stack([np.cos(angle), np.sin(angle)], axis=1), True)
+    limit = np.radians(4.01)
+    assert sharper_turns(path, rounded(path, False, 9), limit) == 0
+    assert sharper_turns(path, rounded(path, False, 1), limit) > 10
+    assert sharper_turns(path, rounded(path, False, 1), None) == 0
+    assert sharper_turns(path, path, np.radians(1.0)) == 0  # rounding is not to blame for what was sharp before

@@ -8,15 +8,16 @@ from pathlib import Path
 import numpy as np
 
 import converter
-from converter.drawing import Drawing, Profile, Written, read_drawing, replace, save, supports
+from converter.drawing import Drawing, Profile, Written, read_drawing, replace, save
 from converter.files import check_output
 from converter.jobs.assess import Assessment, assess
+from converter.jobs.choices import choices, found, not_kept, possible_form
 from converter.jobs.corners import corner_turns, outline_corners
 from converter.jobs.forms import Result, Search
 from converter.jobs.marks import Marks, read_marks
-from converter.jobs.records import ChoiceRecord, DeviationRecord, FairRecord, ProfileRecord
-from converter.jobs.settings import CHORD_SHARE, FairSettings, Stated, stated
-from converter.jobs.writing import Form, Writing, beyond_radii, counts_of, least_of, rounded
+from converter.jobs.records import DeviationRecord, FairRecord, ProfileRecord
+from converter.jobs.settings import CHORD_SHARE, MOST_ROUNDING, FairSettings, Stated, stated
+from converter.jobs.writing import counts_of, least_of, rounded
 from geometry.arrays import FloatArray
 from geometry.deviation import hausdorff
 from geometry.fairness import fairness
@@ -26,8 +27,6 @@ from geometry.signed import deviation_statistics
 __all__ = ["FairSettings", "fair_drawing"]
 
 _WIDTH = 1.0 / 200.0
-_ROUNDING = 0.25  # most of a tolerance that rounding may take
-_PLACES = 3  # of arcs beyond a limit that are named
 
 
 def fair_drawing(
@@ -102,9 +101,9 @@ def _fair_profile(
     pins = marks.in_frame(profile) - origin
     corners, used = outline_corners(outline, need.tolerance, angle, pins, need.pitch)
     marks.used |= used
-    form, said = _possible_form(settings.form, profile, version)
+    form, said = possible_form(settings.form, profile, version)
     writing = lengths.writing_as(form)
-    if writing.rounding > _ROUNDING * need.tolerance:
+    if writing.rounding > MOST_ROUNDING * need.tolerance:
         return _failed(
             profile,
             need,
@@ -112,103 +111,29 @@ def _fair_profile(
             f"{need.tolerance:.3g}; state more of them",
         )
     search = Search(outline, corners, need.tolerance, settings.degree, need.slack)
-    result, reached = _result(search, writing, lengths, settings.budget)
+    result, reached = found(search, writing, lengths, settings.budget)
     if result is None:
         return _failed(profile, need, "no fair curve keeps the tolerance; state a larger one")
-    circle = result.faired.circle is not None
-    curve = rounded(result.curve.moved(origin), circle and form == "arcs", settings.decimals)
+    curve = rounded(result.curve.moved(origin), result.circle, settings.decimals)
     written = replace(drawing, profile, curve, version, settings.decimals)
     record = _record(profile, need, written, result, origin)
     record.least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
     record.within_budget = reached
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
-    record.warnings += _doubts(result, writing, origin, need, settings.budget, reached)
-    record.choices = _choices(search, record, lengths, settings, profile, version)
+    record.warnings += _doubts(result, need)
+    record.warnings += not_kept(result, curve, writing, origin, None if reached else settings.budget)
+    record.choices = choices(search, record, form, lengths, settings, profile, version)
     return record
 
 
-def _result(search: Search, writing: Writing, lengths: Stated, budget: int | None) -> tuple[Result | None, bool]:
-    """Return the curve to write, and whether it keeps the budget."""
-    chord_error = lengths.chord_error_for(search.tolerance)
-    if budget is None:
-        return search.best(chord_error, writing), True
-    inside = search.within_budget(budget, writing)
-    return (inside, True) if inside is not None else (search.best(chord_error, writing), False)
-
-
-def _doubts(
-    result: Result, writing: Writing, origin: FloatArray, need: Assessment, budget: int | None, reached: bool
-) -> list[str]:
+def _doubts(result: Result, need: Assessment) -> list[str]:
     """Return what a person has to know about a curve."""
     said = []
     if result.crosses:
         said.append("the curve crosses or touches itself: two walls are closer than the tolerance")
     if need.jaggedness is not None and need.jaggedness.kind == "stations":
         said.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
-    if not reached:
-        said.append(
-            f"a budget of {budget} entities is not reached within the tolerance: "
-            f"{counts_of(result.curve).entities} are written; state more of them or a larger tolerance"
-        )
-    beyond = beyond_radii(result.curve, writing)
-    if beyond:
-        low = "" if writing.least_radius is None else f" from {writing.least_radius:.4g}"
-        high = "" if writing.most_radius is None else f" to {writing.most_radius:.4g}"
-        places = ", ".join(
-            f"{radius:.4g} near ({point[0] + origin[0]:.4g}, {point[1] + origin[1]:.4g})"
-            for radius, point in beyond[:_PLACES]
-        )
-        more = f" and {len(beyond) - _PLACES} more" if len(beyond) > _PLACES else ""
-        said.append(f"radii{low}{high} are not kept within the tolerance: {places}{more}")
     return said
-
-
-def _choices(
-    search: Search, record: ProfileRecord, lengths: Stated, settings: FairSettings, profile: Profile, version: str
-) -> list[ChoiceRecord]:
-    """Return what every form that was asked for takes, the written one first."""
-    if not settings.also:
-        return []
-    assert record.deviation is not None
-    assert record.chord_error is not None
-    choices = [
-        ChoiceRecord(
-            settings.form,
-            record.entities,
-            record.least,
-            record.chord_error,
-            record.deviation.certified,
-            record.within_tolerance,
-        )
-    ]
-    for other in settings.also:
-        form, _ = _possible_form(other, profile, version)
-        if form != other:
-            continue
-        writing = lengths.writing_as(form)
-        result, _ = _result(search, writing, lengths, settings.budget)
-        if result is not None:
-            least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
-            entities = _entities(result, form)
-            certified = result.deviation.certified + search.slack + writing.rounding
-            choices.append(ChoiceRecord(form, entities, least, result.chord_error, certified, result.within))
-    return choices
-
-
-def _entities(result: Result, form: Form) -> int:
-    return counts_of(result.curve, result.faired.circle is not None and form == "arcs").entities
-
-
-def _possible_form(form: Form, profile: Profile, version: str) -> tuple[Form, list[str]]:
-    """Return the form that the version and the profile allow, and what has to be said about it."""
-    if profile.dimension == 3 and form == "arcs":
-        form, said = "spline", ["arcs lie in a plane and this profile does not: written as a spline"]
-    else:
-        said = []
-    if form == "spline" and not supports(version, "SPLINE"):
-        form = "arcs" if profile.dimension == 2 else "lines"
-        said.append(f"DXF {version} has no SPLINE: written as {form}")
-    return form, said
 
 
 def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
@@ -256,9 +181,7 @@ def _jaggedness(need: Assessment) -> dict[str, float | str] | None:
     return {"kind": need.jaggedness.kind, "size": need.jaggedness.size, "recommended": need.jaggedness.tolerance}
 
 
-def _record(
-    profile: Profile, need: Assessment, written: Written, result: Result, origin: FloatArray
-) -> ProfileRecord:
+def _record(profile: Profile, need: Assessment, written: Written, result: Result, origin: FloatArray) -> ProfileRecord:
     """Return the record of a faired profile; the certificate is of the curve as the file will hold it."""
     outline, curve, tolerance = need.outline, written.curve, need.tolerance
     assert outline is not None

@@ -5,7 +5,8 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from converter.jobs.writing import Writing, Written, counts_of, economised
+from converter.jobs.writing import Writing, Written, counts_of, economised, rounding_of
+from geometry.arcs import ArcChain
 from geometry.corners import Corners
 from geometry.deviation import TwoSided, hausdorff
 from geometry.fairing import Faired, fair_outline
@@ -47,6 +48,16 @@ class Result:
     def kept(self) -> bool:
         """Whether nothing speaks against writing it."""
         return self.within and not self.crosses
+
+    @property
+    def circle(self) -> bool:
+        """Whether it is written as a CIRCLE."""
+        return self.faired.circle is not None and isinstance(self.curve, ArcChain)
+
+    @property
+    def entities(self) -> int:
+        """The number that a budget limits."""
+        return counts_of(self.curve, self.circle).entities
 
 
 class Search:
@@ -97,7 +108,7 @@ class Search:
                     return result
         return best
 
-    def within_budget(self, budget: int, writing: Writing) -> Result | None:
+    def within_budget(self, budget: int, writing: Writing) -> tuple[Result | None, bool]:
         """Return the curve with the smallest chord error that takes no more entities than a budget.
 
         The chord error is found to within a few per cent: it is raised from a tenth of the tolerance, or lowered, until
@@ -105,29 +116,33 @@ class Search:
         steadily, so a smaller chord error that happens to do may be missed.
 
         Returns:
-            None where the whole tolerance does not reach the budget.
+            The curve and True; where the whole tolerance does not reach the budget, the curve with the fewest entities
+            that was found and False; None and False where no curve keeps the tolerance.
         """
         inside: Result | None = None
+        fewest: Result | None = None
         outside = 0.0  # the largest chord error known to take too many
 
         def tried(chord_error: float) -> bool:
-            nonlocal inside, outside
+            nonlocal inside, fewest, outside
             result = self._feasible(chord_error, writing)
-            if result is not None and counts_of(result.curve).entities <= budget:
+            if result is not None and result.entities <= budget:
                 inside = result
                 return True
             outside = max(outside, chord_error)
+            if result is not None and (fewest is None or result.entities < fewest.entities):
+                fewest = result
             return False
 
         if tried(_COARSE[0] * self.tolerance):
             any(not tried(share * self.tolerance) for share in _FINE)
         else:
             any(tried(share * self.tolerance) for share in _COARSE[1:])
-        if inside is None or outside == 0.0:
-            return inside
-        for _ in range(_HALVINGS):
+        if inside is None:
+            return fewest, False
+        for _ in range(_HALVINGS if outside > 0.0 else 0):
             tried(float(np.sqrt(inside.chord_error * outside)))
-        return inside
+        return inside, True
 
     def _feasible(self, chord_error: float, writing: Writing) -> Result | None:
         """Return a curve with just this chord error that keeps the tolerance, or None."""
@@ -151,7 +166,7 @@ class Search:
         if curve is None:
             return None
         deviation = hausdorff(self.outline, curve, _WIDTH * self.tolerance)
-        within = deviation.certified + self.slack + writing.rounding <= self.tolerance
+        within = deviation.certified + self.slack + rounding_of(curve, writing.decimals) <= self.tolerance
         crosses = within and self.outline.dimension == 2 and self._crosses(curve)
         return Result(curve, faired, chord_error, deviation, within, crosses)
 

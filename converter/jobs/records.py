@@ -34,6 +34,7 @@ class ChoiceRecord:
         chord_error: share of the tolerance that was spent on it, drawing units.
         certified: proven distance to the given outline.
         within_tolerance: whether that keeps the tolerance.
+        within_budget: whether the number keeps the budget.
     """
 
     form: str
@@ -42,6 +43,7 @@ class ChoiceRecord:
     chord_error: float
     certified: float
     within_tolerance: bool
+    within_budget: bool
 
 
 @dataclass(slots=True)

@@ -8,9 +8,10 @@ from converter.errors import LengthError, SettingsError
 from converter.jobs.writing import Form, Writing
 from converter.units import Length
 
-__all__ = ["CHORD_SHARE", "FairSettings", "Stated", "stated"]
+__all__ = ["CHORD_SHARE", "MOST_ROUNDING", "FairSettings", "Stated", "stated"]
 
 CHORD_SHARE = 0.1  # of the tolerance, when no chord error is stated
+MOST_ROUNDING = 0.25  # of the tolerance
 _OF_FORM = {
     "on_curve": "lines",
     "max_step": "lines",
@@ -141,6 +142,15 @@ def stated(settings: FairSettings, drawing: Drawing) -> Stated:
         most,
         settings.decimals,
     )
+    if tolerance is not None and writing.rounding > MOST_ROUNDING * tolerance:
+        raise SettingsError(
+            f"{settings.decimals} decimals move points by up to {writing.rounding:.3g}, too much for a tolerance of "
+            f"{settings.tolerance}; state more of them"
+        )
+    if writing.step is not None and writing.step <= 0.0:
+        raise SettingsError(
+            f"{settings.decimals} decimals are too few for a longest step of {settings.max_step}; state more of them"
+        )
     return Stated(tolerance, chord_error, writing)
 
 

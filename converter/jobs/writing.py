@@ -11,7 +11,19 @@ from geometry.bspline import Spline
 from geometry.errors import GeometryError
 from geometry.polyline import Polyline
 
-__all__ = ["Counts", "Form", "Writing", "Written", "beyond_radii", "counts_of", "economised", "least_of", "rounded"]
+__all__ = [
+    "Counts",
+    "Form",
+    "Writing",
+    "Written",
+    "beyond_radii",
+    "counts_of",
+    "economised",
+    "least_of",
+    "rounded",
+    "rounding_of",
+    "sharper_turns",
+]
 
 Form = Literal["spline", "arcs", "lines"]
 Written = Spline | ArcChain | Polyline
@@ -40,8 +52,13 @@ class Writing:
 
     @property
     def rounding(self) -> float:
-        """How far rounding may move a point of the plane or of space: half a unit in each coordinate."""
+        """How far rounding may move a vertex or a control point, in the plane or in space: half a unit a coordinate."""
         return 0.0 if self.decimals is None else 0.5 * 3.0**0.5 * 10.0**-self.decimals
+
+    @property
+    def step(self) -> float | None:
+        """Longest segment before rounding, so that none is longer than `max_step` after it."""
+        return None if self.max_step is None else self.max_step - 2.0 * self.rounding
 
 
 @dataclass(frozen=True, slots=True)
@@ -85,13 +102,11 @@ def economised(
         if writing.form == "arcs":
             from geometry.economy.arcs import fewest_arcs
 
-            return fewest_arcs(
-                spline, chord_error, least_radius=writing.least_radius, most_radius=writing.most_radius
-            )
+            return fewest_arcs(spline, chord_error, least_radius=writing.least_radius, most_radius=writing.most_radius)
         if writing.form == "lines":
             from geometry.economy.lines import fewest_vertices
 
-            return fewest_vertices(spline, chord_error, writing.on_curve, writing.max_step, writing.max_turn)
+            return fewest_vertices(spline, chord_error, writing.on_curve, writing.step, writing.max_turn)
         from geometry.economy.knots import fewest_knots
 
         return fewest_knots(spline, chord_error)
@@ -103,7 +118,7 @@ def rounded(curve: Written, circle: bool, decimals: int | None) -> Written:
     """Return a curve with the coordinates of its vertices or control points rounded; bulges and knots stay in full.
 
     Equal points are rounded alike, so corners stay corners and closed curves stay closed. Of a circle centre and
-    radius are rounded; vertices that fall on one another become one.
+    radius are rounded; neighbouring vertices that fall on one another become one.
 
     Args:
         curve: in the coordinates it is written in.
@@ -120,13 +135,54 @@ def rounded(curve: Written, circle: bool, decimals: int | None) -> Written:
         chain = full_circle(np.round(curve.points.mean(axis=0), decimals), round(radius, decimals))
         return chain if curve.bulges[0] > 0.0 else chain.reversed()
     points = np.round(curve.points, decimals)
-    if isinstance(curve, ArcChain):
-        return ArcChain(points, curve.bulges, curve.closed)
     after = np.roll(points, -1, axis=0)
     apart = (points != after).any(axis=1)
     if not curve.closed:
         apart[-1] = True
+    if isinstance(curve, ArcChain):
+        return ArcChain(points[apart], curve.bulges[apart[: len(curve.bulges)]], curve.closed)
     return Polyline(points[apart], curve.closed)
+
+
+def rounding_of(curve: Written, decimals: int | None) -> float:
+    """Return a bound on how far `rounded` moves any point of a curve.
+
+    Each coordinate of a vertex or control point moves by half a unit u at most, so the point by u sqrt(d) in d
+    dimensions. Points of a side or of a spline are averages of those and move no farther. A point P of an arc from A to
+    B is A + (B - A) w with a complex w that the bulge b fixes, so it moves by at most |w| + |1 - w| times that, which
+    is (PA + PB) / AB. By the law of sines that sum is largest where both are equal, at the top of the arc, b AB / 2
+    over the chord: sqrt(1 + b^2). A whole circle moves by u sqrt(2) with its centre and by u with its radius. Where
+    vertices become one the same holds, for then A and B are the same point.
+    """
+    if decimals is None:
+        return 0.0
+    unit = 0.5 * 10.0**-decimals
+    if not isinstance(curve, ArcChain):
+        return float(unit * curve.dimension**0.5)
+    bend = float(np.abs(curve.bulges).max(initial=0.0))
+    return unit * max(1.0 + 2.0**0.5, float(np.sqrt(2.0 * (1.0 + bend * bend))))
+
+
+def sharper_turns(before: Written, after: Written, max_turn: float | None) -> int:
+    """Count how many more vertices turn by more than a limit after rounding than before.
+
+    Args:
+        before, after: as found and as written; only polylines have vertices that turn.
+        max_turn: radians; None counts nothing.
+    """
+    if max_turn is None or not isinstance(before, Polyline) or not isinstance(after, Polyline):
+        return 0
+    sharp = [int((np.abs(_turns(path)) > max_turn * (1.0 + 1e-6)).sum()) for path in (before, after)]
+    return max(0, sharp[1] - sharp[0])
+
+
+def _turns(path: Polyline) -> FloatArray:
+    """Return the angle between the sides that meet at each vertex, 0 to pi, the ends of an open path left out."""
+    points = path.path()
+    edges = np.diff(np.vstack([points, points[1:2]]) if path.closed else points, axis=0)
+    edges /= np.linalg.norm(edges, axis=1)[:, None]
+    halves = np.linalg.norm(np.diff(edges, axis=0), axis=1)
+    return 2.0 * np.arcsin(np.clip(0.5 * halves, 0.0, 1.0))
 
 
 def counts_of(curve: Written, circle: bool = False) -> Counts:
