@@ -6,7 +6,16 @@ from typing import Any
 from converter.drawing import AnyCurve, Drawing
 from geometry.signed import Course
 
-__all__ = ["CompareRecord", "Compared", "Comparison", "Limits", "PairDeviation", "PairRecord", "Transform", "ZoneRecord"]
+__all__ = [
+    "CompareRecord",
+    "Compared",
+    "Comparison",
+    "Limits",
+    "PairDeviation",
+    "PairRecord",
+    "Transform",
+    "ZoneRecord",
+]
 
 
 @dataclass(frozen=True, slots=True)
@@ -16,7 +25,7 @@ class Limits:
     Attributes:
         plus: largest deviation outside (closed) or left of (open) OLD, > 0.
         minus: largest deviation inside or right of it, > 0.
-        stated: the tolerance as it was stated, for people: "+-0.2 mm" or "profile zone 0.4 mm, shifted 0.1 mm outwards".
+        stated: the tolerance as it was stated, for people: "+-0.2 mm" or "profile zone 0.4 mm, shifted 0.1 mm out".
     """
 
     plus: float
