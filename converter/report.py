@@ -156,7 +156,7 @@ def fair_sentence(record: FairRecord) -> str:
         parts.append(f"certified deviation at most {worst.deviation.certified:.3g} of {worst.tolerance:.3g}{unit}")
     unfit = [p.id for p in record.profiles if p.left_as_drawn is not None and not p.within_tolerance]
     if unfit:
-        parts.append(f"no fair curve found for {', '.join(unfit)}")
+        parts.append(f"could not be faired as asked: {', '.join(unfit)}")
     out = [p.id for p in faired if not p.within_tolerance]
     parts.append(f"out of tolerance: {', '.join(out)}" if out else "none out of tolerance")
     over = [p.id for p in faired if not p.within_budget]

@@ -111,7 +111,10 @@ def test_three_decimals_far_from_the_origin_are_certified_as_they_are_read_back(
 
 def test_too_few_decimals_for_the_tolerance_leave_the_profile_and_say_so(folder, capsys):
     assert fair(*OUT, "--decimals", 0) == 1
-    assert "state more of them" in capsys.readouterr().out
+    printed = capsys.readouterr().out
+    assert printed.count("left as drawn: 0 decimals") == 1  # told once
+    assert "state more of them" in printed
+    assert f"could not be faired as asked: {only(folder)['id']}" in printed
     assert only(folder)["left_as_drawn"].startswith("0 decimals move points by up to")
 
 

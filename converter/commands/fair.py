@@ -252,11 +252,11 @@ def _print(record: "FairRecord") -> None:
     _print_rows(CHOICE_HEADINGS, choice_rows(record), right=CHOICE_HEADINGS[2:])
     told: dict[str, list[str]] = {}
     for profile in record.profiles:
-        if profile.left_as_drawn is None:
-            reason = f"tolerance {profile.tolerance:.4g}: {profile.tolerance_reason}"
-        else:
-            reason = f"left as drawn: {profile.left_as_drawn}"
-        told.setdefault(reason, []).append(profile.id)
+        drawn = profile.left_as_drawn
+        if drawn is None:
+            told.setdefault(f"tolerance {profile.tolerance:.4g}: {profile.tolerance_reason}", []).append(profile.id)
+        elif not any(drawn in warning for warning in profile.warnings):  # which say it themselves
+            told.setdefault(f"left as drawn: {drawn}", []).append(profile.id)
         for warning in profile.warnings:
             told.setdefault(warning, []).append(profile.id)
     for line, ids in told.items():

@@ -29,15 +29,16 @@ _WAYS = (
     ("even", 6.0),
     ("even", 8.0),
     ("even", 11.0),
-    ("need", 3.0),
     ("bends", 1.0),
+    ("need", 3.0),
     ("bends", 0.5),
     ("finest", 0.5),
     ("finest", 0.2),
 )  # tried in turn until a piece is near enough and fair: equal spans; a straight line; knots as the chord error, or a
 # part of it, asks for them, thinned; knots on the bends of the curvature, thinned; the same where nothing is found yet
+_LONG = 40  # spans from which on a piece that is less fair than the source is mended where it is
 _SWOLLEN = 1.2  # times the spans before mending, over which other ways are tried all the same
-_MUCH = 2.0  # times the control points of a result that is poorer in fairness that a fair one may cost
+_TIMES, _MORE = 2.0, 20  # control points that a fair piece may have: times those of a poorer one, or so many more
 
 
 def fewest_knots(spline: Spline, chord_error: float) -> Spline:
@@ -49,9 +50,9 @@ def fewest_knots(spline: Spline, chord_error: float) -> Spline:
     knot, at a knot of the result; one that has corners begins at its first corner.
 
     No piece gets more curvature extrema or more inflections than it had, as `geometry.economy.spline_shape` counts
-    them (degree 2: inflections only, for its curvature jumps; 3-D: extrema only). Where that cannot be had for less
-    than twice the control points, bends to the other side are let pass that turn less than 1 degree and stand off by
-    less than a fifth of the chord error, and extrema that rise or fall by less than a tenth of the piece's range of
+    them (degree 2: inflections only, for its curvature jumps; 3-D: extrema only). Where that takes more than twice the
+    control points, and over 20 more, bends to the other side are let pass that turn less than 1 degree and stand off
+    by less than a fifth of the chord error, and extrema that rise or fall by less than a tenth of the piece's range of
     curvature. A piece for which nothing shorter is found comes back as it was.
 
     Args:
@@ -134,11 +135,13 @@ class _Found:
         """Return the spline to write for every piece."""
         out = []
         for at, given in enumerate(self._old):
-            best, cost = given, 1.0
-            for kept in (self._fair, self._poorer[False], self._poorer[True]):
-                if at in kept and cost * len(kept[at].control) < len(best.control):
-                    best = kept[at]
-                cost = _MUCH if best is not given else 1.0
+            best = given
+            if at in self._fair and len(self._fair[at].control) < len(given.control):
+                best = self._fair[at]
+            for kept in self._poorer.values():
+                if at in kept:
+                    few = len(kept[at].control)
+                    best = kept[at] if len(best.control) > max(_TIMES * few, few + _MORE) else best
             out.append(best)
         return out
 
@@ -158,7 +161,8 @@ def _try(found: _Found, checker: Checker, way: str, amount: float, waiting: Bool
     part = source.only(tried)
     checked = checker.check(tried, used, state)
     found.take(tried, state, checked)
-    again = checked.hopeful & (~checked.near | checked.verdict.worse)
+    before = number_of_spans(part, state)
+    again = checked.hopeful & (before < part.spans) & (~checked.near | (checked.verdict.worse & (before >= _LONG)))
     if way == "even" or not again.any():
         return
     here = again[part.piece]
@@ -170,5 +174,5 @@ def _try(found: _Found, checker: Checker, way: str, amount: float, waiting: Bool
         chosen = tried.copy()
         chosen[np.flatnonzero(tried)[~again]] = False
         found.take(chosen, mended, checker.check(chosen, rest, mended))
-        before, after = number_of_spans(part, state)[again], number_of_spans(rest, mended)
-        found.waiting[np.flatnonzero(chosen)[after > _SWOLLEN * before]] = True
+        swollen = number_of_spans(rest, mended) > _SWOLLEN * before[again]
+        found.waiting[np.flatnonzero(chosen)[swollen]] = True

@@ -12,7 +12,7 @@ import numpy as np
 from scipy.linalg.lapack import dpbsv
 
 from geometry.arrays import FloatArray, IntArray
-from geometry.economy.spline_source import Source, cross
+from geometry.economy.spline_source import Source, bending, runs_of
 
 __all__ = ["Basis", "Bend", "Fit", "measure", "solve"]
 
@@ -139,7 +139,7 @@ class Fit:
     def curvature(self, u: FloatArray) -> FloatArray:
         """Return the curvature at parameters u, shape (n,), signed in 2-D."""
         _, slope, second = self.at(*self.basis.locate(u))
-        return cross(slope, second) / np.maximum((slope * slope).sum(axis=0), 1e-200) ** 1.5
+        return bending(slope, second)
 
 
 @dataclass(frozen=True, eq=False)
@@ -167,13 +167,14 @@ def solve(
         bend: if given, second derivatives are fitted too.
     """
     span, t = basis.locate(u)
-    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    runs = runs_of(span)
     there = span[runs]
-    sums = _normal(source, runs, t, weight, slide, source.point, basis.matrix[there])
+    sums = _normal(source, runs, t, weight, slide, source.point, source.point_along, basis.matrix[there])
     if bend is not None:
         powers = np.arange(2, source.degree + 1)
         second = basis.matrix[there, :, 2:] * (powers * (powers - 1)) / basis.width[there, None, None] ** 2
-        sums = sums + _normal(source, runs, t, bend.weight, 0.0, source.bend * bend.speed**2, second)
+        target = source.bend * bend.speed**2  # square to the tangent
+        sums = sums + _normal(source, runs, t, bend.weight, 0.0, target, np.zeros_like(target), second)
     return _solved(source, basis, there, sums)
 
 
@@ -214,6 +215,7 @@ def _normal(
     weight: FloatArray,
     slide: float,
     target: FloatArray,
+    target_along: FloatArray,
     matrix: FloatArray,
 ) -> FloatArray:
     """Return the share of spans in the normal equations for sum weight |target - value|^2.
@@ -222,6 +224,7 @@ def _normal(
     products of any two basis functions, themselves polynomials, are summed up at once.
 
     Args:
+        target_along: the tangential part of the target, shape (d, n).
         runs: first sample in every span that holds any, shape (r,).
         matrix: powers of t of the basis functions there (or of derivatives of theirs), shape (r, p + 1, q).
 
@@ -233,7 +236,7 @@ def _normal(
     pull = weight * (1.0 - slide)
     form = -pull * source.along_tangent
     form[table.squares] += weight
-    right = weight * target - (pull * (source.tangent * target).sum(axis=0)) * source.tangent
+    right = weight * target - pull * target_along
     cut = most * len(form)
     moments = np.empty((cut + q * d, len(runs)))
     for first in range(0, len(runs), _BLOCK):  # blocks that stay in the cache
@@ -273,15 +276,14 @@ def _solved(source: Source, basis: Basis, there: IntArray, sums: FloatArray) -> 
     if not (np.isfinite(scale) and scale > 0.0):
         return None
     if basis.fixed.size:
-        ends = np.stack([source.first[:-1], source.first[1:] - 1], axis=1).ravel()
-        held = source.point[:, ends].T
+        held = source.ends
         pinned = (basis.order[basis.fixed][:, None] * d + np.arange(d)).ravel()
         ab[0, pinned] += _HOLD * scale
         b[pinned] += _HOLD * scale * held.ravel()
     for ridge in (0.0, 1e-12, 1e-9, 1e-6):
         ab[0] += ridge * scale
         _, x, info = dpbsv(ab, b, lower=1)
-        if info == 0 and np.all(np.isfinite(x)):
+        if info == 0 and np.isfinite(x.sum()):
             break
     else:
         return None

@@ -10,7 +10,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.economy.spline_fit import Basis, Bend, Fit, measure, solve
 from geometry.economy.spline_shape import Guard, Verdict
-from geometry.economy.spline_source import Source
+from geometry.economy.spline_source import Source, runs_of
 from geometry.economy.spline_spacing import least_spans, place_number
 
 __all__ = ["State", "add_where_over", "bent", "halved", "level", "pieces_at", "refit", "remove", "respaced"]
@@ -55,7 +55,7 @@ def level(source: Source, state: State, allowed: FloatArray) -> State | None:
     """Put more weight where the ratio is large, less where it is small, and fit again."""
     span, t = state.fit.basis.locate(state.u)
     half = 2 * span + (t > 0.5)
-    runs = np.flatnonzero(np.diff(half, prepend=-1))
+    runs = runs_of(half)
     peak = np.maximum.reduceat(state.ratio, runs)
     wide = peak.copy()
     wide[1:] = np.maximum(wide[1:], peak[:-1])
@@ -141,7 +141,7 @@ def _need(source: Source, state: State, order: float) -> tuple[FloatArray, IntAr
     """Return the spacing that would make all spans of a fit err by just what is allowed, and the spans it takes."""
     basis = state.fit.basis
     span, _ = basis.locate(state.u)
-    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    runs = runs_of(span)
     peak = np.full(len(basis.start), 1e-4)
     peak[span[runs]] = np.maximum(np.maximum.reduceat(state.ratio, runs), 1e-4)
     share = np.clip(peak, 0.02, 50.0) ** order

@@ -6,14 +6,14 @@ import numpy as np
 
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.economy.spline_fit import Fit
-from geometry.economy.spline_source import Source, cross, turning
+from geometry.economy.spline_source import Source, bending, turning
 
 __all__ = ["Guard", "Turns", "Verdict", "turning_points"]
 
 SMALLEST_TURN = 2e-3  # radians: a bend to the other side that turns less is no inflection
 TURN_LEVELS = (1.0, 4.0, 8.0)
 LEAST_HEIGHT = 0.025  # share of the chord error: a bend that stands off its chord by this counts, whatever its turn
-PROMINENCE = 0.02  # share of a piece's range of curvature: smaller rises and falls are no extrema
+PROMINENCE = 0.018  # share of a piece's range of curvature: less is no extremum; just under that of `geometry.fairness`
 PROMINENCE_LEVELS = (1.0, 5.0)  # a fit with more extrema is let pass in need only while they are small
 
 
@@ -104,9 +104,7 @@ class Guard:
         where = np.zeros(len(u), dtype=bool)
         values: list[FloatArray] = []
         if source.degree > 2:
-            speed = np.sqrt((g1 * g1).sum(axis=0))
-            k = np.clip(cross(g1, g2) / np.maximum(speed, 1e-300) ** 3, -self.limit, self.limit)
-            values.append(k)
+            values.append(np.clip(bending(g1, g2), -self.limit, self.limit))
         if len(source.point) == 2:
             values.append(turning(g1, source.first))
         turns: list[list[Turns]] = []
@@ -159,10 +157,10 @@ class _Check:
             if base is not None:
                 allowed = np.maximum(most, base[level].per_piece(self.first))
             for i in np.flatnonzero(count > allowed).tolist():
-                worse[i] = True
                 last[i] |= level == len(found) - 1
-                if self.curvature and level:
+                if self.curvature and worse[i]:
                     continue  # its places are among those of the first level
+                worse[i] = True
                 a, b = self.first[i : i + 2].tolist()
                 known = own if base is None or allowed[i] == most[i] else base[level]
                 here, there = turns.within(a, b), known.within(a, b)

@@ -9,7 +9,7 @@ import numpy as np
 from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.bspline import Spline, bezier_chord_error, bezier_evaluate
 
-__all__ = ["Source", "cross", "cut", "sample", "straight", "turned_to_corner", "turning"]
+__all__ = ["Source", "bending", "cross", "cut", "runs_of", "sample", "straight", "turned_to_corner", "turning"]
 
 _MOST = 32  # samples a span
 
@@ -84,6 +84,16 @@ class Source:
         return np.stack([self.tangent[i] * self.tangent[j] for i in range(d) for j in range(i, d)])
 
     @cached_property
+    def point_along(self) -> FloatArray:
+        """Tangents times how far the positions lie along them, shape (d, n)."""
+        return np.asarray((self.tangent * self.point).sum(axis=0) * self.tangent)
+
+    @cached_property
+    def ends(self) -> FloatArray:
+        """First and last point of every piece, shape (2 * pieces, d)."""
+        return self.point[:, np.stack([self.first[:-1], self.first[1:] - 1], axis=1).ravel()].T
+
+    @cached_property
     def step(self) -> FloatArray:
         """Length of curve that every sample stands for, shape (n,)."""
         half = np.where(self.piece[1:] == self.piece[:-1], 0.5 * np.diff(self.along), 0.0)
@@ -97,11 +107,25 @@ class Source:
         return step
 
 
+def runs_of(label: IntArray) -> IntArray:
+    """Return where runs of equal labels begin, shape (runs,)."""
+    new = np.empty(len(label), dtype=bool)
+    new[0] = True
+    np.not_equal(label[1:], label[:-1], out=new[1:])
+    return np.flatnonzero(new)
+
+
 def cross(a: FloatArray, b: FloatArray) -> FloatArray:
     """Return the cross product of columns: shape (n,), signed in 2-D, its size in 3-D."""
     if len(a) == 2:
         return a[0] * b[1] - a[1] * b[0]
     return np.linalg.norm(np.cross(a, b, axis=0), axis=0)
+
+
+def bending(slope: FloatArray, second: FloatArray) -> FloatArray:
+    """Return the curvature from first and second derivatives in columns, shape (n,), signed in 2-D; 0 at rest."""
+    speed = np.maximum((slope * slope).sum(axis=0), 1e-200)  # squared
+    return np.asarray(cross(slope, second) / (speed * np.sqrt(speed)))
 
 
 def turning(direction: FloatArray, first: IntArray) -> FloatArray:

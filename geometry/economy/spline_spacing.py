@@ -5,7 +5,7 @@ from scipy.linalg.lapack import dptsv
 
 from geometry.arrays import FloatArray, IntArray
 from geometry.economy.spline_fit import Basis, solve
-from geometry.economy.spline_source import Source
+from geometry.economy.spline_source import Source, runs_of
 
 __all__ = [
     "bend_knots",
@@ -28,7 +28,7 @@ _SLIDE = 0.05  # share of a tangential residual that counts while parameters are
 
 def _span_peaks(basis: Basis, span: IntArray, ratio: FloatArray) -> FloatArray:
     """Return the largest ratio over each span and its neighbours in the same piece, shape (s,)."""
-    runs = np.flatnonzero(np.diff(span, prepend=-1))
+    runs = runs_of(span)
     peak = np.zeros(len(basis.start))
     peak[span[runs]] = np.maximum.reduceat(ratio, runs)
     same = basis.piece[1:] == basis.piece[:-1]

@@ -101,7 +101,7 @@ def by_bends(source: Source, chord_error: float, share: float, graded: bool) -> 
     guard = Guard(source, chord_error)
     inner = bend_knots(source, share * guard.prominence, guard.limit, graded)
     inner = filled(source, spacing(source, _AIM * chord_error), inner)
-    if source.periodic and len(inner) < source.degree + 2:
+    if len(inner) >= source.spans.sum() or (source.periodic and len(inner) < source.degree + 2):
         return source, None
     source = sampled(source, inner, _BEND_SAMPLES)
     allowed = np.full(len(source.along), _AIM * chord_error)
