@@ -48,6 +48,33 @@ def test_auto_leaves_sparse_points_of_a_smooth_curve_and_says_so(tmp_path):
     assert any("taken as the outline" in warning for warning in record.profiles[0].warnings)
 
 
+@pytest.mark.parametrize("tolerance", ["0.2", "0.05"])
+def test_a_tolerance_below_the_steps_is_kept_but_said_to_leave_them(tmp_path, tolerance):
+    record, _ = faired(save_outline(tmp_path / "in.dxf"), tolerance)  # steps of 1; sides of a polygon they are not
+    assert record.profiles[0].left_as_drawn is None
+    assert record.within_tolerance
+    assert any("--tolerance auto would take 0.85: a pixel stair" in told for told in record.profiles[0].warnings)
+    record, _ = faired(tmp_path / "in.dxf", "0.8")
+    assert not any("--tolerance auto" in told for told in record.profiles[0].warnings)
+
+
+def test_more_entities_than_vertices_given_are_pointed_out(tmp_path):
+    source = save_outline(tmp_path / "in.dxf", circle(100.0, count=120))
+    record, _ = faired(source, "1", corner_angle=0.0)
+    assert record.profiles[0].entities > 120
+    assert any("more than the 120 vertices given" in told for told in record.profiles[0].warnings)
+    record, _ = faired(source, "1")
+    assert not any("vertices given" in told for told in record.profiles[0].warnings)
+
+
+def test_a_corner_angle_of_nothing_keeps_every_vertex_in_its_place(tmp_path):
+    points = circle(100.0, (10.0, 20.0), count=120)
+    record, output = faired(save_outline(tmp_path / "in.dxf", points), "1", corner_angle=0.0, form="lines")
+    written = np.array(entity(output, record.profiles[0].id).get_points("xy"))
+    assert np.abs(np.linalg.norm(written[:, None] - points[None], axis=2).min(axis=1)).max() < 1e-12
+    assert len(written) == 120
+
+
 @pytest.mark.parametrize(
     ("text", "units", "override", "expected"),
     [("1", 4, None, 1.0), ("0.05in", 4, None, 1.27), ("1mm", 5, None, 0.1), ("1mm", 0, "mm", 1.0), ("2", 0, None, 2.0)],

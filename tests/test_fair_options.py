@@ -118,6 +118,21 @@ def test_too_few_decimals_for_the_tolerance_leave_the_profile_and_say_so(folder,
     assert only(folder)["left_as_drawn"].startswith("0 decimals move points by up to")
 
 
+def test_the_degree_is_of_splines_alone(folder):
+    counted = []
+    for degree in (2, 3):
+        assert fair(*OUT, "--as", "spline", "--as", "arcs", "--degree", degree) == 0
+        counted.append(only(folder)["choices"])
+    assert counted[0][0]["entities"] != counted[1][0]["entities"]
+    assert counted[0][1] == counted[1][1]
+
+
+def test_a_drawing_is_written_to_a_name_that_says_so(folder, capsys):
+    assert fair("in.dxf", "-o", "out.svg") == 2
+    assert "out.svg: what is written is DXF" in capsys.readouterr().err
+    assert not (folder / "out.svg").exists()
+
+
 def test_a_budget_is_kept_and_its_chord_error_told(folder):
     assert fair(*OUT, "--as", "lines") == 0
     usual = only(folder)

@@ -232,6 +232,8 @@ def _outputs(
     if output is not None:
         if len(drawings) > 1:
             raise click.UsageError("several drawings need --out-dir DIR in place of -o", context)
+        if output.suffix.lower() != ".dxf":
+            raise click.UsageError(f"{output}: what is written is DXF; give a name that ends in .dxf", context)
         return [output]
     assert out_dir is not None
     names = [drawing.name for drawing in drawings]

@@ -69,7 +69,7 @@ def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessmen
             return Assessment(outline, 0.0, None, "hardly larger than the tolerance: check the units", as_drawn=True)
         return Assessment(outline, tolerance, None, "as stated", slack=slack)
     found = estimate(outline)
-    if is_clean_polygon(outline, tolerance if tolerance is not None else found.tolerance):
+    if is_clean_polygon(outline, max(tolerance or 0.0, found.tolerance)):  # steps of a trace are sides of no polygon
         return Assessment(outline, 0.0, found, "a clean polygon: every vertex is a corner", as_drawn=True)
     if tolerance is not None:
         if _is_small(outline, tolerance):

@@ -27,6 +27,8 @@ from geometry.signed import deviation_statistics
 __all__ = ["FairSettings", "fair_drawing"]
 
 _WIDTH = 1.0 / 200.0
+_FEW = 30  # entities: no more need be said of how many they are
+_SHORT = 0.7  # of the recommended tolerance: one that is smaller leaves jaggedness in the curve
 
 
 def fair_drawing(
@@ -120,19 +122,29 @@ def _fair_profile(
     record.least = least_of(result.faired.spline, result.faired.circle, result.chord_error, writing)
     record.within_budget = reached
     record.warnings += [*said, *(f"not kept: {line}" for line in written.lost)]
-    record.warnings += _doubts(result, need)
+    record.warnings += _doubts(result, need, record)
     record.warnings += not_kept(result, curve, writing, origin, None if reached else settings.budget)
     record.choices = choices(search, record, form, lengths, settings, profile, version)
     return record
 
 
-def _doubts(result: Result, need: Assessment) -> list[str]:
+def _doubts(result: Result, need: Assessment, record: ProfileRecord) -> list[str]:
     """Return what a person has to know about a curve."""
     said = []
     if result.crosses:
         said.append("the curve crosses or touches itself: two walls are closer than the tolerance")
     if need.jaggedness is not None and need.jaggedness.kind == "stations":
         said.append(f"{need.jaggedness.reason}, yet they were taken as the outline")
+    if need.jaggedness is not None and need.tolerance < _SHORT * need.jaggedness.tolerance:
+        said.append(
+            f"{need.tolerance:.4g} is too little to take out the jaggedness, which stays in the curve; --tolerance "
+            f"auto would take {need.jaggedness.tolerance:.4g}: {need.jaggedness.reason}"
+        )
+    elif record.entities > max(record.vertices_in, _FEW):
+        said.append(
+            f"{record.entities} entities are more than the {record.vertices_in} vertices given; a larger tolerance or "
+            "chord error takes fewer"
+        )
     return said
 
 

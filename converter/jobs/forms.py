@@ -70,13 +70,13 @@ class Search:
             outline: cleaned, the profile as a polyline.
             corners: where the tangent may jump.
             tolerance: largest distance between profile and curve, both ways, drawing units.
-            degree: of splines, 2 or 3.
+            degree: of splines, 2 or 3; arcs and lines always stand for a cubic one.
             slack: bound on what comes on top of the distance between outline and curve, drawing units: the distance
                 between outline and profile, and the rounding of what is written.
         """
         self.outline, self.corners, self.tolerance = outline, corners, tolerance
         self.degree, self.slack = degree, slack
-        self._faired: dict[float, Faired] = {}
+        self._faired: dict[tuple[float, int], Faired] = {}
 
     def best(self, chord_error: float, writing: Writing) -> Result | None:
         """Return the curve of a form that keeps the tolerance, certified; the best one found where none does.
@@ -94,7 +94,7 @@ class Search:
         """
         best: Result | None = None
         parts = (*_ECONOMY, 0.0) if writing.form == "spline" else _ECONOMY
-        for faired in self._careful():
+        for faired in self._careful(writing):
             for part in parts:
                 result = self._result(faired, part * chord_error, writing)
                 if result is None:
@@ -146,20 +146,22 @@ class Search:
 
     def _feasible(self, chord_error: float, writing: Writing) -> Result | None:
         """Return a curve with just this chord error that keeps the tolerance, or None."""
-        for faired in self._careful():
+        for faired in self._careful(writing):
             result = self._result(faired, chord_error, writing)
             if result is not None and result.kept:
                 return result
         return None
 
-    def _careful(self) -> Iterator[Faired]:
+    def _careful(self, writing: Writing) -> Iterator[Faired]:
         """Yield fair curves in ever narrower bands."""
+        degree = self.degree if writing.form == "spline" else 3
         for share in _CAREFUL:
-            if share not in self._faired:
-                self._faired[share] = fair_outline(self.outline, self.corners, share * self.tolerance, self.degree)
-            if self._faired[share].as_given:
+            key = (share, degree)
+            if key not in self._faired:
+                self._faired[key] = fair_outline(self.outline, self.corners, share * self.tolerance, degree)
+            if self._faired[key].as_given:
                 return  # less tolerance would not help
-            yield self._faired[share]
+            yield self._faired[key]
 
     def _result(self, faired: Faired, chord_error: float, writing: Writing) -> Result | None:
         curve = economised(faired.spline, faired.circle, chord_error, writing)

@@ -25,6 +25,7 @@ __all__ = ["Faired", "fair_outline"]
 _CIRCLE = 1e-3  # how near the spline of a circle lies to it
 _CORNER_REACH = 0.97  # a corner may lie this far from the trace
 _SETTLE, _SETTLINGS = 0.5, 3  # a corner may move this far when its sides pull, and how often at most
+_AT_REST = 1e-3  # a pull that would move a corner by less leaves it where it is: a clean polygon keeps its vertices
 _ONE_SIDED = 6.0  # stiffness of the first fits
 _INSERTIONS = 8
 _APART = 8.0  # stretches outside the band nearer than this get one corner between them
@@ -205,7 +206,7 @@ def _settled(trace: Trace, fit: Fit, nodes: Nodes) -> Nodes:
         pull[1:-1], hold[1:-1] = force[1:, 0] + force[:-1, 1], second[1:, 0] + second[:-1, 1]
     move = -pull / np.maximum(hold, 1e-9)[:, None]
     size = np.sqrt((move * move).sum(axis=1))
-    move *= np.minimum(1.0, _SETTLE / np.maximum(size, 1e-12))[:, None]
+    move *= np.where(size < _AT_REST, 0.0, np.minimum(1.0, _SETTLE / np.maximum(size, 1e-12)))[:, None]
     points = nodes.points.copy()
     waiting = ~nodes.fixed
     for share in (1.0, 0.75, 0.5, 0.25):  # as far as the band allows
