@@ -3,14 +3,14 @@
 Let s be the signed distance to the reference, + outside a closed one and left of an open one, beyond whose ends the
 last chord, prolonged, parts left from right. To a closed reference s changes by no more than the distance travelled:
 |s| does so, and s changes sign only on the reference, where it is 0. To an open reference the same holds along a path
-that does not cross one of the prolongations. So along a straight chord of length L whose ends have s = a and s = b, s is at
-most (a + b + L) / 2 and at least (a + b - L) / 2, and |s| at most (|a| + |b| + L) / 2. A chord stays clear of a
-prolongation if both its ends lie behind the end of the reference, or both on one side of its line. Where all that does
-not decide, the chord is halved.
+that does not cross one of the prolongations. So along a straight chord of length L whose ends have s = a and s = b, s
+is at most (a + b + L) / 2 and at least (a + b - L) / 2, and |s| at most (|a| + |b| + L) / 2. A chord stays clear of a
+prolongation if both its ends lie behind the end of the reference, or both on one side of its line. Where all that
+does not decide, the chord is halved.
 
-Both curves are taken as chords within e. |s| is then known to e, and s, whose sign may be wrong where |s| <= e, to 3 e;
-a point of the curve is within e of its chord: 4 e in all. Rounding adds less than 2000 u M, u = 2^-53 and M the largest
-coordinate, as counted in `geometry.deviation`.
+Both curves are taken as chords within e. |s| is then known to e, and s, whose sign may be wrong where |s| <= e, to 3
+e; a point of the curve is within e of its chord: 4 e in all. Rounding adds less than 2000 u M, u = 2^-53 and M the
+largest coordinate, as counted in `geometry.deviation`.
 """
 
 from dataclasses import dataclass
