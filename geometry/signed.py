@@ -18,7 +18,14 @@ from geometry.errors import GeometryError
 from geometry.nearest import SegmentSearch
 from geometry.polyline import polygon_area
 
-__all__ = ["Course", "DeviationStatistics", "deviation_along", "deviation_statistics", "signed_distances"]
+__all__ = [
+    "Course",
+    "DeviationStatistics",
+    "SignedTo",
+    "course_along",
+    "deviation_statistics",
+    "signed_distances",
+]
 
 _U = 2.0**-53
 _SHARE = 1.0 / 400.0  # of the tolerance: the chord error that signed deviations are taken to
@@ -50,7 +57,8 @@ class Course:
     Attributes:
         along: arc length from the start to each sample, shape (n,), drawing units.
         points: the samples, on the curve, shape (n, d).
-        weights: length of the stretch each sample stands for, in the middle of which it lies, shape (n,).
+        weights: length of the stretch each sample stands for, in the middle of which it lies, shape (n,); 0 at vertices
+            and knots.
         deviation: signed in 2-D, unsigned in 3-D, shape (n,), drawing units.
     """
 
@@ -101,55 +109,34 @@ def signed_distances(points: FloatArray, curve: Curve, chord_error: float, cross
     """
     if curve.dimension != 2 or points.shape[1] != 2:
         raise GeometryError("there are no sides in 3 dimensions; measure without sign, or give a planar curve")
-    return _distances(points, curve, chord_error, crossing)
+    return SignedTo(curve, chord_error, crossing)(points)
 
 
 def deviation_statistics(curve: Curve, reference: Curve, tolerance: float) -> DeviationStatistics:
-    """Return how a curve deviates from a reference: + where it lies outside (closed) or left of (open) the reference.
+    """Return the statistics of how a curve deviates from a reference; arguments and errors as `course_along`.
+
+    They come from samples: the certified largest deviation is another matter.
+    """
+    return course_along(curve, reference, tolerance).statistics()
+
+
+def course_along(curve: Curve, reference: Curve, tolerance: float, crossing: bool = False) -> Course:
+    """Return, all along a curve, how far and to which side of a reference it lies: + outside it or left of it.
+
+    Left is that of the reference's own travel, whichever way the curve runs.
 
     Args:
-        curve: polyline, arc chain or spline; samples are taken all along it, each in the middle of its stretch.
+        curve: polyline, arc chain or spline; samples are taken all along it, in the middle of short stretches and at
+            every vertex or knot.
         reference: what it is measured to, of the same dimension.
         tolerance: sets how closely samples follow each other and the chord error (1/400 of it), drawing units, > 0.
-
-    Returns:
-        Statistics weighted by arc length. They come from samples: the certified largest deviation is another matter.
+        crossing: as for `signed_distances`, about the reference.
 
     Raises:
         As `signed_distances`.
     """
     along, points, weights = _samples(curve, reference, tolerance)
-    return Course(along, points, weights, _distances(points, reference, _SHARE * tolerance, False)).statistics()
-
-
-def deviation_along(old: Curve, new: Curve, tolerance: float, crossing: bool = False) -> Course:
-    """Return, all along an old curve, how far and to which side a new one lies: + outside it or left of it.
-
-    The distance is from the sample of the old curve to the nearest point of the new one; the side is that of the new
-    curve as seen from the old. Open curves may run in opposite directions: the new one is taken in that in which its
-    ends are nearer to those of the old one.
-
-    Args:
-        old: polyline, arc chain or spline; samples are taken all along it.
-        new: what it is measured to, of the same dimension.
-        tolerance: as for `deviation_statistics`.
-        crossing: as for `signed_distances`, about the new curve.
-
-    Raises:
-        As `signed_distances`.
-    """
-    along, points, weights = _samples(old, new, tolerance)
-    deviation = _distances(points, new, _SHARE * tolerance, crossing)
-    if old.dimension == 2:
-        deviation = deviation if not new.closed and _opposed(old, new) else -deviation
-    return Course(along, points, weights, deviation)
-
-
-def _opposed(old: Curve, new: Curve) -> bool:
-    p, q = anchors(old), anchors(new)
-    same = np.sum((p[0] - q[0]) ** 2) + np.sum((p[-1] - q[-1]) ** 2)
-    swapped = np.sum((p[0] - q[-1]) ** 2) + np.sum((p[-1] - q[0]) ** 2)
-    return bool(swapped < same)
+    return Course(along, points, weights, SignedTo(reference, _SHARE * tolerance, crossing)(points))
 
 
 def _samples(curve: Curve, other: Curve, tolerance: float) -> tuple[FloatArray, FloatArray, FloatArray]:
@@ -165,40 +152,60 @@ def _samples(curve: Curve, other: Curve, tolerance: float) -> tuple[FloatArray, 
     share = (np.arange(len(chord)) - np.repeat(np.cumsum(parts) - parts, parts) + 0.5) / parts[chord]
     t = chords.low[chord] + share * (chords.high - chords.low)[chord]
     weights = (lengths / parts)[chord]
-    return np.cumsum(weights) - 0.5 * weights, chords.elements.at(chords.element[chord], t), weights
-
-
-def _distances(points: FloatArray, curve: Curve, chord_error: float, crossing: bool) -> FloatArray:
-    """Signed distances in 2-D, plain ones in 3-D."""
-    if not 0.0 < chord_error < np.inf:
-        raise GeometryError(f"a chord error of {chord_error:g} cannot be used; it must be a number above 0")
-    if points.shape[1] != curve.dimension:
-        raise GeometryError(
-            "curves of different dimensions cannot be measured to each other; give both in 2 or both in 3"
-        )
-    defining = anchors(curve)
-    middle = 0.5 * defining.min(axis=0) + 0.5 * defining.max(axis=0)
-    chords = whole_chords(curve, -middle).split(chord_error)
-    long = np.flatnonzero((chords.start != chords.end).any(axis=1))
-    if not long.size:
-        raise GeometryError("the curve to measure to has no length; give one with two distinct points")
-    chords = chords.take(long)
-    local = (points - middle).T.copy()
-    search = SegmentSearch(chords.start.T.copy(), chords.end.T.copy())
-    index, size, _ = search.exact(local)
-    if curve.dimension != 2:
-        return size
-    reach = max(chords.elements.reach, float(np.abs(local).max(initial=0.0)))
-    size[size <= (100.0 + chords.elements.rounding) * _U * reach] = 0.0
-    if curve.closed and crossing:
-        return np.where(_inside(chords, local), -size, size)
-    left, doubtful = _left(search, local, index, curve.closed)
+    alongs, points = np.cumsum(weights) - 0.5 * weights, chords.elements.at(chords.element[chord], t)
+    # ends of edges, arcs and spans stand for no length, but that is where a spike has its tip
+    tip = np.flatnonzero(chords.low == 0.0)
+    row = (np.cumsum(parts) - parts)[tip]
+    before = np.cumsum(lengths) - lengths
+    out = [
+        np.insert(alongs, row, before[tip]),
+        np.insert(points, row, chords.start[tip], axis=0),
+        np.insert(weights, row, 0.0),
+    ]
     if not curve.closed:
-        return np.where(left, size, -size)
-    outside = left != (polygon_area(chords.start) > 0.0)
-    if doubtful.any():
-        outside[doubtful] = ~_inside(chords, local[:, doubtful])
-    return np.where(outside, size, -size)
+        out = [np.append(out[0], total), np.vstack([out[1], chords.end[-1:]]), np.append(out[2], 0.0)]
+    return out[0], out[1], out[2]
+
+
+class SignedTo:
+    """A reference made ready to measure points to: signed distances in 2-D, plain ones in 3-D."""
+
+    def __init__(self, reference: Curve, chord_error: float, crossing: bool = False) -> None:
+        """Prepare a reference; arguments and errors as `signed_distances`, but for the dimension."""
+        if not 0.0 < chord_error < np.inf:
+            raise GeometryError(f"a chord error of {chord_error:g} cannot be used; it must be a number above 0")
+        defining = anchors(reference)
+        self._middle = 0.5 * defining.min(axis=0) + 0.5 * defining.max(axis=0)
+        chords = whole_chords(reference, -self._middle).split(chord_error)
+        long = np.flatnonzero((chords.start != chords.end).any(axis=1))
+        if not long.size:
+            raise GeometryError("the curve to measure to has no length; give one with two distinct points")
+        self._chords = chords.take(long)
+        self._search = SegmentSearch(self._chords.start.T.copy(), self._chords.end.T.copy())
+        self._closed, self._crossing = reference.closed, crossing
+
+    def __call__(self, points: FloatArray) -> FloatArray:
+        """Return the distance of points, shape (n, d), of the reference's dimension; shape (n,), drawing units."""
+        if points.shape[1] != len(self._middle):
+            raise GeometryError(
+                "curves of different dimensions cannot be measured to each other; give both in 2 or both in 3"
+            )
+        chords = self._chords
+        local = (points - self._middle).T.copy()
+        index, size, _ = self._search.exact(local)
+        if len(local) != 2:
+            return size
+        reach = max(chords.elements.reach, float(np.abs(local).max(initial=0.0)))
+        size[size <= (100.0 + chords.elements.rounding) * _U * reach] = 0.0
+        if self._closed and self._crossing:
+            return np.where(_inside(chords, local), -size, size)
+        left, doubtful = _left(self._search, local, index, self._closed)
+        if not self._closed:
+            return np.where(left, size, -size)
+        outside = left != (polygon_area(chords.start) > 0.0)
+        if doubtful.any():
+            outside[doubtful] = ~_inside(chords, local[:, doubtful])
+        return np.where(outside, size, -size)
 
 
 def _left(search: SegmentSearch, points: FloatArray, index: IntArray, closed: bool) -> tuple[BoolArray, BoolArray]:

@@ -8,7 +8,7 @@ from geometry.arcs import ArcChain, full_circle
 from geometry.bspline import Spline
 from geometry.errors import GeometryError
 from geometry.polyline import Polyline
-from geometry.signed import deviation_along, deviation_statistics, signed_distances
+from geometry.signed import course_along, deviation_statistics, signed_distances
 
 
 def polyline(*points: tuple[float, ...], closed: bool = False) -> Polyline:
@@ -123,20 +123,21 @@ def test_a_curve_about_the_middle_of_a_staircase_has_no_mean() -> None:
 
 @pytest.mark.parametrize("closed", [False, True])
 @pytest.mark.parametrize("reverse", [False, True])
-def test_deviation_along_an_old_curve_shows_the_side_of_the_new(closed: bool, reverse: bool) -> None:
+def test_a_course_shows_to_which_side_of_the_old_curve_the_new_lies(closed: bool, reverse: bool) -> None:
     old = polyline((0.0, 0.0), (20.0, 0.0), (20.0, 10.0), (0.0, 10.0), closed=closed)
     new = polyline(
         (0.0, 0.0), (9.0, 0.0), (10.0, -0.5), (11.0, 0.0), (20.0, 0.0), (20.0, 10.0), (0.0, 10.0), closed=closed
     )
-    course = deviation_along(old, new.reversed() if reverse else new, 0.05)
+    course = course_along(new.reversed() if reverse else new, old, 0.05)
     peak = int(np.argmax(np.abs(course.deviation)))
     # the bump goes outward of the closed shape; of the open one, travelled anticlockwise, that is to the right
     assert np.sign(course.deviation[peak]) == (1.0 if closed else -1.0)
-    assert course.along[peak] == pytest.approx(10.0, abs=0.1)
-    assert course.points[peak] == pytest.approx([10.0, 0.0], abs=0.1)
-    assert abs(course.deviation[peak]) == pytest.approx(0.5 / np.hypot(1.0, 0.5), abs=0.05)
-    assert np.abs(course.deviation[np.abs(course.along - 10.0) > 1.5]).max() <= 1e-9
-    assert course.weights.sum() == pytest.approx(old.length())
+    place = 9.0 + np.hypot(1.0, 0.5)
+    assert course.along[peak] == pytest.approx(new.length() - place if reverse else place, abs=0.1)
+    assert course.points[peak] == pytest.approx([10.0, -0.5], abs=0.05)
+    assert abs(course.deviation[peak]) == pytest.approx(0.5, abs=0.05)
+    assert np.abs(course.deviation[np.abs(course.points[:, 0] - 10.0) > 1.0]).max() <= 1e-9
+    assert course.weights.sum() == pytest.approx(new.length())
 
 
 def test_three_dimensions_have_sizes_but_no_sides() -> None:
