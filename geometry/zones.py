@@ -192,7 +192,8 @@ class _Track:
         """Return the places nearest to points, shape (n,)."""
         search = SegmentSearch(self._chords.start.T.copy(), self._chords.end.T.copy())
         index, _, _ = search.exact(points.T.copy())
-        return np.asarray(index + search.foot(points.T, index))
+        place: FloatArray = search.foot(points.T, index) + index
+        return place
 
 
 def _highest(
