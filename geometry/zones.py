@@ -179,7 +179,8 @@ class _Track:
         chord = np.repeat(many, parts[many] - 1)
         first = np.repeat(np.cumsum(parts[many] - 1) - (parts[many] - 1), parts[many] - 1)
         inner = chord + (np.arange(len(chord)) - first + 1) / np.repeat(parts[many], parts[many] - 1)
-        return np.concatenate([np.flatnonzero(kept).astype(np.float64), inner])
+        marked: FloatArray = np.concatenate([np.flatnonzero(kept).astype(np.float64), inner])
+        return marked
 
     def places(self, element: IntArray, t: FloatArray) -> FloatArray:
         """Return the places of local parameters of elements, shape (n,)."""
