@@ -179,15 +179,14 @@ class _Track:
         chord = np.repeat(many, parts[many] - 1)
         first = np.repeat(np.cumsum(parts[many] - 1) - (parts[many] - 1), parts[many] - 1)
         inner = chord + (np.arange(len(chord)) - first + 1) / np.repeat(parts[many], parts[many] - 1)
-        marked: FloatArray = np.concatenate([np.flatnonzero(kept).astype(np.float64), inner])
-        return marked
+        return np.concatenate([np.flatnonzero(kept).astype(np.float64), inner])
 
     def places(self, element: IntArray, t: FloatArray) -> FloatArray:
         """Return the places of local parameters of elements, shape (n,)."""
         key = self._chords.element + self._chords.low
         chord = np.clip(np.searchsorted(key, element + np.minimum(t, 1.0 - 1e-15), side="right") - 1, 0, len(key) - 1)
         low, high = self._chords.low[chord], self._chords.high[chord]
-        return chord + np.clip((t - low) / (high - low), 0.0, 1.0)
+        return chord.astype(np.float64) + np.clip((t - low) / (high - low), 0.0, 1.0)
 
     def nearest(self, points: FloatArray) -> FloatArray:
         """Return the places nearest to points, shape (n,)."""
