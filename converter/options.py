@@ -1,6 +1,7 @@
 """Options of the command line: lengths with units, help under headings, and the options that commands share."""
 
 from collections.abc import Callable
+from dataclasses import dataclass
 from typing import Any, TypeVar
 
 import click
@@ -15,6 +16,9 @@ __all__ = [
     "GroupedCommand",
     "GroupedOption",
     "LengthType",
+    "SignedLength",
+    "SignedLengthType",
+    "UnitType",
     "gap_option",
     "layer_option",
     "option",
@@ -43,6 +47,30 @@ class LengthType(click.ParamType):  # type: ignore[type-arg]  # generic only in 
             return value
         try:
             return parse_length(str(value))
+        except LengthError as error:
+            self.fail(str(error), param, ctx)
+
+
+@dataclass(frozen=True, slots=True)
+class SignedLength:
+    """A length with a direction."""
+
+    size: Length
+    negative: bool
+
+
+class SignedLengthType(click.ParamType):  # type: ignore[type-arg]
+    """A length that may have a sign in front."""
+
+    name = "LEN"
+
+    def convert(self, value: Any, param: click.Parameter | None, ctx: click.Context | None) -> SignedLength:
+        """Return the length and its sign."""
+        if isinstance(value, SignedLength):
+            return value
+        text = str(value).strip()
+        try:
+            return SignedLength(parse_length(text[1:] if text[:1] in ("+", "-") else text), text.startswith("-"))
         except LengthError as error:
             self.fail(str(error), param, ctx)
 

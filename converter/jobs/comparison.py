@@ -40,11 +40,13 @@ class Limits:
 
 @dataclass(frozen=True, slots=True)
 class Transform:
-    """The rigid move of NEW onto OLD: a turn about the origin of NEW, then a shift; drawing units and degrees."""
+    """The rigid move of NEW onto OLD: a turn about (x, y), then a shift by (dx, dy); drawing units, degrees."""
 
     dx: float = 0.0
     dy: float = 0.0
     degrees: float = 0.0
+    x: float = 0.0
+    y: float = 0.0
 
 
 @dataclass(slots=True)
