@@ -1,5 +1,7 @@
 """Cutting curves at places along them."""
 
+import itertools
+
 import numpy as np
 import pytest
 
@@ -38,7 +40,7 @@ def test_parts_of_arcs_lie_on_the_same_circles_and_add_up(seed):
     np.testing.assert_allclose(
         np.cumsum([part.length() for part in parts]), [*cuts, chain.length()], rtol=0.0, atol=1e-12 * chain.length()
     )
-    for before, after in zip(parts[:-1], parts[1:], strict=True):
+    for before, after in itertools.pairwise(parts):
         np.testing.assert_array_equal(before.points[-1], after.points[0])
     known = np.sort(np.abs(chain.curvatures()))
     for part in parts:

@@ -1,9 +1,9 @@
 """Bands of deviation: the steps in which a map shows how far and to which side NEW lies from OLD, and their colours.
 
-Colours are those of the diverging scheme RdBu (11 classes) by Cynthia Brewer, Pennsylvania State University, ColorBrewer 2
-(colorbrewer2.org; the values from memory), which tell plus from minus to people with any common colour-vision
-deficiency; the middle is a grey. Printed in grey the amount shows by lightness and line width, the side by the dashes
-of minus.
+Colours are those of the diverging scheme RdBu (11 classes) by Cynthia Brewer, Pennsylvania State University, in
+ColorBrewer 2 (colorbrewer2.org; the values from memory), which tell plus from minus to people with any common
+colour-vision deficiency; the middle is a grey. Printed in grey the amount shows by lightness and line width, the side
+by the dashes of minus.
 """
 
 import math
@@ -17,7 +17,7 @@ from geometry.arrays import FloatArray, IntArray
 if TYPE_CHECKING:
     from converter.jobs.comparison import Comparison, Limits
 
-__all__ = ["NEAR", "Band", "Bands", "bands_for", "bands_of", "round_step"]
+__all__ = ["NEAR", "Band", "Bands", "bands_for", "bands_of", "largest_of", "round_step"]
 
 NEAR = 3
 """Index of the middle band; those before it are minus, those after it plus."""
@@ -34,6 +34,7 @@ _COLOURS = (
     ("#b2182b", "#67001f", "#fddbc7"),
 )
 _INDEX_COLOURS = (163, 142, 141, 9, 21, 11, 242)  # the nearest of the 255 that every DXF version has
+_NOTHING = 1e-7  # of the size of a profile: deviations along are not told finer than this
 _WEIGHTS = (4, 3, 2, 1, 2, 3, 4)
 
 
@@ -97,9 +98,20 @@ class Bands:
 
 def bands_of(comparison: "Comparison") -> Bands:
     """Return the bands of a comparison: by its limits, otherwise by the largest deviation found."""
-    largest = max((float(np.abs(pair.course.deviation).max(initial=0.0)) for pair in comparison.pairs), default=0.0)
     unit = "" if comparison.record.units == "unitless" else f" {comparison.record.units}"
-    return bands_for(comparison.limits, largest, unit)
+    return bands_for(comparison.limits, largest_of(comparison), unit)
+
+
+def largest_of(comparison: "Comparison") -> float:
+    """Return the largest deviation a map has to show, drawing units; 0 where there is none but what measuring leaves."""
+    largest = 0.0
+    for pair in comparison.pairs:
+        low, high = pair.new.bounds()
+        nothing = _NOTHING * float(np.linalg.norm(high - low) + 1e-6 * np.abs([low, high]).max())
+        peaks = [abs(zone.peak) for zone in pair.record.zones]
+        found = max([float(np.abs(pair.course.deviation).max(initial=0.0)), *peaks])
+        largest = max(largest, found if found > nothing else 0.0)
+    return largest
 
 
 def bands_for(limits: "Limits | None", largest: float, unit: str = "") -> Bands:
