@@ -207,6 +207,11 @@ def test_a_cusp_is_refused_for_a_turn_and_taken_for_a_chord_error():
     assert measured(cusp, dense_points(cusp, 1e-3))[0] <= 1e-3
 
 
+def test_a_closed_curve_keeps_three_vertices_whatever_is_allowed():
+    assert len(dense_points(ellipse(), 1e6).polyline().points) == 3
+    assert len(dense_points(cornered(), 1e6).polyline().points) >= 3
+
+
 def test_a_parameter_beyond_the_ends_is_refused():
     with pytest.raises(GeometryError, match="beyond the ends"):
         dense_points(wave(), 0.1, keep=np.array([-1.0]))

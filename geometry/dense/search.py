@@ -29,6 +29,7 @@ _HOPELESS = 20.0  # times the number that curvature asks for: then something tur
 _MANY, _SPARE = 4000, 0.02  # chords of a piece over which that share of them may be more than is needed
 _EVEN = 0.99  # mean usage from which on no fewer chords are looked for
 _POWER = 6.0  # of the means of usage: nearly the largest, yet smooth
+_SAME = 1e-12  # of the length of the parameter: nearer to a knot than this is the knot
 _SMOOTH = 1e-4  # radians: a knot of full multiplicity that turns less is no corner
 _SAFE = 1.0 - 1e-9  # share of a limit that is used, so that rounding does not pass it
 
@@ -58,7 +59,8 @@ def dense_points(
         keep: parameters that must be vertices, those of stations for instance, within the knots, any shape.
 
     Returns:
-        The vertices in order of travel, the end of a closed curve (its start again) included.
+        The vertices in order of travel, the end of a closed curve (its start again) included; a closed curve has at
+        least three others.
 
     Raises:
         GeometryError: no limit, one that is not positive, one that takes more than 50 million points, a parameter out
@@ -73,7 +75,7 @@ def dense_points(
     limits = ChordLimits(
         _SAFE * (np.inf if chord_error is None else chord_error),
         _SAFE * (np.inf if max_step is None else max_step),
-        _SAFE * min(0.5 * np.pi, np.inf if max_turn is None else max_turn),
+        np.inf if max_turn is None else _SAFE * min(0.5 * np.pi, max_turn),
     )
     return _Search(spline, limits, keep).run()
 
@@ -87,6 +89,9 @@ class _Search:
         keep = np.zeros(0) if keep is None else np.asarray(keep, dtype=np.float64).ravel()
         if not ((keep >= breaks[0]) & (keep <= breaks[-1])).all():
             raise GeometryError("a parameter to keep lies beyond the ends of the curve")
+        near = breaks[np.clip(np.searchsorted(breaks, keep), 1, len(breaks) - 1) - np.array([[1], [0]])]
+        near = np.where(np.abs(near[0] - keep) < np.abs(near[1] - keep), near[0], near[1])
+        keep = np.where(np.abs(near - keep) <= _SAME * (breaks[-1] - breaks[0]), near, keep)
         self.corners = breaks[_corners(spline)]
         stops = np.unique(np.concatenate([breaks[[0, -1]], self.corners, keep]))
         spans = np.unique(np.concatenate([breaks, stops]))
@@ -99,13 +104,14 @@ class _Search:
         self.edges = np.append(spans[span] + np.diff(spans)[span] * step / cells[span], spans[-1])
         self.first = np.searchsorted(self.edges, stops[:-1])  # first cell of every piece
         self.stops = stops
+        self.least = {1: 3.0, 2: 2.0}.get(len(stops) - 1, 1.0) if spline.closed else 1.0  # chords of a piece
         self.density = np.maximum(self.measure.demand(self.edges[:-1], self.edges[1:], limits), 1e-9)
 
     def run(self) -> Dense:
         sums = np.add.reduceat(self.density, self.first)
         self._check_count(sums)
         many = sums > _MANY
-        count = np.maximum(np.ceil(np.where(many, 1.002, 0.97) * sums), 1.0)
+        count = np.maximum(np.ceil(np.where(many, 1.002, 0.97) * sums), self.least)
         best = np.full(len(count), np.inf)
         best_density = self.density.copy()
         fails = np.zeros(len(count), dtype=np.intp)
@@ -121,7 +127,7 @@ class _Search:
             scaled = self.density * np.repeat(count / np.add.reduceat(self.density, self.first), cells)
             needed = np.add.reduceat(scaled * np.maximum(usage, 0.05), self.first)
             spare = np.where(many, _SPARE * count, 0.6)
-            less = fits & ~done & (count > 1.0) & (needed <= count - spare) & (turn < _ROUNDS)
+            less = fits & ~done & (count > self.least) & (needed <= count - spare) & (turn < _ROUNDS)
             done |= fits & ~less
             fails = np.where(fits, 0, fails + 1)
             gave_up = ~fits & (fails >= _TRIES)
@@ -131,7 +137,7 @@ class _Search:
             more = ~fits & ~done & (gave_up | many | (turn >= _ROUNDS))
             update = np.maximum(usage, 0.2) ** (1.0 if turn < 3 else 0.6)
             self.density = np.where(np.repeat(done, cells), self.density, scaled * update)
-            count = np.where(less, np.maximum(np.minimum(count - 1.0, np.ceil(needed)), 1.0), count)
+            count = np.where(less, np.maximum(np.minimum(count - 1.0, np.ceil(needed)), self.least), count)
             grown = np.ceil(count * np.clip(worst, 1.0 + 1.0 / count, 2.0 if turn >= _ROUNDS else 1.015) - 1e-9)
             count = np.where(more, np.maximum(grown, count + 1.0), count)
             fails[more] = 0
@@ -151,7 +157,7 @@ class _Search:
         if self.measure.spline.degree == 1:
             return u
         stop = np.append(0, np.cumsum(count)).astype(np.intp)
-        small = (count > 1.0) & (count <= _MANY)
+        small = (count > self.least) & (count <= _MANY)
         if not small.any():
             return u
         used = np.concatenate([self.measure.usage(a[:-1], a[1:], self.limits) for a in _portions(u)])
@@ -162,7 +168,7 @@ class _Search:
             if walk:
                 walked = farthest_chords(self.measure, self.limits, part)
                 fits = self.measure.usage(walked[:-1], walked[1:], self.limits).max() <= 1.0
-                part = walked if fits and len(walked) < len(part) else part
+                part = walked if fits and self.least < len(walked) < len(part) else part
             parts.append(part[:-1])
         return np.append(np.concatenate(parts), u[-1])
 
