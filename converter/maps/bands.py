@@ -103,7 +103,7 @@ def bands_of(comparison: "Comparison") -> Bands:
 
 
 def largest_of(comparison: "Comparison") -> float:
-    """Return the largest deviation a map has to show, drawing units; 0 where there is none but what measuring leaves."""
+    """Return the largest deviation a map has to show, drawing units; 0 where there is none but rounding."""
     largest = 0.0
     for pair in comparison.pairs:
         low, high = pair.new.bounds()
@@ -135,7 +135,7 @@ def bands_for(limits: "Limits | None", largest: float, unit: str = "") -> Bands:
         if rank == 0:
             meaning, side = f"-{minus[0]:.4g} to +{plus[0]:.4g}{unit}", 0
         elif rank == len(plus):
-            meaning = f"over {sign}{size[-1]:.4g}{unit}"
+            meaning = f"beyond {sign}{size[-1]:.4g}{unit}"
         else:
             meaning = f"{sign}{size[rank - 1]:.4g} to {sign}{size[rank]:.4g}{unit}"
         out = None if limits is None else rank > 1
