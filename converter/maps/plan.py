@@ -24,7 +24,7 @@ _LONGEST = 0.05  # of the size: the longest whisker where the factor is chosen
 _SPACING = 1.0 / 250.0  # of the size: whiskers follow one another no closer
 _VISIBLE = 1.0 / 4000.0  # of the size: shorter whiskers are left out
 _MOST_STRETCHES = 2000  # of a pair
-_MOST_WHISKERS = 20_000  # in all
+_MOST_WHISKERS = 8_000  # in all
 
 
 @dataclass(frozen=True, slots=True, eq=False)

@@ -1,0 +1,1 @@
+"""Pages: what a job did, as one HTML file that needs nothing else and fetches nothing."""
