@@ -182,7 +182,9 @@ class SignedTo:
             raise GeometryError("the curve to measure to has no length; give one with two distinct points")
         self._chords = chords.take(long)
         self._search = SegmentSearch(self._chords.start.T.copy(), self._chords.end.T.copy())
+        self._unit = self._search.along / np.sqrt(np.add.reduce(self._search.along * self._search.along))
         self._closed, self._crossing = reference.closed, crossing
+        self._left_turning = len(defining[0]) == 2 and polygon_area(self._chords.start) > 0.0
 
     def __call__(self, points: FloatArray) -> FloatArray:
         """Return the distance of points, shape (n, d), of the reference's dimension; shape (n,), drawing units."""
@@ -199,19 +201,24 @@ class SignedTo:
         size[size <= (100.0 + chords.elements.rounding) * _U * reach] = 0.0
         if self._closed and self._crossing:
             return np.where(_inside(chords, local), -size, size)
-        left, doubtful = _left(self._search, local, index, self._closed)
+        left, doubtful = _left(self._search, self._unit, local, index, self._closed)
         if not self._closed:
             return np.where(left, size, -size)
-        outside = left != (polygon_area(chords.start) > 0.0)
+        outside = left != self._left_turning
         if doubtful.any():
             outside[doubtful] = ~_inside(chords, local[:, doubtful])
         return np.where(outside, size, -size)
 
 
-def _left(search: SegmentSearch, points: FloatArray, index: IntArray, closed: bool) -> tuple[BoolArray, BoolArray]:
-    """Whether points lie left of travel at their nearest segments, and where that cannot be told."""
+def _left(
+    search: SegmentSearch, unit: FloatArray, points: FloatArray, index: IntArray, closed: bool
+) -> tuple[BoolArray, BoolArray]:
+    """Whether points lie left of travel at their nearest segments, and where that cannot be told.
+
+    Args:
+        unit: direction of every segment, shape (2, m).
+    """
     count = len(search)
-    unit = search.along / np.sqrt(np.add.reduce(search.along * search.along))
     t = search.foot(points, index)
     tangent = unit[:, index].copy()
     doubtful = np.zeros(len(index), dtype=np.bool_)

@@ -206,8 +206,11 @@ def _highest(
         for _ in range(_ROUNDS):
             left = at_c > at_d
             a, b = np.where(left, a, c), np.where(left, d, b)
-            c, d = b - _GOLDEN * (b - a), a + _GOLDEN * (b - a)
-            at_c, at_d = height(c), height(d)
+            fresh = np.where(left, b - _GOLDEN * (b - a), a + _GOLDEN * (b - a))
+            known, value = np.where(left, c, d), np.where(left, at_c, at_d)
+            new = height(fresh)
+            c, at_c = np.where(left, fresh, known), np.where(left, new, value)
+            d, at_d = np.where(left, known, fresh), np.where(left, value, new)
         middle = 0.5 * (a + b)
         found = height(middle)
         higher = found > best
@@ -227,7 +230,7 @@ def _edges(
     beyond = np.clip(index + step, 0, len(place) - 1)
     outside = place[beyond].copy()
     signs = side[index]
-    for _ in range(_ROUNDS):
+    for _ in range(_ROUNDS if (beyond != index).any() else 0):
         middle = 0.5 * (inside + outside)
         value, excess = over(middle)
         still: BoolArray = (excess > 0.0) & (np.where(value > 0.0, 1, -1) == signs)
