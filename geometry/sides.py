@@ -1,34 +1,37 @@
 """Whether a curve stays within limits that differ by side: proven, for tolerance zones that are not centred.
 
 Let s be the signed distance to the reference, + outside a closed one and left of an open one, beyond whose ends the
-last chord, prolonged, parts left from right. To a closed reference s changes by no more than the distance travelled:
-|s| does so, and s changes sign only on the reference, where it is 0. To an open reference the same holds along a path
-that does not cross one of the prolongations. So along a straight chord of length L whose ends have s = a and s = b, s
-is at most (a + b + L) / 2 and at least (a + b - L) / 2, and |s| at most (|a| + |b| + L) / 2. A chord stays clear of a
-prolongation if both its ends lie behind the end of the reference, or both on one side of its line. Where all that
-does not decide, the chord is halved.
+last chord, prolonged, parts left from right. |s| changes by no more than the distance travelled. So along a straight
+chord of length L whose ends have |s| = a and |s| = b, |s| is at least (a + b - L) / 2; where that is above 0 the chord
+does not meet the reference, and s keeps its sign unless the chord crosses a prolongation. It stays clear of one if both
+its ends lie behind the end of the reference, or both on one side of its line. Where the chord keeps its sign, it keeps
+its limit if `geometry.intervals` bounds |s| along it by the limit of that side; where it need not, if the bound is the
+smaller limit. A chord that is not settled so is halved.
 
-Both curves are taken as chords within e. |s| is then known to e, and s, whose sign may be wrong where |s| <= e, to 3
-e; a point of the curve is within e of its chord: 4 e in all. Rounding adds less than 2000 u M, u = 2^-53 and M the
-largest coordinate, as counted in `geometry.deviation`.
+Both curves are taken as chords within e. |s| is then known to e, its sign where |s| > e, and a point of the curve is
+within e of its chord: a margin of 4 e covers both. The bounds allow for chord errors themselves. Rounding adds less
+than 2000 u M, u = 2^-53 and M the largest coordinate, as counted in `geometry.deviation`.
 """
 
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
-from geometry.arrays import BoolArray, FloatArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
+from geometry.chords import Chords, anchors, whole_chords
 from geometry.curve import Curve
 from geometry.errors import GeometryError
-from geometry.signed import signed_distances
+from geometry.intervals import bound_chords
+from geometry.nearest import SegmentSearch
+from geometry.signed import SignedTo
 from geometry.simple import is_simple
 
 __all__ = ["SideDecision", "within_sides"]
 
 _U = 2.0**-53
 _SHARES = (1e-2, 1e-4, 1e-6)  # of the smaller limit: chord errors, the next one where one leaves it open
-_ROUNDS = 60
-_MOST = 4_000_000  # chords held at a time
+_ROUNDS = 30
+_MOST = 100_000  # chords more than either curve has: beyond, the decision is left open
 
 
 @dataclass(frozen=True, slots=True)
@@ -56,53 +59,97 @@ def within_sides(curve: Curve, reference: Curve, plus: float, minus: float) -> S
 
     Raises:
         NotFiniteError, TooFewPointsError: a curve cannot be used.
-        GeometryError: a curve is not planar or a limit is not a number above 0.
+        GeometryError: a curve is not planar or has no length, or a limit is not a number above 0.
     """
     if not (0.0 < plus < np.inf and 0.0 < minus < np.inf):
         raise GeometryError(f"limits of {plus:g} and {minus:g} cannot be used; both must be numbers above 0")
+    if curve.dimension != 2 or reference.dimension != 2:
+        raise GeometryError("there are no sides in 3 dimensions; measure without sign, or give planar curves")
+    points = np.vstack([anchors(curve), anchors(reference)])
+    middle = 0.5 * points.min(axis=0) + 0.5 * points.max(axis=0)
     found = SideDecision(None)
     for share in _SHARES:
-        found = _decide(curve, reference, plus, minus, share * min(plus, minus))
+        found = _Sides(curve, reference, middle, plus, minus, share * min(plus, minus)).decide()
         if found.inside is not None:
             break
-    return found
+    if found.point is None:
+        return found
+    return replace(found, point=tuple((np.array(found.point) + middle).tolist()))
 
 
-def _decide(curve: Curve, reference: Curve, plus: float, minus: float, error: float) -> SideDecision:
-    path = curve.flatten(error).path()
-    drawn = reference.flatten(error)
-    crossing = reference.closed and not is_simple(drawn)
-    ends = [] if reference.closed else [_end(drawn.points), _end(drawn.points[::-1])]
-    reach = float(max(np.abs(path).max(), np.abs(drawn.points).max()))
-    slack = 4.0 * error + 2000.0 * _U * reach
-    narrow = min(plus, minus)
-    a, b = path[:-1], path[1:]
-    signed = signed_distances(path, reference, error, crossing)
-    at_a, at_b = signed[:-1], signed[1:]
-    for _ in range(_ROUNDS):
-        for place, value in ((a, at_a), (b, at_b)):
-            over = np.where(value > 0.0, value - plus, -value - minus)
-            k = int(np.argmax(over))
-            if over[k] > slack:
-                return SideDecision(False, tuple(place[k].tolist()), float(value[k]))
-        length = np.linalg.norm(b - a, axis=1)
-        middle, half = 0.5 * (at_a + at_b), 0.5 * length + slack
-        size = 0.5 * (np.abs(at_a) + np.abs(at_b)) + half
-        sided = (middle + half <= plus) & (middle - half >= -minus)
-        for end, before in ends:
-            sided &= _clear(a, b, end, before, slack)
-        rest = np.flatnonzero(~(sided | (size <= narrow)))
-        if not rest.size:
-            return SideDecision(True)
-        if rest.size > _MOST or length[rest].max() < error:
-            k = rest[np.argmax(size[rest])]
-            return SideDecision(None, tuple(a[k].tolist()), float(at_a[k]))
-        a, b, at_a, at_b = a[rest], b[rest], at_a[rest], at_b[rest]
-        centre = 0.5 * (a + b)
-        value = signed_distances(centre, reference, error, crossing)
-        a, b = np.concatenate([a, centre]), np.concatenate([centre, b])
-        at_a, at_b = np.concatenate([at_a, value]), np.concatenate([value, at_b])
-    return SideDecision(None, tuple(a[0].tolist()), float(at_a[0]))
+class _Sides:
+    """Both curves about their common middle, as chords of one error."""
+
+    def __init__(
+        self, curve: Curve, reference: Curve, middle: FloatArray, plus: float, minus: float, error: float
+    ) -> None:
+        self._plus, self._minus, self._narrow = plus, minus, min(plus, minus)
+        self._chords = whole_chords(curve, -middle).split(error)
+        chords = whole_chords(reference, -middle).split(error)
+        self._error, self._middle = error, middle
+        self._target = SegmentSearch(chords.start.T.copy(), chords.end.T.copy())
+        drawn = reference.flatten(error)
+        shifted = drawn.points - middle
+        self._ends = [] if reference.closed else [_end(shifted), _end(shifted[::-1])]
+        self._distance = SignedTo(reference, error, reference.closed and not is_simple(drawn))
+        reach = max(self._chords.elements.reach, chords.elements.reach)
+        self._rounding = 2000.0 * _U * reach
+        self._most = _MOST + 2 * (len(self._chords) + len(chords))
+
+    def _signed(self, points: FloatArray) -> FloatArray:
+        return self._distance(points + self._middle)
+
+    def decide(self) -> SideDecision:
+        chords = self._chords
+        at_start = self._signed(np.vstack([chords.start, chords.end[-1:]]))
+        at_start, at_end = at_start[:-1], at_start[1:]
+        for _ in range(_ROUNDS):
+            for points, value in ((chords.start, at_start), (chords.end, at_end)):
+                over = np.where(value > 0.0, value - self._plus, -value - self._minus)
+                k = int(np.argmax(over))
+                if over[k] > 4.0 * self._error + self._rounding:
+                    return SideDecision(False, tuple(points[k].tolist()), float(value[k]))
+            rest = self._unsettled(chords, at_start, at_end)
+            if not rest.size:
+                return SideDecision(True)
+            k = int(rest[np.argmax(np.abs(at_start[rest]))])
+            open_ = SideDecision(None, tuple(chords.start[k].tolist()), float(at_start[k]))
+            length = np.linalg.norm(chords.end[rest] - chords.start[rest], axis=1)
+            if rest.size > self._most or length.max() < self._error:
+                return open_
+            chords, inner = _halved(chords.take(rest))
+            value = self._signed(inner)
+            at_start = np.stack([at_start[rest], value], axis=1).ravel()
+            at_end = np.stack([value, at_end[rest]], axis=1).ravel()
+        return open_
+
+    def _unsettled(self, chords: Chords, at_start: FloatArray, at_end: FloatArray) -> IntArray:
+        """Return the chords not proven to keep their limits."""
+        slack = 0.25 * self._error
+        bounds = bound_chords(chords, self._target, self._error, slack, self._narrow, every=True)
+        upper = bounds.upper + self._rounding
+        rest = np.flatnonzero(upper > self._narrow)
+        a, b = at_start[rest], at_end[rest]
+        start, end = chords.start[rest], chords.end[rest]
+        margin = 4.0 * self._error + self._rounding
+        least = 0.5 * (np.abs(a) + np.abs(b) - np.linalg.norm(end - start, axis=1))
+        sided: BoolArray = (least > margin) & ((a > 0.0) == (b > 0.0))
+        sided &= upper[rest] <= np.where(a > 0.0, self._plus, self._minus)
+        for tip, before in self._ends:
+            sided &= _clear(start, end, tip, before, margin)
+        return rest[~sided]
+
+
+def _halved(chords: Chords) -> tuple[Chords, FloatArray]:
+    """Return both halves of every chord, in order, and the points between them, shape (n, 2)."""
+    element = np.repeat(chords.element, 2)
+    middle = 0.5 * (chords.low + chords.high)
+    inner = chords.elements.at(chords.element, middle)
+    low, high = (np.stack(pair, axis=1).ravel() for pair in ((chords.low, middle), (middle, chords.high)))
+    start = np.stack([chords.start, inner], axis=1).reshape(-1, 2)
+    end = np.stack([inner, chords.end], axis=1).reshape(-1, 2)
+    error = chords.elements.error(element, low, high, end - start)
+    return Chords(chords.elements, element, low, high, start, end, error), inner
 
 
 def _end(points: FloatArray) -> tuple[FloatArray, FloatArray]:
