@@ -137,6 +137,8 @@ def _notes(comparison: "Comparison", plan: Plan, found: Thinned) -> list[str]:
             f"{', '.join(plan.coarse[:6])}{' and more' if plan.coarse[6:] else ''}: the deviation passes from band to "
             "band so often that every 1/2000 of the length has the colour of its largest deviation."
         )
+    if plan.marks:
+        notes.append("Where zone numbers would lie on one another the higher peak shows; zoom in to see the others.")
     if len(plan.marks) > _MOST_MARKS:
         notes.append(f"Of {len(plan.marks)} zones the {_MOST_MARKS} with the highest peaks are numbered on the map.")
     if any(pair.new.dimension == 3 for pair in comparison.pairs):
@@ -228,6 +230,8 @@ def _mark(mark: Mark, comparison: "Comparison", plan: Plan, picture: Picture) ->
         "side": zone.side,
         "profile": f"OLD {record.old_id}" if missing else record.new_id,
         "zone": zone,
+        "from": f"{zone.from_along:.6g}",
+        "to": f"{zone.to_along:.6g}",
         "place": [_coordinate(zone.x), _coordinate(zone.y)],
     }
 

@@ -2,6 +2,7 @@
 // A picture that can be moved and enlarged, and a chart along a profile: shared by all pages.
 const DATA = JSON.parse(document.getElementById("data").textContent);
 const SVG = "http://www.w3.org/2000/svg";
+const PAPER = 690;  // width of a printed page
 const calm = matchMedia("(prefers-reduced-motion: reduce)");
 
 function figure(value, signed) {
@@ -29,16 +30,18 @@ function steps(low, high, parts) {
 }
 
 class View {
-  // svg: the picture. still: elements of class `mark` with data-x, data-y and the cursor keep their size.
+  // svg: the picture. Elements of class `mark` keep their size; one that a later one covers is hidden until there is room.
   constructor(svg, onPoint, onStep) {
     this.svg = svg;
     const box = svg.getAttribute("viewBox").split(" ").map(Number);
     this.home = { x: box[0] + box[2] / 2, y: box[1] + box[3] / 2, w: box[2], h: box[3] };
-    this.still = Array.from(svg.querySelectorAll(".mark")).map(node => ({ node, x: +node.dataset.x, y: +node.dataset.y }));
+    this.still = Array.from(svg.querySelectorAll(".mark")).reverse().map(node => ({ node, x: +node.dataset.x, y: +node.dataset.y }));
     this.pointers = new Map();
     this.moved = false;
     this.fit(false);
     new ResizeObserver(() => this.draw()).observe(svg);
+    addEventListener("beforeprint", () => this.draw(PAPER));
+    addEventListener("afterprint", () => this.draw());
     svg.addEventListener("wheel", event => {
       event.preventDefault();
       const lines = event.deltaMode === 1 ? 16 : event.deltaMode === 2 ? 400 : 1;
@@ -99,19 +102,26 @@ class View {
     this.frame = requestAnimationFrame(tick);
   }
 
-  draw() {
+  // width: that of the paper while printing
+  draw(width) {
     this.wide(1, 1);
-    const { x, y, w } = this.at, h = w * this.ratio, unit = w / this.px;
+    const { x, y, w } = this.at, h = w * this.ratio, unit = width ? Math.max(w / width, h / (0.52 * width)) : w / this.px;
     this.svg.setAttribute("viewBox", [x - w / 2, y - h / 2, w, h].map(value => value.toFixed(2)).join(" "));
-    for (const mark of this.still) mark.node.setAttribute("transform", `translate(${mark.x} ${mark.y}) scale(${unit})`);
-    if (this.anchor) this.cursor(this.anchor.x, this.anchor.y);
+    const shown = [];
+    for (const mark of this.still) {
+      mark.node.setAttribute("transform", `translate(${mark.x} ${mark.y}) scale(${unit})`);
+      const covered = shown.some(other => Math.hypot(other.x - mark.x, other.y - mark.y) < 18 * unit);
+      mark.node.classList.toggle("covered", covered);
+      if (!covered) shown.push(mark);
+    }
+    if (this.anchor) this.cursor(this.anchor.x, this.anchor.y, unit);
   }
 
-  cursor(x, y) {
+  cursor(x, y, unit = this.at.w / this.px) {
     const node = this.svg.querySelector("#cursor");
     this.anchor = { x, y };
     node.removeAttribute("hidden");
-    node.setAttribute("transform", `translate(${x} ${y}) scale(${this.at.w / this.px})`);
+    node.setAttribute("transform", `translate(${x} ${y}) scale(${unit})`);
   }
 
   // keep a place in sight
@@ -149,6 +159,8 @@ class Strip {
     this.svg = svg;
     this.shown = null;
     new ResizeObserver(() => this.draw()).observe(svg);
+    addEventListener("beforeprint", () => this.draw(PAPER));
+    addEventListener("afterprint", () => this.draw());
     svg.addEventListener("pointermove", event => { if (this.shown) onPlace(this.along(event)); });
     svg.addEventListener("pointerdown", event => { if (this.shown) onPlace(this.along(event)); });
     svg.addEventListener("keydown", event => { if (!event.ctrlKey && !event.metaKey && !event.altKey && onStep(event)) event.preventDefault(); });
@@ -162,10 +174,10 @@ class Strip {
   // shown: {length, a, d, edges, limits, zones: [[from, to]], unit}
   show(shown) { this.shown = shown; this.index = null; this.draw(); }
 
-  draw() {
+  draw(width) {
     const box = this.svg.getBoundingClientRect(), shown = this.shown;
     if (!shown || !shown.a.length || box.width < 20) return;
-    const w = this.w = Math.round(box.width), h = this.h = Math.round(box.height), bottom = h - 22, top = 10;
+    const w = this.w = width || Math.round(box.width), h = this.h = width ? 170 : Math.round(box.height), bottom = h - 22, top = 10;
     this.left = 64;
     this.svg.setAttribute("viewBox", `0 0 ${w} ${h}`);
     this.svg.replaceChildren();
