@@ -32,7 +32,7 @@ from geometry.curve import Curve
 from geometry.errors import GeometryError
 from geometry.intervals import ChordBounds, bound_chords
 from geometry.nearest import SegmentSearch
-from geometry.shared import shared_pieces
+from geometry.shared import identical, shared_pieces
 
 __all__ = [
     "Decision",
@@ -158,7 +158,13 @@ def directed_hausdorff(a: Curve, b: Curve, width: float) -> Deviation:
 
 
 def hausdorff(a: Curve, b: Curve, width: float) -> TwoSided:
-    """Enclose the Hausdorff distance between two curves, both directions; see `directed_hausdorff`."""
+    """Enclose the Hausdorff distance between two curves, both directions; see `directed_hausdorff`.
+
+    Curves that are the same number for number are at distance 0, and no place is given.
+    """
+    _positive(width, "width")
+    if len(anchors(a)) == len(anchors(b)) and identical(a, b):
+        return TwoSided(Deviation(0.0, 0.0), Deviation(0.0, 0.0))
     pair = _Pair(a, b, _positive(width, "width"), None)
     return TwoSided(pair.forward(), pair.backward())
 

@@ -8,7 +8,7 @@ from geometry.bspline import Spline
 from geometry.curve import Curve
 from geometry.polyline import Polyline
 
-__all__ = ["shared_pieces"]
+__all__ = ["identical", "shared_pieces"]
 
 _MIX = np.uint64(0x9E3779B97F4A7C15)  # 2^64 over the golden ratio, odd: D. E. Knuth, The Art of Computer Programming 3
 _TRY_BACK = 0.5  # of the pieces: where fewer agree, the other direction of travel is tried as well
@@ -37,6 +37,12 @@ def shared_pieces(a: Curve, b: Curve) -> tuple[BoolArray, BoolArray]:
         if back[0].sum() > found[0].sum():
             return back[0], back[1][::-1]
     return found
+
+
+def identical(a: Curve, b: Curve) -> bool:
+    """Tell whether two curves are the same, piece by piece and number for number, in the same order; never if empty."""
+    mine, theirs = _rows(a), _rows(b)
+    return type(a) is type(b) and mine is not None and theirs is not None and np.array_equal(mine, theirs)
 
 
 def _rows(curve: Curve) -> FloatArray | None:

@@ -23,7 +23,7 @@ from geometry.signed import SignedTo
 
 __all__ = ["Zone", "missed_zones", "zones"]
 
-_CHORD_ERROR = 1e-5  # of the smaller limit: chords of both curves
+_CHORD_ERROR = 1e-6  # of the smaller limit: chords of both curves
 _MOST_CHORDS = 400_000  # of a curve; the chord error is raised where it would take more
 _STEP = 0.5  # of the smaller limit: distance of samples, raised where that would be many
 _SAMPLES = 2000  # that a curve has at least, and at most four to every chord of the coarse curves besides

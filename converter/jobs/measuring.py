@@ -116,7 +116,7 @@ def _verdict(
 ) -> tuple[bool, TwoSided, list[str]]:
     """Return whether the limits are proven to be kept, the distance as it then is known, and what is to be said."""
     most = max(limits.plus, limits.minus)
-    for width in (None, _CLOSER, _CLOSER**2):
+    for width in (None, _CLOSER):
         if width is not None:
             distance = hausdorff(new.curve, old.curve, width * _WIDTH * min(limits.plus, limits.minus))
         parts = (distance.forward, distance.backward) if limits.equal else (distance.backward,)
