@@ -20,7 +20,9 @@ os.execvp(sys.argv[3], sys.argv[3:])
 
 def found():
     """The browser's command, or None."""
-    return next((path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None)
+    return next(
+        (path for name in ("chromium", "chromium-browser", "google-chrome") if (path := shutil.which(name))), None
+    )
 
 
 class Browser:
