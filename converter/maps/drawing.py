@@ -38,7 +38,7 @@ _OTHERS = (
 )
 _WIDTHS = (13, 13, 25, 35, 50)  # by weight of a band, 1/100 mm
 _TEXT = 1.0 / 80.0  # height of text, of the size of the map
-_MOST_LABELS = 200
+_MOST_LABELS, _TRIES = 200, 4
 _DASHES = "MAP_DASHED"
 
 
@@ -169,22 +169,24 @@ class _Sheet:
             self._label(mark, label_of(mark, comparison.record.units))
 
     def _label(self, mark: Mark, words: str) -> None:
-        """Write a label beyond the tip of a whisker, farther out where another label is in the way."""
+        """Write a label beyond the tip of a whisker, a little farther out where a higher one is in the way."""
         base, tip = np.array(mark.base[:2]), np.array(mark.tip[:2])
         away = tip - base
         length = float(np.linalg.norm(away))
         away = away / length if length > 0.0 else np.array([1.0, 0.0])
         wide = 0.95 * self._height * len(words)
         side = 0 if abs(away[0]) < 0.5 else int(np.sign(away[0]))  # of the whisker's end that the label lies on
-        for step in range(12):
-            at = tip + (1.0 + 1.6 * step) * self._height * away
+        for step in range(_TRIES):
+            at = tip + (1.2 + 1.6 * step) * self._height * away
             low = at + np.array([0.5 * (side - 1) * wide, -0.75 * self._height])
             box = np.stack([low, low + np.array([wide, 1.5 * self._height])])
             if not any((box[0] < other[1]).all() and (other[0] < box[1]).all() for other in self._taken):
                 break
+        else:
+            return
         self._taken.append(box)
         if step:
-            self.line(tip.tolist(), at.tolist(), _ZONES)
+            self.line(tip.tolist(), (at - 0.9 * self._height * away).tolist(), _ZONES)
         self.text(words, at, _ZONES, ("MIDDLE_RIGHT", "MIDDLE_CENTER", "MIDDLE_LEFT")[side + 1])
 
     def legend(self, comparison: "Comparison") -> tuple[FloatArray, FloatArray]:
@@ -215,8 +217,11 @@ class _Sheet:
             y -= 1.8 * height
         y -= 0.8 * height
         lines = legend_lines(comparison, plan)
-        if len(plan.marks) > _MOST_LABELS:
-            lines.append(f"{len(plan.marks) - _MOST_LABELS} lower zones have no label")
+        if len(plan.marks) > len(self._taken):
+            lines += [
+                "",
+                f"{len(plan.marks) - len(self._taken)} of {len(plan.marks)} zones have no label for want of room",
+            ]
         for line in lines:
             if line:
                 self.text(line, np.array([left, y]), _LEGEND)

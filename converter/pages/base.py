@@ -54,7 +54,7 @@ def figure(value: float | None, signed: bool = False) -> str:
     """Return a number with four figures; a dash for one that is not known."""
     if value is None or not math.isfinite(value):
         return "\u2013"
-    text = f"{value:+.4g}" if signed else f"{value:.4g}"
+    text = f"{value:+.4g}" if signed and value else f"{value:.4g}"
     return text.replace("-", "\u2212") if "e" not in text else text
 
 

@@ -18,7 +18,7 @@ if TYPE_CHECKING:
 
 __all__ = ["write_page"]
 
-_BINS = 14_000  # of all charts together
+_BINS = 9_000  # of all charts together
 _MOST_BINS, _LEAST_BINS = 1000, 4  # of one chart
 _MOST_MARKS = 60  # on the map
 _MOST_ROWS = 300
@@ -125,8 +125,8 @@ def _notes(comparison: "Comparison", plan: Plan, found: Thinned) -> list[str]:
     unit = unit_of(comparison.record.units)
     notes = [
         f"The map shows {found.drawn} of {found.vertices} vertices: its lines lie within "
-        f"{number(found.distance)}{unit} of the profiles, which is less than can be seen without zooming in. Figures "
-        "and zones come from the profiles themselves.",
+        f"{number(found.distance)}{unit} of the profiles, which cannot be seen without zooming in. Figures and zones "
+        "come from the profiles themselves.",
         f"Whiskers run from OLD towards NEW and on, {plan.factor:.6g} times the deviation, one in every short stretch, "
         "where the deviation is largest.",
         "The chart shows the largest and the least deviation of every short stretch and the peak of every zone. "

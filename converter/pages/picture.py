@@ -13,9 +13,10 @@ if TYPE_CHECKING:
 
 __all__ = ["Picture", "Thinned", "extremes", "segments", "thinned"]
 
-_ACROSS = 40_000.0  # picture units over the larger side of the drawing
-_VISIBLE = 1.0 / 4000.0  # of the larger side: what thinning may move a line by
-_MOST_VERTICES = 60_000
+_ACROSS = 400_000.0  # picture units over the larger side of the drawing
+_FINEST = 1.0 / 128_000.0  # of the larger side: what thinning may move a line by, doubled until few vertices are left
+_VISIBLE = 1.0 / 4000.0
+_FEW, _MOST = 24_000, 60_000  # vertices: enough to look closely, and to look at all
 
 
 @dataclass(frozen=True, slots=True)
@@ -76,16 +77,17 @@ class Thinned:
 
 
 def thinned(curves: "Sequence[AnyCurve]", picture: Picture) -> Thinned:
-    """Return curves as path data that differs from them by less than can be seen.
+    """Return curves as path data.
 
-    Curves are made straight within a quarter of 1/4000 of the picture's larger side, and vertices left out by the
-    Douglas-Peucker rule within three quarters of it (which keeps every vertex left out within that of the line that
-    stands for it); rounding adds 0.71 picture units. Where more than 60,000 vertices remain, twice the distance is
-    taken, and so on.
+    Curves are made straight within a quarter of a distance, and vertices left out by the Douglas-Peucker rule within
+    three quarters of it (which keeps every vertex left out within that of the line that stands for it); rounding adds
+    0.71 picture units. The distance is 1/128,000 of the picture's larger side, doubled until 24,000 vertices remain or
+    it is 1/4000, which is less than can be seen of the whole; and further where even then more than 60,000 remain.
     """
     import shapely
 
-    delta = _VISIBLE * _ACROSS / picture.scale
+    side = _ACROSS / picture.scale
+    delta = _FINEST * side
     middle = np.array([picture.x, picture.y])
     while True:
         flat = [curve.flatten(0.25 * delta).path()[:, :2] for curve in curves]
@@ -95,7 +97,7 @@ def thinned(curves: "Sequence[AnyCurve]", picture: Picture) -> Thinned:
             for line in shapely.simplify(np.array(lines, dtype=object), 0.75 * delta, preserve_topology=False)
         ]
         drawn = sum(len(path) for path in kept)
-        if drawn <= max(_MOST_VERTICES, 4 * len(curves)):
+        if drawn <= max(_FEW if delta < _VISIBLE * side else _MOST, 4 * len(curves)):
             break
         delta *= 2.0
     return Thinned(
