@@ -120,7 +120,9 @@ def deviation_statistics(curve: Curve, reference: Curve, tolerance: float) -> De
     return course_along(curve, reference, tolerance).statistics()
 
 
-def course_along(curve: Curve, reference: Curve, tolerance: float, crossing: bool = False) -> Course:
+def course_along(
+    curve: Curve, reference: Curve, tolerance: float, crossing: bool = False, chord_error: float | None = None
+) -> Course:
     """Return, all along a curve, how far and to which side of a reference it lies: + outside it or left of it.
 
     Left is that of the reference's own travel, whichever way the curve runs.
@@ -129,21 +131,26 @@ def course_along(curve: Curve, reference: Curve, tolerance: float, crossing: boo
         curve: polyline, arc chain or spline; samples are taken all along it, in the middle of short stretches and at
             every vertex or knot.
         reference: what it is measured to, of the same dimension.
-        tolerance: sets how closely samples follow each other and the chord error (1/400 of it), drawing units, > 0.
+        tolerance: sets how closely samples follow each other, drawing units, > 0.
         crossing: as for `signed_distances`, about the reference.
+        chord_error: how far the chords of either curve may lie from it, drawing units, > 0; None takes 1/400 of the
+            tolerance.
 
     Raises:
         As `signed_distances`.
     """
-    along, points, weights = _samples(curve, reference, tolerance)
-    return Course(along, points, weights, SignedTo(reference, _SHARE * tolerance, crossing)(points))
+    error = _SHARE * tolerance if chord_error is None else chord_error
+    along, points, weights = _samples(curve, reference, tolerance, error)
+    return Course(along, points, weights, SignedTo(reference, error, crossing)(points))
 
 
-def _samples(curve: Curve, other: Curve, tolerance: float) -> tuple[FloatArray, FloatArray, FloatArray]:
+def _samples(
+    curve: Curve, other: Curve, tolerance: float, chord_error: float
+) -> tuple[FloatArray, FloatArray, FloatArray]:
     """Points on a curve, with arc length to each and the length it stands for; about 4 an edge of the finer curve."""
     if not 0.0 < tolerance < np.inf:
         raise GeometryError(f"a tolerance of {tolerance:g} cannot be used; it must be a number above 0")
-    chords = whole_chords(curve).split(_SHARE * tolerance)
+    chords = whole_chords(curve).split(chord_error)
     lengths = np.linalg.norm(chords.end - chords.start, axis=1)
     total = float(lengths.sum())
     step = max(tolerance, total / (400.0 + 4.0 * (len(anchors(other)) + len(lengths))))

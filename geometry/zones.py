@@ -9,7 +9,7 @@ samples.
 """
 
 from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
@@ -28,6 +28,7 @@ _MOST_CHORDS = 400_000  # of a curve; the chord error is raised where it would t
 _STEP = 0.5  # of the smaller limit: distance of samples, raised where that would be many
 _SAMPLES = 2000  # that a curve has at least, and at most four to every chord of the coarse curves besides
 _ROUNDS = 48
+_TURNS = 10.0  # limits: what is missed at turns no farther apart is one zone
 _GOLDEN = 0.5 * (np.sqrt(5.0) - 1.0)
 
 
@@ -106,7 +107,8 @@ def missed_zones(curve: Curve, reference: Curve, limit: float, known: list[Zone]
     """Return the stretches of a reference that no place of a curve lies within a limit of, the farthest first.
 
     Left out are those whose nearest place on the curve lies in a zone that is known already: where the curve has left
-    the reference, the reference has left the curve as well.
+    the reference, the reference has left the curve as well. What is missed in short turns, less than ten limits apart
+    along the reference (the steps of a trace, for example), is one zone.
 
     Args:
         curve, reference: as for `zones`.
@@ -125,12 +127,17 @@ def missed_zones(curve: Curve, reference: Curve, limit: float, known: list[Zone]
     track = _Track(curve, limit)
     near = track.along(track.nearest(np.array([zone.point for zone in found])))
     length, spare = track.length, 1e-9 * track.length + limit
-    missed = []
-    for zone, at in zip(found, near.tolist(), strict=True):
-        inside = any(k.from_along - spare <= x <= k.to_along + spare for k in known for x in (at, at + length))
-        if not inside:
-            missed.append(Zone(zone.from_along, zone.to_along, abs(zone.peak), zone.along, zone.point))
-    return missed
+    missed: list[Zone] = []
+    for zone, at in sorted(zip(found, near.tolist(), strict=True), key=lambda item: item[0].from_along):
+        if any(k.from_along - spare <= x <= k.to_along + spare for k in known for x in (at, at + length)):
+            continue
+        one = replace(zone, peak=abs(zone.peak))
+        if missed and one.from_along - missed[-1].to_along < _TURNS * limit:
+            before = missed.pop()
+            top = one if one.peak > before.peak else before
+            one = replace(top, from_along=before.from_along, to_along=max(before.to_along, one.to_along))
+        missed.append(one)
+    return sorted(missed, key=lambda zone: -zone.peak)
 
 
 def _chord_error(curve: Curve, limit: float) -> float:

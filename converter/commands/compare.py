@@ -120,9 +120,7 @@ def compare(
     """
     outputs = _outputs(context, {"-o": output, "--page": page, "--table": table, "--report": report}, force, [old, new])
     if verdict_only and set(outputs) - {"--report"}:
-        raise click.UsageError(
-            "--verdict measures nothing that a map could show; leave out -o, --page, --table", context
-        )
+        raise click.UsageError("--verdict leaves nothing to be drawn; leave it out for -o, --page or --table", context)
 
     from converter.comparison_report import verdict
     from converter.jobs.compare import CompareSettings, compare_drawings  # slow to import, and the help needs none

@@ -1,6 +1,7 @@
 """How far the two profiles of a pair lie from each other: certified, signed along NEW, and in zones."""
 
 import math
+from dataclasses import replace
 
 import numpy as np
 
@@ -17,6 +18,8 @@ __all__ = ["decided", "measured"]
 
 _WIDTH = 1.0 / 200.0  # of the limit: how far certified and measured may lie apart
 _FINE = 1e-5  # of the size: the same where there is no limit, and the least deviation that is a limit for the search
+_COURSE = 1.0 / 4000.0  # of the limit, or of the distance where that is less: chord error of signed deviations
+_LEAST = 1e-8  # of the size: the least chord error
 _CLOSER = 1e-3  # times the width: tried where the limit lies between measured and certified
 _OUT_OF_ORDER = 1.5  # times the distance: what two profiles in the same order may be proven to on top of it
 _UNDECIDED = "too close to the limit to be proven within it: counted as out"
@@ -35,10 +38,13 @@ def measured(old: Figure, new: Figure, how: str, limits: Limits | None) -> Compa
         inside, distance, told = _verdict(old, new, limits, distance, slack)
         said += told
     certified = max(distance.forward.certified, distance.backward.certified) + slack
-    course = course_along(new.curve, old.curve, scale)
+    error = min(_COURSE * scale, max(_COURSE * certified, _LEAST * size))
+    course = course_along(new.curve, old.curve, scale, _crosses(old, scale), error)
+    if certified == 0.0:  # the same number for number: nothing but chord errors could be measured
+        course = replace(course, deviation=np.zeros(len(course.along)))
     figures = course.statistics()
-    order = None
-    if old.closed == new.closed:
+    order = 0.0 if certified == 0.0 else None
+    if certified > 0.0 and old.closed == new.closed:
         order = travel_order(new.curve, old.curve, max(scale, 1.01 * certified)).certified + slack
         said += _order_note(order, certified, limits, scale)
     record = PairRecord(
@@ -152,13 +158,17 @@ def _order_note(order: float, certified: float, limits: Limits | None, floor: fl
 def _zones(old: Figure, new: Figure, limits: Limits) -> list[ZoneRecord]:
     """Return the stretches out of limits, the farthest first."""
     planar = new.curve.dimension == 2
-    crossing = planar and old.closed and not is_simple(old.curve.flatten(0.1 * min(limits.plus, limits.minus)))
-    found = zones(new.curve, old.curve, limits.plus, limits.minus, crossing)
+    found = zones(new.curve, old.curve, limits.plus, limits.minus, _crosses(old, min(limits.plus, limits.minus)))
     words = ("outside", "inside") if old.closed else ("left", "right")
     out = [_record(zone, words[zone.peak < 0.0] if planar else "off", "new") for zone in found]
     missed = missed_zones(new.curve, old.curve, max(limits.plus, limits.minus), found)
     out += [_record(zone, "missing", "old") for zone in missed]
     return sorted(out, key=lambda zone: -abs(zone.peak))
+
+
+def _crosses(figure: Figure, scale: float) -> bool:
+    """Tell whether a closed planar figure crosses or touches itself."""
+    return figure.closed and figure.curve.dimension == 2 and not is_simple(figure.curve.flatten(0.1 * scale))
 
 
 def _record(zone: Zone, side: str, profile: str) -> ZoneRecord:
