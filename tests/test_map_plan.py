@@ -137,3 +137,10 @@ def test_far_from_the_origin():
     )
     assert [part.band for part in near.stretches[0]] == [part.band for part in far.stretches[0]]
     np.testing.assert_allclose(far.whiskers[0].tip - shift, near.whiskers[0].tip, atol=1e-5)
+
+
+def test_whiskers_of_many_small_profiles_stay_with_them():
+    old = [circle(30.0 * k, 0.0, 10.0) for k in range(12)]
+    plan = plan_of(comparison_of([(c, c.moved(np.array([0.1, 0.0]))) for c in old]))
+    longest = max(np.linalg.norm(w.tip - w.base, axis=1).max() for w in plan.whiskers)
+    assert 3.0 < longest < 15.0

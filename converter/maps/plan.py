@@ -21,6 +21,7 @@ __all__ = ["CHORD_SHARE", "Mark", "Plan", "Stretch", "Whiskers", "plan_of", "rou
 CHORD_SHARE = 1e-6
 """What splines are flattened to in a map, as a share of its size."""
 _LONGEST = 0.05  # of the size: the longest whisker where the factor is chosen
+_ROOM = 0.4  # of the size of a middling profile: the longest whisker of it there
 _SPACING = 1.0 / 250.0  # of the size: whiskers follow one another no closer
 _VISIBLE = 1.0 / 4000.0  # of the size: shorter whiskers are left out
 _MOST_STRETCHES = 2000  # of a pair
@@ -94,14 +95,14 @@ def plan_of(comparison: "Comparison", factor: float | None = None) -> Plan:
     Args:
         comparison: as measured.
         factor: how many times its size a deviation is drawn, above 0; None chooses a round number that makes the
-            largest one about a twentieth of the size, but 1 at least.
+            largest one about a twentieth of the size, less among many small profiles, but 1 at least.
     """
     bands = bands_of(comparison)
     low, high = _box(comparison)
     size = float(np.linalg.norm(high - low)) or 1.0
     largest = largest_of(comparison)
     if factor is None:
-        factor = round_factor(_LONGEST * size / largest) if largest > 0.0 else 1.0
+        factor = round_factor(min(_LONGEST * size / largest, _room(comparison))) if largest > 0.0 else 1.0
     spacing = _SPACING * size
     least = _VISIBLE * size if largest > 0.0 else np.inf
     spacing = max(spacing, sum(pair.record.length_new for pair in comparison.pairs) / _MOST_WHISKERS)
@@ -117,6 +118,16 @@ def plan_of(comparison: "Comparison", factor: float | None = None) -> Plan:
     marks.sort(key=lambda mark: -abs(mark.zone.peak))
     numbered = [Mark(k, mark.pair, mark.zone, mark.base, mark.tip) for k, mark in enumerate(marks, start=1)]
     return Plan(bands, size, low, high, factor, stretches, whiskers, numbered, coarse)
+
+
+def _room(comparison: "Comparison") -> float:
+    """Return the factor that draws the largest deviation of a middling profile over two fifths of its size."""
+    shares = []
+    for pair in comparison.pairs:
+        found = float(np.abs(pair.course.deviation).max(initial=0.0))
+        if found > 0.0:
+            shares.append(float(np.linalg.norm(np.subtract(*pair.old.bounds()))) / found)
+    return _ROOM * float(np.median(shares)) if shares else np.inf
 
 
 def round_factor(wanted: float) -> float:
