@@ -190,7 +190,7 @@ def _writers(
     if page is not None:
         from converter.pages.compare import write_page
 
-        writers.append(lambda: write_page(found, page, force, inputs))
+        writers.append(lambda: write_page(found, page, force, inputs, whiskers))
     if report is not None:
         from converter.report import write_json
 

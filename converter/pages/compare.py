@@ -1,5 +1,6 @@
 """The page of a comparison: verdict, map, deviation along each profile, zones and figures."""
 
+import math
 from collections.abc import Sequence
 from pathlib import Path
 from typing import TYPE_CHECKING, Any
@@ -70,7 +71,7 @@ def _page(comparison: "Comparison", whiskers: float | None) -> str:
         stated=None if comparison.limits is None else comparison.limits.stated,
         unit=unit_of(record.units),
         sense=SENSE,
-        coordinate=_coordinate,
+        coordinate=lambda value: _coordinate(value, plan.size),
         space=any(pair.new.dimension == 3 for pair in comparison.pairs),
         plan=plan,
         drawing=drawing,
@@ -232,9 +233,11 @@ def _mark(mark: Mark, comparison: "Comparison", plan: Plan, picture: Picture) ->
         "zone": zone,
         "from": f"{zone.from_along:.6g}",
         "to": f"{zone.to_along:.6g}",
-        "place": [_coordinate(zone.x), _coordinate(zone.y)],
+        "place": [_coordinate(zone.x, plan.size), _coordinate(zone.y, plan.size)],
     }
 
 
-def _coordinate(value: float) -> str:
-    return f"{value:.7g}".replace("-", "\u2212")
+def _coordinate(value: float, size: float) -> str:
+    """Return a coordinate told to a hundred-thousandth of the size of the map or finer."""
+    text = f"{value:.{min(max(5 - math.floor(math.log10(size)), 0), 12)}f}"
+    return ("0" if not float(text) else text).replace("-", "\u2212")
