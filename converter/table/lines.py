@@ -92,8 +92,8 @@ def _line(number: int, raw: str) -> Line:
 def separator_of(lines: list[Line], is_value: Callable[[str], bool]) -> Separator:
     """Return what separates the fields, from all lines that hold any.
 
-    Tabs and semicolons are separators wherever most lines have them. Commas are, unless blanks part the fields and every
-    comma stands inside a number: such a line read by its commas would have two numbers in one field.
+    Tabs and semicolons are separators wherever most lines have them. Commas are, unless blanks part the fields and
+    every comma stands inside a number: such a line read by its commas would have two numbers in one field.
 
     Args:
         lines: those with text.
