@@ -4,6 +4,7 @@ import base64
 import contextlib
 import json
 import os
+import select
 import shutil
 import subprocess
 import sys
@@ -66,6 +67,8 @@ class Browser:
 
     def _message(self):
         while b"\0" not in self._rest:
+            if not select.select([self._from], [], [], 60.0)[0]:
+                raise OSError("the browser has not answered for a minute")
             part = os.read(self._from, 1 << 20)
             if not part:
                 raise OSError("the browser has ended")
