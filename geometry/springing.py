@@ -7,6 +7,7 @@ import numpy as np
 
 from geometry.arrays import FloatArray, IntArray
 from geometry.bspline import Spline, join
+from geometry.curve import Curve
 from geometry.errors import GeometryError
 from geometry.interpolate import (
     EndCondition,
@@ -17,10 +18,11 @@ from geometry.interpolate import (
     quadratic_spline,
     quadratic_spline_on_nodes,
 )
+from geometry.nearest import SegmentSearch
 from geometry.parameter import ParameterKind, node_parameters
 from geometry.stations.within import spring_within
 
-__all__ = ["Sprung", "spring"]
+__all__ = ["Sprung", "corner_rows", "distances_from", "spring"]
 
 
 @dataclass(frozen=True, slots=True, eq=False)
@@ -154,3 +156,40 @@ def _run(
         slopes = cubic_spline(p, u, "not-a-knot").evaluate(u[[0, -1]], 1)
         start, end = (slopes[0] if start is None else start), (slopes[1] if end is None else end)
     return cubic_spline(p, u, "clamped", start, end)
+
+
+def corner_rows(points: FloatArray, closed: bool, angle: float) -> list[int]:
+    """Return the rows at which the path through stations turns by more than an angle.
+
+    Args:
+        points: neighbours apart, shape (n, d).
+        closed: whether it returns to the first station.
+        angle: radians.
+    """
+    path = np.vstack([points[-1:], points, points[:1]]) if closed else points
+    steps = np.diff(path, axis=0)
+    steps /= np.linalg.norm(steps, axis=1)[:, None]
+    turn = 2.0 * np.arcsin(np.clip(0.5 * np.linalg.norm(np.diff(steps, axis=0), axis=1), 0.0, 1.0))
+    return (np.flatnonzero(turn > angle) + (0 if closed else 1)).tolist()
+
+
+def distances_from(curve: Curve, points: FloatArray, delta: float) -> tuple[FloatArray, FloatArray]:
+    """Return bounds on the distance from points to a curve.
+
+    The curve is flattened to within delta, so that the distance to the curve and to the flattened one differ by no
+    more than that; the distance to the flattened one is bounded by `SegmentSearch.exact`.
+
+    Args:
+        curve: of the dimension of the points.
+        points: shape (n, d), drawing units.
+        delta: drawing units, above 0.
+
+    Returns:
+        Upper and lower bounds, shape (n,), up to rounding.
+    """
+    flat = curve.flatten(delta)
+    path = flat.path()
+    origin = path[0]
+    _, high, low = SegmentSearch((path[:-1] - origin).T, (path[1:] - origin).T).exact((points - origin).T)
+    slack = 0.0 if flat is curve else delta
+    return high + slack, np.maximum(low - slack, 0.0)

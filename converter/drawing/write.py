@@ -14,7 +14,7 @@ from geometry.arrays import FloatArray
 from geometry.bspline import Spline
 from geometry.polyline import Polyline
 
-__all__ = ["Written", "circle_of", "put_in_place", "replace", "supports", "written_curve"]
+__all__ = ["Written", "add_polyline", "add_spline", "circle_of", "put_in_place", "replace", "supports", "written_curve"]
 
 _SAME_CIRCLE = 1e-9  # largest difference of centres and radii, as a share of the radius, within one circle
 _COMMON = (
@@ -99,7 +99,7 @@ def replace(
     attributes = {name: first.dxf.get(name) for name in _COMMON if first.dxf.hasattr(name)}
     space = drawing.document.modelspace()
     if isinstance(curve, Spline):
-        entity, kept = _add_spline(space, curve, profile.frame, attributes), set[str]()
+        entity, kept = add_spline(space, curve, profile.frame, attributes), set[str]()
     elif isinstance(curve, Polyline) and curve.dimension == 3:
         entity, kept = (
             space.add_polyline3d(curve.points.tolist(), close=curve.closed, dxfattribs=attributes),
@@ -176,7 +176,8 @@ def circle_of(chain: ArcChain) -> tuple[FloatArray, float] | None:
     return (centre, radius) if once and apart <= _SAME_CIRCLE * radius else None
 
 
-def _add_spline(space: Any, curve: Spline, frame: Frame, attributes: dict[str, Any]) -> Any:
+def add_spline(space: Any, curve: Spline, frame: Frame, attributes: dict[str, Any]) -> Any:
+    """Add a spline in a frame as a SPLINE."""
     entity = space.new_entity("SPLINE", {**attributes, "degree": curve.degree})
     entity.control_points = frame.to_world(curve.control).tolist()
     entity.knots = curve.knots.tolist()
