@@ -1,6 +1,5 @@
 """Written figures: how finely the entries of a column were rounded, and the slips that turn one number into another."""
 
-from collections.abc import Sequence
 from decimal import Decimal
 from itertools import combinations, product
 
@@ -8,7 +7,7 @@ import numpy as np
 
 from geometry.arrays import FloatArray
 
-__all__ = ["resolutions", "slips", "slips_of_columns"]
+__all__ = ["resolutions", "slips"]
 
 _MOST_FIGURES = 8  # numbers with more come from a computation: nobody types them
 _FINEST = 1e-7  # of the largest entry: rounding finer than this is not told apart
@@ -40,10 +39,11 @@ def resolutions(column: FloatArray) -> list[FloatArray]:
     return [common] if np.array_equal(common, own) else [common, own]
 
 
-def slips(value: float) -> FloatArray:
+def slips(value: float, gross: bool = False) -> FloatArray:
     """Return the numbers that a slip of the pen turns into `value`: what may have been meant, without repeats.
 
-    Slips: two different figures swapped, the sign lost or added, the point shifted by one place, one figure wrong.
+    Slips: two different figures swapped, the sign lost or added, the point shifted by one place, and, unless only gross
+    ones are asked for, one figure wrong.
     """
     digits, exponent = _figures(value)
     if value == 0.0 or len(digits) > _MOST_FIGURES:
@@ -55,18 +55,13 @@ def slips(value: float) -> FloatArray:
             swapped = list(form)
             swapped[i], swapped[j] = swapped[j], swapped[i]
             meant.add(float(f"{sign}{''.join(swapped)}e{power}"))
-        if lead == 0 and trail < 2:
+        if lead == 0 and trail < 2 and not gross:
             for i in range(len(form)):
                 meant.update(float(f"{sign}{form[:i]}{figure}{form[i + 1 :]}e{power}") for figure in "0123456789")
     meant.update(float(f"{sign}{digits}e{exponent + shift}") for shift in (-1, 1))
     meant.add(-value)
     meant.discard(value)
     return np.array(sorted(meant))
-
-
-def slips_of_columns(points: FloatArray) -> Sequence[Sequence[FloatArray]]:
-    """Return `slips` of every entry, indexed by column and then by row; points have the shape (n, d)."""
-    return [[slips(float(value)) for value in column] for column in points.T]
 
 
 def _figures(value: float) -> tuple[str, int]:

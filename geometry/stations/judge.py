@@ -8,11 +8,11 @@ by window, so that the work is in proportion to the rows. The prior odds and the
 """
 
 from dataclasses import dataclass, replace
-from itertools import pairwise
+from itertools import pairwise, product
 
 import numpy as np
 
-from geometry.arrays import FloatArray, IntArray
+from geometry.arrays import BoolArray, FloatArray, IntArray
 from geometry.stations.figures import resolutions, slips
 from geometry.stations.prediction import Predictions, log_sum, predictions
 
@@ -22,14 +22,17 @@ LEAST_ROWS = 6
 """Fewer stations than this between corners say too little about one another to be judged."""
 
 _WINDOW = 24
-_THRESHOLD = 3.0  # logarithm of the odds from which a row is named
+_THRESHOLD = 4.5  # logarithm of the odds from which a row is named
 _SLIP, _ANY = np.log(0.8), np.log(0.2)  # of wrong entries
+_NEAR_END = 2  # rows
+_STEP_SHARE = 0.25
 _NEVER = -1e9
 _LOOKED_AT = 4  # rows a window that are tried in the view along the run
 _TRIED_SLIPS = 5
 _MOST_SUSPECTS = 4  # a window
 _LEAST_OFF = 4.0  # units of the last figure, and
 _LEAST_SURE = 3.0  # standard deviations, by which an entry must be off to be named
+_ROUNDING = 0.5  # of the last figure: standard deviation that makes a value as likely as can be, and a little less
 _UNEVEN = 0.1  # share of a chord by which the length along it is unsure, a radian of turn and of its change
 
 
@@ -115,11 +118,11 @@ def _worst(points: FloatArray, rows: IntArray, ends: bool) -> Suspect | None:
     window = points[rows]
     if (np.linalg.norm(np.diff(window, axis=0), axis=1) <= 0.0).any():
         return None
-    views = _Views(window)
+    # beyond an end there is nothing to hold an entry against: near it only a gross slip that fits counts
+    near = np.minimum(rows, len(points) - 1 - rows) < (_NEAR_END if ends else 0)
+    views = _Views(window, near)
     odds = views.odds()
-    if ends:  # beyond an end there is nothing to hold the entry against: only a slip that fits counts there
-        last = len(points) - 1
-        odds[(rows == 0) | (rows == last)] = views.odds(slips_only=True)[(rows == 0) | (rows == last)]
+    odds[near] = views.odds(slips_only=True)[near]
     for best in np.argsort(-odds, axis=None)[:_LOOKED_AT]:
         row, column = (int(k) for k in np.unravel_index(best, odds.shape))
         if odds[row, column] < _THRESHOLD:
@@ -127,6 +130,9 @@ def _worst(points: FloatArray, rows: IntArray, ends: bool) -> Suspect | None:
         given = float(window[row, column])
         fair, deviation, meant = views.better(row, column)
         away = abs(given - fair)
+        if near[row]:  # round ends are steep there: what is off by less than a part of a step may be right
+            beside = window[np.clip([row - 1, row + 1], 0, len(window) - 1), column]
+            away *= away > _STEP_SHARE * abs(float(beside[1] - beside[0]))
         if away > _LEAST_OFF * views.unit_beside(row, column) and away > _LEAST_SURE * deviation:
             return Suspect(int(rows[row]), column, given, fair, deviation, meant, float(odds[row, column]))
     return None
@@ -135,15 +141,13 @@ def _worst(points: FloatArray, rows: IntArray, ends: bool) -> Suspect | None:
 class _Views:
     """The three views of a window and what each says of every row being wrong."""
 
-    def __init__(self, points: FloatArray) -> None:
+    def __init__(self, points: FloatArray, near: BoolArray) -> None:
         self.points = points
         self.units = [resolutions(column) for column in points.T]
+        finest = [units[-1].tolist() for units in self.units]
         self.slips = [
-            [
-                _apart(slips(float(value)), float(value), _LEAST_OFF * unit)
-                for value, unit in zip(column, own, strict=True)
-            ]
-            for column, own in zip(points.T, (units[-1].tolist() for units in self.units), strict=True)
+            [_apart(slips(value, gross), value, _LEAST_OFF * unit) for value, gross, unit in zip(*entries, strict=True)]
+            for entries in zip(points.T.tolist(), [near.tolist()] * points.shape[1], finest, strict=True)
         ]
         self.null: list[float] = []
         d = points.shape[1]
@@ -261,21 +265,27 @@ class _Views:
         slip, free = np.full((n, d), _NEVER), np.full((n, d), _NEVER)
         size = max(self._range(c) for c in range(d))
         fine = min(float(np.median(unit[-1])) for unit in self.units)
+        others = np.full(n, _NEVER)
         rows = [*np.argsort(-before)[: _LOOKED_AT // 2].tolist(), *np.argsort(content)[:_LOOKED_AT].tolist()]
         rows = list(dict.fromkeys(rows))
         rival = max(max(self.null[:-1]), *(float(part.max()) for part in (*self.slip, *self.any)))
         for k, row in enumerate(rows):
             rest = [[np.delete(unit, row) for unit in units] for units in self.units]
-            others = sum(_whole(part) for part in _parametric(np.delete(points, row, axis=0), rest))
-            free[row] = others - np.log(3.0 * size) - (d - 1) * np.log(fine)  # along the run every place is as good
+            others[row] = sum(_whole(part) for part in _parametric(np.delete(points, row, axis=0), rest))
+            free[row] = (
+                others[row] - np.log(3.0 * size) - (d - 1) * np.log(fine)
+            )  # along the run every place is as good
             if k == _LOOKED_AT // 2 and max(self.null[-1], float(free.max())) < rival:
                 self.null.pop()  # another view tells more: nothing is gained along the run
                 return
-        for row in rows:
-            for column in range(d):
-                options = self.slips[column][row]
-                tried = self._near(row, column, options)
-                gains = [self._with_value(row, column, value) for value in tried]
+        null = float(log_sum(np.array(self.null)[:, None])[0]) + np.log(2.0 * points.size)
+        for row, column in product(rows, range(d)):
+            options = self.slips[column][row]
+            most = others[row] - sum(
+                np.log(_ROUNDING * float(unit[-1][row])) for unit in self.units
+            )  # at the very best
+            if len(options) and most - np.log(len(options)) - null > _THRESHOLD - 1.0:
+                gains = [self._with_value(row, column, value) for value in self._near(row, column, options)]
                 if gains:
                     slip[row, column] = float(log_sum(np.array(gains)[:, None])[0]) - np.log(len(options))
         self.part.append({})

@@ -4,7 +4,7 @@ A curve that turns one way only and passes two stations, the one before and the 
 the two and the lines of the neighbouring chords: it lies in the triangle of these three lines. Where the stations turn
 one way at one end and the other way at the other, it may lie on either side, each within the wedge of its own end. What
 leaves that band by more than a share of the chord overshoots. The band follows from convexity; the share, the largest
-turn and the order of the cures are empirical.
+turn and the order of the cures are empirical. In space only the width of the band counts, not its side.
 """
 
 from collections.abc import Callable, Iterable

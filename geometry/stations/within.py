@@ -1,9 +1,9 @@
 """The fairest spline that passes every station within a tolerance.
 
-Unknown are the control points y of the interpolating kind of spline (one for every station, after the end conditions),
-so that M y are its points at the stations and |D y|^2 is its unfairness. Minimising |D y|^2 with every row of M y in a
-ball about its station is convex. It is solved by the alternating direction method of multipliers: a banded system that
-is factored once a weight, and a projection onto the balls.
+Unknown are the control points y of the cubic spline through the stations, so that M y are its points at the stations
+and |D y|^2 is its unfairness, D taken with the tangents of the pass before. Minimising |D y|^2 with every row of M y in
+a ball about its station is convex. It is solved by the alternating direction method of multipliers: a banded system,
+factored once a weight, and a projection onto the balls.
 Source: S. Boyd and others, "Distributed optimization and statistical learning via the alternating direction method of
 multipliers", Foundations and Trends in Machine Learning 3 (2011), pp. 1-122, sections 3.4.1 and 5.
 """
@@ -34,6 +34,7 @@ _ROUNDS = 4000
 _SHARE = 0.999  # of the tolerance that the search may use
 _SETTLED = 1e-5  # of the tolerance, change by which it has settled
 _RELAXED, _REVIEW = 1.6, 20
+_PASSES = 2  # with tangents of the result before
 _LEAST = 1e-9  # of the extent: a smaller tolerance asks for interpolation
 
 
@@ -50,9 +51,11 @@ def spring_within(
 ) -> Spline:
     """Return the fairest spline that passes every station within a tolerance.
 
-    Fairest is the least integral of the squared third derivative with respect to the parameter (degree 3). For degrees
-    2 and 1 it is the squared jumps of the last derivative, which is constant by pieces, over the distances between the
-    middles of the pieces. A circle costs next to nothing over chord length, so sizes are kept.
+    Fairest is the least sum of two integrals of squares: the third derivative across the curve, which is the change of
+    curvature along it where the parameter is chord length, and the change of the third derivative along the curve from
+    piece to piece. Lines and circles cost nothing, so that sizes are kept; of curves that cost the same the one nearest
+    to the stations is taken: the mean square distance counts as much as a wave as long as the whole curve. For degrees
+    2 and 1 the stations move to where the fairest cubic passes them.
 
     Every station is met within the tolerance at its own parameter, which is proven: the result is the interpolating
     spline plus a share of the difference from it, and that share is taken so that the largest distance, found at the
@@ -136,30 +139,69 @@ class _Run:
 
     def fairest(self) -> Spline:
         """Return the fairest spline: the exact one moved towards the solution as far as the tolerance lets it."""
-        if self.tolerance == 0.0 or len(self.p) < self.degree + 2:
+        if self.tolerance == 0.0 or len(self.p) < 5:
             return self.exact
         moved = self._solved() - self.p
         moved[self.fixed] = 0.0
         share = min(1.0, self.tolerance / max(float(np.linalg.norm(moved, axis=1).max()), 1e-300))
         return self._through(self.p + (1.0 - 1e-12) * share * moved)
 
+    def _cubic(self, p: FloatArray) -> Spline:
+        """Return the cubic spline through points, for any degree."""
+        if self.closed:
+            return periodic_cubic_spline(p, self.u)
+        ends = self.ends if self.degree == 3 else "not-a-knot"
+        return cubic_spline(p, self.u, ends, self.start, self.end)
+
     def _solved(self) -> FloatArray:
         """Return the points at the stations of the fairest spline found, shape (n, d)."""
+        import scipy.sparse as sparse
+
+        n, d = self.p.shape
+        spline = self._cubic(self.p)
+        breaks = spline.breaks
+        orders = _derivatives(spline)
+        if self.closed:
+            rows = [order[:1] - order[-1:] for order in orders[:3]]
+        elif self.degree == 3 and self.ends in ("natural", "clamped"):
+            order = orders[2 if self.ends == "natural" else 1]
+            rows = [order[:1], order[-1:]]
+        else:
+            rows = [sparse.csr_array((0, len(spline.control)))]
+        basis = _basis(spline, self.u[:n])
+        every = sparse.eye_array(d)  # unknown are all coordinates together, x of all control points first
+        stations = sparse.kron(every, basis).tocsr()
+        fixed = sparse.kron(every, sparse.vstack([*rows, basis[np.flatnonzero(self.fixed)]])).tocsr()
+        third = sparse.kron(every, sparse.diags_array(np.sqrt(np.diff(breaks))) @ orders[3]).tocsr()
+        anchor = np.diff(breaks).mean() * (2.0 * np.pi / (breaks[-1] - breaks[0])) ** 6
+        m = len(breaks) - 1
+        middle, moved = 0.5 * (breaks[1:] + breaks[:-1]), np.zeros((n, d))
+        for _ in range(_PASSES):
+            tangent = self._cubic(self.p + moved).evaluate(middle, 1)
+            tangent /= np.maximum(np.linalg.norm(tangent, axis=1), 1e-300)[:, None]
+            across = [
+                [sparse.diags_array(float(a == b) - tangent[:, a] * tangent[:, b]) for b in range(d)] for a in range(d)
+            ]
+            ahead = sparse.hstack([sparse.diags_array(tangent[:, a]) for a in range(d)]).tocsr()
+            change = ahead[1:] - ahead[:-1] if not self.closed else ahead - ahead[np.roll(np.arange(m), 1)]
+            unfair = sparse.vstack([sparse.block_array(across), change]) @ third
+            moved = self._search(unfair.T @ unfair + anchor * (stations.T @ stations), stations, fixed, spline, anchor)
+        return self.p + moved
+
+    def _search(
+        self, weight: "csr_array", stations: "csr_array", fixed: "csr_array", spline: Spline, anchor: float
+    ) -> FloatArray:
+        """Return how the stations move for the least quadratic form of the control points, shape (n, d)."""
         import scipy.sparse as sparse
         from scipy.sparse.linalg import splu
 
         n, d = self.p.shape
-        spline = self.exact
-        at_stations = _basis(spline, self.u[:n])
-        unfair, ends = self._operators()
-        weight = unfair.T @ unfair
-        square = at_stations.T @ at_stations
-        fixed = sparse.vstack([ends, at_stations[np.flatnonzero(self.fixed)]]).tocsr()
-        blank = sparse.csr_array((fixed.shape[0], fixed.shape[0]))
+        control = (spline.control - spline.control[0]).T.ravel()
+        pull = anchor * (stations.T @ (stations @ control)) - weight @ control
+        scale = abs(weight).max()  # only ratios count
+        weight, pull = weight / scale, pull / scale
+        square, blank = stations.T @ stations, sparse.csr_array((fixed.shape[0], fixed.shape[0]))
         radius = np.where(self.fixed, 0.0, _SHARE * self.tolerance)
-        pull = -(weight @ (spline.control - spline.control[0]))
-        weight = weight * (1.0 / abs(weight).max())  # only ratios count
-        pull *= 1.0 / abs(unfair.T @ unfair).max()
 
         def factored(rho: float) -> Callable[[FloatArray], FloatArray]:
             whole = sparse.block_array([[weight + rho * square, fixed.T], [fixed, blank]]).tocsc()
@@ -168,10 +210,10 @@ class _Run:
         rho = 1e-3
         solve = factored(rho)
         z, w, off = np.zeros((n, d)), np.zeros((n, d)), np.zeros((n, d))
-        zeros = np.zeros((fixed.shape[0], d))
+        zeros = np.zeros(fixed.shape[0])
         for round_ in range(_ROUNDS):
-            right = np.vstack([pull + rho * (at_stations.T @ (z - w)), zeros])
-            off = at_stations @ solve(right)[: len(spline.control)]
+            right = np.concatenate([pull + rho * (stations.T @ (z - w).T.ravel()), zeros])
+            off = (stations @ solve(right)[: len(control)]).reshape(d, n).T
             eased = _RELAXED * off + (1.0 - _RELAXED) * z
             before, z = z, _into_ball(eased + w, radius)
             w += eased - z
@@ -182,33 +224,7 @@ class _Run:
                 factor = float(np.clip(np.sqrt(apart / max(change, 1e-300)), 0.1, 10.0))
                 rho, w = rho * factor, w / factor
                 solve = factored(rho)
-        return np.asarray(self.p + off, dtype=np.float64)
-
-    def _operators(self) -> tuple["csr_array", "csr_array"]:
-        """Return D, whose squares add up to the unfairness, and the end conditions E of differences (E c = 0)."""
-        import scipy.sparse as sparse
-
-        spline, p = self.exact, self.degree
-        orders = _derivatives(spline)
-        top, breaks = orders[-1], spline.breaks
-        if p == 3:
-            unfair = sparse.diags_array(np.sqrt(np.diff(breaks))) @ top
-        else:
-            middle = 0.5 * (breaks[:-1] + breaks[1:])
-            apart = np.diff(middle)
-            jump = top[1:] - top[:-1]
-            if self.closed:
-                jump = sparse.vstack([jump, top[:1] - top[-1:]])
-                apart = np.append(apart, middle[0] - breaks[0] + breaks[-1] - middle[-1])
-            unfair = sparse.diags_array(1.0 / np.sqrt(apart)) @ jump
-        if self.closed:
-            rows = [order[:1] - order[-1:] for order in orders[: min(p, 2) + 1]]
-        elif p == 3 and self.ends in ("natural", "clamped"):
-            order = orders[2 if self.ends == "natural" else 1]
-            rows = [order[:1], order[-1:]]
-        else:
-            rows = [sparse.csr_array((0, len(spline.control)))]
-        return unfair.tocsr(), sparse.vstack(rows).tocsr()
+        return off
 
 
 def _basis(spline: Spline, u: FloatArray) -> "csr_array":
