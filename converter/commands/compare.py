@@ -144,7 +144,7 @@ def compare(
     for write in _writers(found, output, page, table, report, version, whiskers, force):
         write()
     if not quiet:
-        _print(found, outputs)
+        _print(found, outputs, figures=not verdict_only)
         print(verdict(found.record, found.limits))
     return _OUT if found.record.within_tolerance is False else _WITHIN
 
@@ -198,7 +198,7 @@ def _writers(
     return writers
 
 
-def _print(found: "Comparison", outputs: dict[str, Path]) -> None:
+def _print(found: "Comparison", outputs: dict[str, Path], figures: bool) -> None:
     """Print what was found; the verdict comes after it."""
     from converter.comparison_report import (
         PAIR_HEADINGS,
@@ -215,7 +215,7 @@ def _print(found: "Comparison", outputs: dict[str, Path]) -> None:
     print(move_line(record))
     for warning in record.warnings:
         print(f"note: {warning}")
-    rows = pair_rows(record)
+    rows = pair_rows(record) if figures else []
     if rows:
         print_table(PAIR_HEADINGS, rows[:_SHOWN], right=PAIR_HEADINGS[3:])
         if len(rows) > _SHOWN:
