@@ -1,5 +1,6 @@
 """Drawings: the profiles in a DXF document, and the document itself, which nothing else changes."""
 
+from converter.drawing.add import add_curve, new_drawing
 from converter.drawing.model import PLAN, AnyCurve, Drawing, Frame, NearGap, Profile, Skipped
 from converter.drawing.read import GAP_SHARE, read_drawing
 from converter.drawing.save import save
@@ -15,6 +16,8 @@ __all__ = [
     "Profile",
     "Skipped",
     "Written",
+    "add_curve",
+    "new_drawing",
     "read_drawing",
     "replace",
     "save",
