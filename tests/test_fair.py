@@ -183,6 +183,8 @@ def test_the_reported_deviation_bounds_the_true_one_in_the_written_file(tmp_path
     assert found <= profile.deviation.certified + 1e-4 <= 1.0 + 1e-4  # 1e-4: sagitta of the sampled run
     assert profile.deviation.measured <= found + 0.02  # found on samples 0.05 apart
     assert profile.deviation.certified <= 1.03 * found  # and not merely pessimistic
+    assert profile.deviation.measured <= profile.deviation.in_order <= 1.5  # passed in the same order
+    assert not any("same order" in line for line in profile.warnings)
     assert profile.within_tolerance
     assert abs(profile.deviation.mean_signed) <= 0.1
     assert profile.area_out == pytest.approx(shapely.Polygon(points).area, rel=1e-4)
@@ -288,7 +290,7 @@ def test_the_record_has_the_agreed_keys(tmp_path):
         *("within_tolerance", "warnings"),
     }
     assert set(profile["corners"][0]) == {"x", "y", "turn_deg"}
-    assert set(profile["deviation"]) == {"certified", "measured", "rms", "mean_signed"}
+    assert set(profile["deviation"]) == {"certified", "measured", "rms", "mean_signed", "in_order"}
     assert set(profile["fairness"]) == {"before", "after"}
     for when in ("before", "after"):
         assert set(profile["fairness"][when]) >= {"inflections", "curvature_extrema", "least_radius", "strain_energy"}

@@ -23,11 +23,13 @@ from geometry.deviation import hausdorff
 from geometry.fairness import fairness
 from geometry.polyline import Polyline
 from geometry.signed import deviation_statistics
+from geometry.travel import travel_order
 
 __all__ = ["FairSettings", "fair_drawing"]
 
 _WIDTH = 1.0 / 200.0
 _FEW = 30  # entities: no more need be said of how many they are
+_OUT_OF_ORDER = 1.5  # tolerances that outline and curve may be apart in order of travel: the bound is not tight
 _SHORT = 0.7  # of the recommended tolerance: one that is smaller leaves jaggedness in the curve
 
 
@@ -168,7 +170,7 @@ def _as_drawn(profile: Profile, need: Assessment, reason: str) -> ProfileRecord:
         length_out=length,
         area_in=area,
         area_out=area,
-        deviation=DeviationRecord(0.0, 0.0, 0.0, 0.0),
+        deviation=DeviationRecord(0.0, 0.0, 0.0, 0.0, 0.0),
     )
     if need.unusable:
         record.warnings.append(f"passed through unchanged: {reason}")
@@ -199,6 +201,7 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
     assert outline is not None
     deviation = hausdorff(outline, curve, _WIDTH * tolerance)
     certified = deviation.certified + need.slack
+    in_order = travel_order(outline, curve, tolerance).certified + need.slack
     statistics = deviation_statistics(curve, outline, tolerance)
     points, turns = corner_turns(result.faired.spline.moved(origin))
     circle = result.faired.circle
@@ -226,7 +229,7 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
             for p, t in zip(points, turns, strict=True)
         ],
         deviation=DeviationRecord(
-            certified, max(0.0, deviation.measured - need.slack), statistics.rms, statistics.mean_signed
+            certified, max(0.0, deviation.measured - need.slack), statistics.rms, statistics.mean_signed, in_order
         ),
         fairness={
             "before": fairness(outline, tolerance, _alongs(outline, points)).record(),
@@ -242,6 +245,11 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
     if not record.within_tolerance:
         said = f"out of tolerance: certified {certified:.4g} of {tolerance:.4g}; state a larger tolerance"
         record.warnings.append(said)
+    elif in_order > _OUT_OF_ORDER * tolerance:
+        record.warnings.append(
+            f"passed in the same order, outline and curve are only proven to stay within {in_order:.4g} of one another: "
+            "the curve may cut across a narrow neck or leave out a spike; look there, or state a smaller tolerance"
+        )
     return record
 
 

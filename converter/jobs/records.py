@@ -15,12 +15,14 @@ class DeviationRecord:
         measured: found: never above it.
         rms: root mean square of the distance along the written curve, from samples.
         mean_signed: mean of the signed distance along it, + outside (closed) or left of travel (open); None in 3-D.
+        in_order: proven bound on the distance when both are travelled from end to end in the same order.
     """
 
     certified: float
     measured: float
     rms: float
     mean_signed: float | None
+    in_order: float | None = None
 
 
 @dataclass(slots=True)
