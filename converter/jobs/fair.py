@@ -247,7 +247,7 @@ def _record(profile: Profile, need: Assessment, written: Written, result: Result
         record.warnings.append(said)
     elif in_order > _OUT_OF_ORDER * tolerance:
         record.warnings.append(
-            f"passed in the same order, outline and curve are only proven to stay within {in_order:.4g} of one another: "
+            f"passed in the same order, outline and curve are only proven to stay within {in_order:.4g} of each other: "
             "the curve may cut across a narrow neck or leave out a spike; look there, or state a smaller tolerance"
         )
     return record
