@@ -29,7 +29,7 @@ from geometry.simple import is_simple
 __all__ = ["SideDecision", "within_sides"]
 
 _U = 2.0**-53
-_SHARES = (1e-2, 1e-4, 1e-6)  # of the smaller limit: chord errors, the next one where one leaves it open
+_SHARES = (1e-2, 1e-4)  # of the smaller limit: chord errors, the next one where one leaves it open
 _ROUNDS = 30
 _MOST = 100_000  # chords more than either curve has: beyond, the decision is left open
 

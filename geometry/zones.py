@@ -27,7 +27,7 @@ _CHORD_ERROR = 1e-6  # of the smaller limit: chords of both curves
 _MOST_CHORDS = 400_000  # of a curve; the chord error is raised where it would take more
 _STEP = 0.5  # of the smaller limit: distance of samples, raised where that would be many
 _SAMPLES = 2000  # that a curve has at least, and at most four to every chord of the coarse curves besides
-_ROUNDS = 48
+_ROUNDS = 32  # of golden sections and of halvings
 _TURNS = 10.0  # limits: what is missed at turns no farther apart is one zone
 _GOLDEN = 0.5 * (np.sqrt(5.0) - 1.0)
 
@@ -64,6 +64,18 @@ def zones(curve: Curve, reference: Curve, plus: float, minus: float, crossing: b
         NotFiniteError, TooFewPointsError: a curve cannot be used.
         GeometryError: the dimensions differ, a curve has no length or a limit is not a number above 0.
     """
+    return _found(curve, reference, plus, minus, crossing, lambda points: np.ones(len(points), dtype=np.bool_))
+
+
+def _found(
+    curve: Curve,
+    reference: Curve,
+    plus: float,
+    minus: float,
+    crossing: bool,
+    wanted: Callable[[FloatArray], BoolArray],
+) -> list[Zone]:
+    """Return the zones whose highest samples, points of shape (n, d), are wanted; otherwise as `zones`."""
     if not (0.0 < plus < np.inf and 0.0 < minus < np.inf):
         raise GeometryError(f"limits of {plus:g} and {minus:g} cannot be used; both must be numbers above 0")
     narrow = min(plus, minus) if curve.dimension == 2 else plus
@@ -86,6 +98,10 @@ def zones(curve: Curve, reference: Curve, plus: float, minus: float, crossing: b
     if not first.size:
         return []  # places too close to the limit to be proven within it, and none of them out
     peaks = np.array([a + int(np.argmax(np.abs(value[a : b + 1]))) for a, b in zip(first, last, strict=True)])
+    kept = np.flatnonzero(wanted(track.at(place[peaks])))
+    if not kept.size:
+        return []
+    first, last, peaks = first[kept], last[kept], peaks[kept]
     low, high = place[np.maximum(peaks - 1, 0)], place[np.minimum(peaks + 1, len(place) - 1)]
     best, height = _highest(lambda x: np.abs(over(x)[0]), low, high, place[peaks], np.abs(value[peaks]))
     starts = _edges(over, place, first, -1, side)
@@ -98,7 +114,7 @@ def zones(curve: Curve, reference: Curve, plus: float, minus: float, crossing: b
             ends_and_tops, (signs * height).tolist(), points.tolist(), strict=True
         )
     ]
-    if curve.closed and len(found) > 1 and side[0] != 0 and side[0] == side[-1]:
+    if curve.closed and len(found) > 1 and first[0] == 0 and last[-1] == len(side) - 1 and side[0] == side[-1]:
         found = _through_the_start(found, track.length)
     return sorted(found, key=lambda zone: -abs(zone.peak))
 
@@ -121,16 +137,22 @@ def missed_zones(curve: Curve, reference: Curve, limit: float, known: list[Zone]
     Raises:
         As `zones`.
     """
-    found = zones(reference, curve, limit, limit)
-    if not found:
-        return []
-    track = _Track(curve, limit)
-    near = track.along(track.nearest(np.array([zone.point for zone in found])))
-    length, spare = track.length, 1e-9 * track.length + limit
+    spans = np.array([(zone.from_along, zone.to_along) for zone in known]).reshape(-1, 2)
+
+    def unknown(points: FloatArray) -> BoolArray:
+        """Tell whose nearest places on the curve lie in none of the zones that are known."""
+        if not len(spans):
+            return np.ones(len(points), dtype=np.bool_)
+        track = _Track(curve, limit)
+        near = track.along(track.nearest(points))
+        spare = 1e-9 * track.length + limit
+        at = np.stack([near, near + track.length], axis=1)[:, :, None]
+        inside = (spans[:, 0] - spare <= at) & (at <= spans[:, 1] + spare)
+        return np.asarray(~inside.any(axis=(1, 2)))
+
     missed: list[Zone] = []
-    for zone, at in sorted(zip(found, near.tolist(), strict=True), key=lambda item: item[0].from_along):
-        if any(k.from_along - spare <= x <= k.to_along + spare for k in known for x in (at, at + length)):
-            continue
+    found = _found(reference, curve, limit, limit, False, unknown)
+    for zone in sorted(found, key=lambda zone: zone.from_along):
         one = replace(zone, peak=abs(zone.peak))
         if missed and one.from_along - missed[-1].to_along < _TURNS * limit:
             before = missed.pop()

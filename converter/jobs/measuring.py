@@ -20,7 +20,7 @@ _WIDTH = 1.0 / 200.0  # of the limit: how far certified and measured may lie apa
 _FINE = 1e-5  # of the size: the same where there is no limit, and the least deviation that is a limit for the search
 _COURSE = 1.0 / 4000.0  # of the limit, or of the distance where that is less: chord error of signed deviations
 _LEAST = 1e-8  # of the size: the least chord error
-_CLOSER = 1e-3  # times the width: tried where the limit lies between measured and certified
+_CLOSER = 1e-2  # times the width: tried where the limit lies between measured and certified
 _OUT_OF_ORDER = 1.5  # times the distance: what two profiles in the same order may be proven to on top of it
 _UNDECIDED = "too close to the limit to be proven within it: counted as out"
 _LIFTED = 1e-7  # of the size: what arcs in space are flattened to
@@ -67,7 +67,7 @@ def measured(old: Figure, new: Figure, how: str, limits: Limits | None) -> Compa
             figures.max_minus,
             figures.percentile_95,
         ),
-        [] if limits is None else _zones(old, new, limits),
+        [] if limits is None or inside else _zones(old, new, limits),  # none where none is proven to be
         inside,
         said,
     )
