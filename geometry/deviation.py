@@ -32,6 +32,7 @@ from geometry.curve import Curve
 from geometry.errors import GeometryError
 from geometry.intervals import ChordBounds, bound_chords
 from geometry.nearest import SegmentSearch
+from geometry.runs import RUN, Runs, runs
 from geometry.shared import identical, shared_pieces
 
 __all__ = [
@@ -51,6 +52,9 @@ _FINER = 16.0  # by how much chord errors shrink from level to level
 _FEW, _PROBES = 0.3, 200  # of the chords, not shared, that are worth a trial of their own; chords tried at first
 _CHORDS = 2_000_000  # a level with more chords than this, and than four times the first, is not tried
 _PAIRS = 50_000
+_MANY = 2_000  # chords from which a curve is first looked at by runs of them
+_RUN_ERROR, _EVERY = 0.2, 20  # of the tolerance; every so many runs tell whether runs are worth taking
+_WORTH = 0.3  # of the chords: more runs than this, or more chords left by them, are not worth the look
 
 
 @dataclass(frozen=True, slots=True)
@@ -172,8 +176,10 @@ def hausdorff(a: Curve, b: Curve, width: float) -> TwoSided:
 def within(a: Curve, b: Curve, tolerance: float, resolution: float = 1e-6) -> Decision:
     """Decide whether every point of each curve lies within a tolerance of the other curve.
 
-    Much cheaper than `hausdorff` where the answer is clear. Pieces that both curves have in common are at distance 0
-    and left out; what is left of one is held against what is left of the other first, which can only overstate.
+    Much cheaper than `hausdorff` where the answer is clear. Long curves are first held against each other by runs of
+    their chords (`geometry.runs`), which settles all but what comes near to the tolerance. Where that fails, pieces
+    that both curves have in common are at distance 0 and left out; what is left of one is held against what is left of
+    the other first, which can only overstate.
 
     Args:
         a, b: as for `directed_hausdorff`.
@@ -185,6 +191,9 @@ def within(a: Curve, b: Curve, tolerance: float, resolution: float = 1e-6) -> De
         As `directed_hausdorff`.
     """
     pair = _Pair(a, b, _positive(resolution, "resolution") * _positive(tolerance, "tolerance"), tolerance)
+    looked = pair.looked_over()
+    if looked is not None:
+        return looked
     own = [np.flatnonzero(~same[chords.element]) for same, chords in zip(shared_pieces(a, b), pair.sides, strict=True)]
     forward = pair.decided(*pair.sides, *own)
     inside = _verdict(forward, tolerance)
@@ -246,6 +255,7 @@ class _Pair:
         # certified - measured <= slack + 4 chord errors + rounding: width / 8 + 4 / 9 width + 2 roundings
         self.finest = max(width / 9.0, self.rounding)
         least = self.finest if tolerance is None else max(self.finest, tolerance / 25.0)
+        self.searches: dict[int, SegmentSearch] = {}
         self.a, self.b = (whole.split(max(least, even_delta(whole))) for whole in (whole_a, whole_b))
 
     def forward(self) -> Deviation:
@@ -257,6 +267,50 @@ class _Pair:
     @property
     def sides(self) -> tuple[Chords, Chords]:
         return self.a, self.b
+
+    def looked_over(self) -> Decision | None:
+        """Return the decision if runs of chords, and the chords of those few that they leave open, bring it about."""
+        assert self.tolerance is not None
+        if min(len(self.a), len(self.b)) < _MANY:
+            return None
+        for side in self.sides:
+            sample = (np.arange(0, len(side) - RUN, _EVERY * RUN)[:, None] + np.arange(RUN)).ravel()
+            if len(runs(side.take(sample), _RUN_ERROR * self.tolerance, self.rounding).chords) > _WORTH * len(sample):
+                return None
+        rough = [runs(side, _RUN_ERROR * self.tolerance, self.rounding) for side in self.sides]
+        if sum(len(side.chords) for side in rough) > _WORTH * (len(self.a) + len(self.b)):
+            return None
+        found: list[Deviation] = []
+        for one_way in (1, -1):
+            (rough_a, rough_b), (a, b) = rough[::one_way], self.sides[::one_way]
+            one = self.by_runs(rough_a, rough_b, a, b)
+            if one is None:
+                return None
+            found.append(one)
+            if one.measured > self.tolerance:
+                return Decision(False, found[0], found[1] if len(found) > 1 else None)
+        return Decision(True, found[0], found[1])
+
+    def by_runs(self, a: Runs, b: Runs, fine_a: Chords, fine_b: Chords) -> Deviation | None:
+        """Return bounds that decide whether a stays within the tolerance of b; None where runs do not tell."""
+        assert self.tolerance is not None
+        error = float(b.chords.error.max())
+        bounds = bound_chords(a.chords, _search(b.chords), error, 0.125 * self.tolerance, self.tolerance)
+        passed = bounds.lower - self.rounding > self.tolerance
+        over = np.flatnonzero(bounds.upper > self.tolerance - self.rounding)
+        if not over.size:
+            return Deviation(0.0, float(bounds.upper.max()) + self.rounding)
+        kept = np.array([bounds.chord]) if passed else over
+        rows = a.members(kept)
+        if len(rows) > _WORTH * len(fine_a):
+            return None
+        beside = b.members(_in_reach(a.chords.take(kept), b.chords, bounds.upper[kept]))
+        found = self.measure(fine_a.take(rows), fine_b.take(beside))
+        if found.measured > self.tolerance:
+            return Deviation(found.measured, float(bounds.upper.max()) + self.rounding, found.place)
+        if passed or found.certified > self.tolerance:
+            return None
+        return Deviation(0.0, self.tolerance)
 
     def decided(self, a: Chords, b: Chords, own_a: IntArray, own_b: IntArray) -> Deviation:
         """Return bounds that decide whether a stays within the tolerance of b; the other chords of both are shared."""
@@ -281,7 +335,7 @@ class _Pair:
         while True:
             error = float(b.error.max())
             slack = max(0.125 * self.width, 0.25 * error, 0.25 * self.rounding)
-            bounds = bound_chords(a, _search(b), error, slack, self.tolerance)
+            bounds = bound_chords(a, self.search(b), error, slack, self.tolerance)
             if bounds.lower > lower:
                 lower, place = bounds.lower, self.place(a, bounds)
             upper = min(upper, max(float(bounds.upper.max()), lower))
@@ -292,6 +346,15 @@ class _Pair:
             a, b = self.finer(a.take(kept), b, bounds.upper[kept])
             if len(a) + len(b) > most:
                 return found
+
+    def search(self, chords: Chords) -> SegmentSearch:
+        """Return a search among chords; that among all the first ones of a curve is kept."""
+        side = next((k for k, each in enumerate(self.sides) if each is chords), None)
+        if side is None:
+            return _search(chords)
+        if side not in self.searches:
+            self.searches[side] = _search(chords)
+        return self.searches[side]
 
     def enough(self, found: Deviation) -> bool:
         if self.tolerance is None:
