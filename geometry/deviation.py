@@ -27,6 +27,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from geometry.arrays import FloatArray, IntArray
+from geometry.bspline import Spline
 from geometry.chords import Chords, anchors, even_delta, whole_chords
 from geometry.curve import Curve
 from geometry.errors import GeometryError
@@ -255,6 +256,7 @@ class _Pair:
         # certified - measured <= slack + 4 chord errors + rounding: width / 8 + 4 / 9 width + 2 roundings
         self.finest = max(width / 9.0, self.rounding)
         least = self.finest if tolerance is None else max(self.finest, tolerance / 25.0)
+        self.shared = self.rounding if isinstance(a, Spline) else 0.0  # spans agree but for rounding, edges exactly
         self.searches: dict[int, SegmentSearch] = {}
         self.a, self.b = (whole.split(max(least, even_delta(whole))) for whole in (whole_a, whole_b))
 
@@ -316,7 +318,7 @@ class _Pair:
         """Return bounds that decide whether a stays within the tolerance of b; the other chords of both are shared."""
         assert self.tolerance is not None
         if not own_a.size:
-            return Deviation(0.0, 0.0)
+            return Deviation(0.0, self.shared)
         if own_b.size and max(len(own_a), len(own_b)) <= _FEW * len(a):
             beside = np.unique(np.clip(own_b[:, None] + np.array([-1, 0, 1]), 0, len(b) - 1))
             found = self.measure(a.take(own_a), b.take(beside))

@@ -85,3 +85,10 @@ def test_the_same_curve_is_within_any_tolerance():
     found = within(a, Polyline(POINTS.copy(), True).reversed(), 1e-300)
     assert found.inside
     assert found.forward.certified == 0.0
+
+
+def test_the_same_spline_is_proven_to_the_rounding_of_its_spans():
+    knots = np.concatenate([[0.0] * 3, np.arange(298.0), [297.0] * 3])
+    found = within(Spline(knots, POINTS, 3), Spline(knots, POINTS, 3).reversed(), 1e-9)
+    assert found.inside
+    assert 0.0 < found.forward.certified < 1e-10
