@@ -343,7 +343,8 @@ class _Pair:
             upper = min(upper, max(float(bounds.upper.max()), lower))
             found = Deviation(max(0.0, lower - self.rounding), upper + self.rounding, place)
             kept = np.flatnonzero(bounds.upper > (lower if self.tolerance is None else self.tolerance - self.rounding))
-            if self.enough(found) or not kept.size or (max(error, a.error[kept].max()) <= self.finest):
+            finest = max(error, a.error.max()) <= self.finest  # not only of those kept: all of a set the slack
+            if self.enough(found) or not kept.size or finest:
                 return found
             a, b = self.finer(a.take(kept), b, bounds.upper[kept])
             if len(a) + len(b) > most:
@@ -390,7 +391,7 @@ class _Pair:
             points = bounds.farthest[kept]
             _, _, low = search.exact(points.T)
             distance = low - error - a.error[kept] - self.rounding
-            last = max(error, float(a.error[kept].max())) <= self.finest
+            last = max(error, float(a.error.max())) <= self.finest
             sure = np.flatnonzero((distance > limit) | last)
             chords = a.take(kept)
             out.append(self.entries(chords.take(sure), points[sure], distance[sure], bounds.upper[kept[sure]]))

@@ -127,6 +127,29 @@ def test_ties_all_along_are_settled() -> None:
     assert found.measured <= 1.0 <= found.certified <= found.measured + 1e-9
 
 
+def test_straight_pieces_beside_bent_ones_are_settled_too() -> None:
+    # the rung is the farthest, and exact from the start; the half circle, farther from exact, is nearer
+    legs = polyline((0.0, 0.0), (0.0, 100.0), (10.0, 100.0), (10.0, 0.0))
+    bent = ArcChain(np.array([[0.0, 37.0], [10.0, 37.0], [10.0, 45.0]]), np.array([0.0, 1.0]))
+    found = directed_hausdorff(bent, legs, 1e-8)
+    assert found.measured <= 5.0 <= found.certified <= found.measured + 1e-8
+    assert within(polyline((0.0, 37.0), (10.0, 37.0)), legs, 5.001).forward.certified <= 5.001
+    for tolerance in (4.9999, 5.0001):
+        assert len(exceeding(bent, legs, tolerance, 1e-6)) == (tolerance < 5.0)
+
+
+@pytest.mark.parametrize("seed", [326, 627, 1000, 1054])
+def test_widths_are_kept_and_decisions_reached_where_chords_differ_in_error(seed: int) -> None:
+    rng = np.random.default_rng(10_000 + seed)
+    dimension, origin = (2, 3)[seed % 2], (0.0, 0.0, 5e6)[seed % 3]
+    a, b = random_curve(rng, dimension, origin), random_curve(rng, dimension, origin)
+    width = 10.0 ** rng.uniform(-6.0, -1.0)
+    found = hausdorff(a, b, width)
+    assert all(one.certified - one.measured <= width for one in (found.forward, found.backward))
+    assert within(a, b, found.certified + 1e-3).inside is True
+    assert within(a, b, found.measured - 1e-3).inside is False
+
+
 def test_a_line_between_two_parallel_ones_is_measured_halfway() -> None:
     # the middle of the rung is 5 from both legs, and nothing of it but its middle
     legs = polyline((0.0, 0.0), (0.0, 100.0), (10.0, 100.0), (10.0, 0.0))
