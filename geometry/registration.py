@@ -41,6 +41,7 @@ _MEDIANS = 3.0 * 1.4826  # standard deviations of normal residuals, read off the
 _LEAST_SCALE = 1e-9  # of the size
 _EQUAL = 1e-3  # costs that differ by less than this share are equal, and the smaller turn is taken
 _SINGULAR = 1e-6  # of the largest singular value: moves that change no residual by more are not made
+_MOST_SIZED = 1.5  # times larger or smaller than both sides' spreads tell
 _SCALE_GAIN = 0.8  # of the residual of the nearer half: a change of size must bring it below this to be better
 
 
@@ -113,10 +114,12 @@ def rigid_move(old: Sequence[Curve], new: Sequence[Curve]) -> Move:
     best = equal[np.lexsort([np.hypot(equal[:, 0], equal[:, 1]), np.round(np.abs(equal[:, 2]), 6)])[:1]]
     samples = _samples(paths[1], _FINE)
     best = target.drawn(samples, best, centre, _STEPS)
-    sized = np.column_stack([starts, np.full(len(starts), _spread(rough[0]) / _spread(rough[1]))])
-    sized = coarse[0].drawn(rough[1], sized, centre, _ROUGH_STEPS)
-    sized = sized[_distinct(sized, coarse[0].costs(_placed(rough[1], sized, centre), far), size)]
-    scale = target.scale(samples, sized, best, centre)
+    factor = _spread(rough[0]) / _spread(rough[1])
+    sized = np.column_stack([starts, np.full(len(starts), factor)])
+    sized = _sizeable(coarse[0].drawn(rough[1], sized, centre, _ROUGH_STEPS), factor)
+    if len(sized):
+        sized = sized[_distinct(sized, coarse[0].costs(_placed(rough[1], sized, centre), far), size)]
+    scale = target.scale(samples, sized, best, centre, factor)
     dx, dy, angle = best[0].tolist()
     return Move(dx, dy, angle, (float(centre[0]), float(centre[1])), scale)
 
@@ -175,6 +178,11 @@ def _distinct(states: FloatArray, costs: FloatArray, size: float) -> list[int]:
     good = np.flatnonzero(costs <= 1.05 * costs.min() + 1e-9)
     least = int(good[np.argmin(np.abs(states[good, 2]))])
     return rows if least in rows else [*rows, least]
+
+
+def _sizeable(states: FloatArray, factor: float) -> FloatArray:
+    """Return the sized states near a factor of size; shrunk to a point, anything would lie on anything."""
+    return states[np.abs(np.log(np.maximum(states[:, 3], 1e-300) / factor)) <= np.log(_MOST_SIZED)]
 
 
 def _placed(points: FloatArray, states: FloatArray, centre: FloatArray) -> FloatArray:
@@ -258,7 +266,9 @@ class _Target:
         _, off = self._residuals(points)
         return np.asarray(np.mean(off**2 / (off**2 + far**2), axis=1))
 
-    def scale(self, samples: FloatArray, starts: FloatArray, state: FloatArray, centre: FloatArray) -> float:
+    def scale(
+        self, samples: FloatArray, starts: FloatArray, state: FloatArray, centre: FloatArray, factor: float
+    ) -> float:
         """Return the change of size with which the samples fit clearly better; 1 where there is none.
 
         Args:
@@ -266,11 +276,15 @@ class _Target:
             starts: sized states to start from.
             state: the rigid one, shape (1, 3).
             centre: that they turn about, shape (2,).
+            factor: about which the change of size is looked for.
         """
         before = self._unchanged(_placed(samples, state, centre))
         if before <= _LEAST_SCALE * self._size:
             return 1.0
         sized = self.drawn(samples, np.vstack([starts, np.append(state[0], 1.0)]), centre, _STEPS)
+        sized = _sizeable(sized, factor)
+        if not len(sized):
+            return 1.0
         after = [self._unchanged(_placed(samples, each[None], centre)) for each in sized]
         return float(sized[int(np.argmin(after)), 3]) if min(after) < _SCALE_GAIN * before else 1.0
 

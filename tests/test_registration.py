@@ -82,6 +82,15 @@ def test_another_size_is_pointed_out_and_not_made(factor):
     assert moved_curve(found, new).length() == pytest.approx(new.length(), rel=1e-12)
 
 
+@pytest.mark.parametrize("factor", [25.4, 1.0 / 25.4, 1.001])
+@pytest.mark.parametrize("seed", [0, 2, 4, 5])
+def test_units_mixed_up_are_pointed_out(factor, seed):
+    """A shape shrunk to a point of the outline would lie on it as well."""
+    old = outline(seed)
+    new = Polyline(Move(50.0, 3.0, 0.5).apply(old.points * factor), True)
+    assert rigid_move([old], [new]).scale == pytest.approx(1.0 / factor, rel=1e-6)
+
+
 def test_of_equal_moves_the_smallest_turn_is_taken():
     square = Polyline(np.array([[0.0, 0.0], [10.0, 0.0], [10.0, 10.0], [0.0, 10.0]]), True)
     turned = Polyline(Move(30.0, 0.0, np.radians(50.0)).apply(square.points), True)
