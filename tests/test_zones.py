@@ -58,6 +58,18 @@ def test_a_zone_through_the_start_of_a_closed_curve_is_one():
     assert zone.peak == pytest.approx(0.5, abs=1e-12)
 
 
+def test_a_mirrored_corner_is_out_on_one_side_and_in_on_the_other():
+    """A chamfer of 12 by 5 drawn as 5 by 12: its end is 7 along the old one's leg, so 7 * 5 / 13 outside."""
+    others = [[100.0, 60.0], [0.0, 60.0], [0.0, 0.0]]
+    old = Polyline(np.array([[88.0, 0.0], [100.0, 5.0], *others]), True)
+    new = Polyline(np.array([[95.0, 0.0], [100.0, 12.0], *others]), True)
+    first, second = zones(new, old, 0.1, 0.1)
+    assert first.peak == pytest.approx(35.0 / 13.0, abs=1e-9)
+    assert first.point == pytest.approx((95.0, 0.0), abs=1e-9)
+    assert second.peak < -2.0
+    assert first.to_along - new.length() <= second.from_along
+
+
 def test_an_open_curve_has_left_and_right_by_the_travel_of_the_reference():
     line = Polyline(np.array([[0.0, 0.0], [100.0, 0.0]]))
     new = Polyline(np.array([[0.0, 0.0], [37.0, 0.0], [40.0, 0.5], [43.0, 0.0], [100.0, 0.0]]))
