@@ -93,6 +93,17 @@ class Chords:
             self.error[index],
         )
 
+    def halved(self) -> tuple["Chords", FloatArray]:
+        """Return both halves of every chord, in order, and the points between them, shape (m, d)."""
+        middle = 0.5 * (self.low + self.high)
+        inner = self.elements.at(self.element, middle)
+        element = np.repeat(self.element, 2)
+        low, high = (np.stack(pair, axis=1).ravel() for pair in ((self.low, middle), (middle, self.high)))
+        start = np.stack([self.start, inner], axis=1).reshape(-1, inner.shape[1])
+        end = np.stack([inner, self.end], axis=1).reshape(-1, inner.shape[1])
+        error = self.elements.error(element, low, high, end - start)
+        return Chords(self.elements, element, low, high, start, end, error), inner
+
     def split(self, delta: float) -> "Chords":
         """Return chords no error of which passes `delta` (drawing units, > 0); those that are good stay whole."""
         rough = np.flatnonzero(self.error > delta)

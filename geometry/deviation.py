@@ -332,7 +332,7 @@ class _Pair:
         return self.measure(a.take(own_a), b)
 
     def measure(self, a: Chords, b: Chords) -> Deviation:
-        lower, upper, place = -np.inf, np.inf, None
+        lower, upper, place, dropped = -np.inf, np.inf, None, -np.inf
         most = max(_CHORDS, 4 * (len(a) + len(b)))
         while True:
             error = float(b.error.max())
@@ -340,12 +340,13 @@ class _Pair:
             bounds = bound_chords(a, self.search(b), error, slack, self.tolerance)
             if bounds.lower > lower:
                 lower, place = bounds.lower, self.place(a, bounds)
-            upper = min(upper, max(float(bounds.upper.max()), lower))
+            upper = min(upper, max(float(bounds.upper.max()), lower, dropped))
             found = Deviation(max(0.0, lower - self.rounding), upper + self.rounding, place)
             kept = np.flatnonzero(bounds.upper > (lower if self.tolerance is None else self.tolerance - self.rounding))
             finest = max(error, a.error.max()) <= self.finest  # not only of those kept: all of a set the slack
             if self.enough(found) or not kept.size or finest:
                 return found
+            dropped = max(dropped, float(np.delete(bounds.upper, kept).max(initial=-np.inf)))
             a, b = self.finer(a.take(kept), b, bounds.upper[kept])
             if len(a) + len(b) > most:
                 return found

@@ -3,9 +3,15 @@
 Let s be the signed distance to the reference, + outside a closed one and left of an open one, beyond whose ends the
 last chord, prolonged, parts left from right. |s| changes by no more than the distance travelled. So along a straight
 chord of length L whose ends have |s| = a and |s| = b, |s| is at least (a + b - L) / 2; where that is above 0 the chord
-does not meet the reference, and s keeps its sign unless the chord crosses a prolongation. It stays clear of one if both
-its ends lie behind the end of the reference, or both on one side of its line. Where the chord keeps its sign, it keeps
-its limit if `geometry.intervals` bounds |s| along it by the limit of that side; where it need not, if the bound is the
+does not meet the reference. To a closed reference s then keeps its sign, for it changes on the reference alone. To an
+open one it also jumps on a prolongation, and where two strands passed on opposite sides are equally near. The chord
+stays clear of a prolongation if both its ends lie behind the end of the reference, or both on one side of its line. The
+nearest places of its points lie within a + L of them, so within a + 2 L of its start. Let a run of the reference have
+all that comes so near, and turn by less than half a turn in all. If p is left of its place q1 and right of q2, both
+nearest, and it heads by h more at q2 than at q1, then q1 to q2 leads a quarter turn + h / 2 away from the heading at
+q1; a run heads that way somewhere, and turns there and back by half a turn at least. So there is no such p. Where the
+chord keeps its sign, it keeps its
+limit if `geometry.intervals` bounds |s| along it by the limit of that side; where it need not, if the bound is the
 smaller limit. A chord that is not settled so is halved.
 
 Both curves are taken as chords within e. |s| is then known to e, its sign where |s| > e, and a point of the curve is
@@ -88,10 +94,11 @@ class _Sides:
         chords = whole_chords(reference, -middle).split(error)
         self._error, self._middle = error, middle
         self._target = SegmentSearch(chords.start.T.copy(), chords.end.T.copy())
-        drawn = reference.flatten(error)
-        shifted = drawn.points - middle
-        self._ends = [] if reference.closed else [_end(shifted), _end(shifted[::-1])]
-        self._distance = SignedTo(reference, error, reference.closed and not is_simple(drawn))
+        path = np.vstack([chords.start, chords.end[-1:]])
+        self._ends = [] if reference.closed else [_end(path), _end(path[::-1])]
+        self._strands = None if reference.closed else _Strands(path, max(self._narrow, 1e-4 * _length(path)))
+        crossing = reference.closed and not is_simple(reference.flatten(error))
+        self._distance = SignedTo(reference, error, crossing)
         reach = max(self._chords.elements.reach, chords.elements.reach)
         self._rounding = 2000.0 * _U * reach
         self._most = _MOST + 2 * (len(self._chords) + len(chords))
@@ -117,7 +124,7 @@ class _Sides:
             length = np.linalg.norm(chords.end[rest] - chords.start[rest], axis=1)
             if rest.size > self._most or length.max() < self._error:
                 return open_
-            chords, inner = _halved(chords.take(rest))
+            chords, inner = chords.take(rest).halved()
             value = self._signed(inner)
             at_start = np.stack([at_start[rest], value], axis=1).ravel()
             at_end = np.stack([value, at_end[rest]], axis=1).ravel()
@@ -137,19 +144,46 @@ class _Sides:
         sided &= upper[rest] <= np.where(a > 0.0, self._plus, self._minus)
         for tip, before in self._ends:
             sided &= _clear(start, end, tip, before, margin)
+        if self._strands is not None and sided.any():
+            tried = np.flatnonzero(sided)
+            step = np.linalg.norm(end[tried] - start[tried], axis=1)
+            sided[tried] = self._strands.single(start[tried], np.abs(a[tried]) + 2.0 * step + margin)
         return rest[~sided]
 
 
-def _halved(chords: Chords) -> tuple[Chords, FloatArray]:
-    """Return both halves of every chord, in order, and the points between them, shape (n, 2)."""
-    element = np.repeat(chords.element, 2)
-    middle = 0.5 * (chords.low + chords.high)
-    inner = chords.elements.at(chords.element, middle)
-    low, high = (np.stack(pair, axis=1).ravel() for pair in ((chords.low, middle), (middle, chords.high)))
-    start = np.stack([chords.start, inner], axis=1).reshape(-1, 2)
-    end = np.stack([inner, chords.end], axis=1).reshape(-1, 2)
-    error = chords.elements.error(element, low, high, end - start)
-    return Chords(chords.elements, element, low, high, start, end, error), inner
+class _Strands:
+    """An open path cut into short segments, to tell whether what comes near a point is a single strand."""
+
+    def __init__(self, path: FloatArray, longest: float) -> None:
+        from scipy.spatial import cKDTree
+
+        step = np.diff(path, axis=0)
+        length = np.linalg.norm(step, axis=1)
+        heading = np.arctan2(step[:, 1], step[:, 0])
+        real = np.flatnonzero(length > 0.0)
+        turn = np.abs(np.angle(np.exp(1j * np.diff(heading[real]))))
+        turned = np.zeros(len(step))
+        turned[real[1:]] = turn
+        parts = np.maximum(np.ceil(length / longest), 1.0).astype(np.intp)
+        owner = np.repeat(np.arange(len(step)), parts)
+        share = (np.arange(len(owner)) - np.repeat(np.cumsum(parts) - parts, parts) + 0.5) / parts[owner]
+        self._tree = cKDTree(path[owner] + share[:, None] * step[owner])
+        self._half = 0.5 * float((length / parts).max())
+        self._turned = np.cumsum(turned)[owner]  # turning up to and into each segment
+
+    def single(self, points: FloatArray, radius: FloatArray) -> BoolArray:
+        """Tell where all that lies within a radius is one run of the path that turns by less than half a turn."""
+        found = self._tree.query_ball_point(points, radius + self._half, return_sorted=True)
+        out = np.zeros(len(points), dtype=np.bool_)
+        for k, near in enumerate(found):
+            if near:
+                whole = near[-1] - near[0] + 1 == len(near)
+                out[k] = whole and self._turned[near[-1]] - self._turned[near[0]] < np.pi
+        return out
+
+
+def _length(path: FloatArray) -> float:
+    return float(np.linalg.norm(np.diff(path, axis=0), axis=1).sum())
 
 
 def _end(points: FloatArray) -> tuple[FloatArray, FloatArray]:

@@ -97,6 +97,15 @@ def test_decisions_agree_with_dense_samples(seed):
         assert over.max() > -1e-3
 
 
+def test_a_side_that_changes_between_two_strands_is_no_reason_for_a_verdict():
+    """NEW runs along the middle between two strands that run the same way, left of one and right of the other."""
+    tail = np.array([[1.0, 4.8], [0.9, 5.0], [1.0, 5.2], [1.0, 10.0]])  # a bay that makes the other side the nearer
+    hook = Polyline(np.vstack([[[0, 0], [0, 10.0], [-3, 10], [-3, -3], [1, -3]], tail]))
+    between = Polyline(np.array([[0.48, 4.6], [0.48, 5.4]]))
+    assert within_sides(between, hook, 0.1, 0.6).inside is False
+    assert within_sides(between, hook, 0.6, 0.6).inside is True
+
+
 def test_limits_must_be_above_nothing():
     with pytest.raises(GeometryError, match="both must be numbers above 0"):
         within_sides(LINE, LINE, 0.1, 0.0)

@@ -8,6 +8,7 @@ from geometry.bspline import Spline
 from geometry.deviation import directed_hausdorff
 from geometry.errors import GeometryError
 from geometry.polyline import Polyline
+from geometry.signed import signed_distances
 from geometry.zones import missed_zones, zones
 
 PLATE = Polyline(np.array([[0.0, 0.0], [100.0, 0.0], [100.0, 60.0], [0.0, 60.0]]), True)
@@ -140,6 +141,29 @@ def test_the_highest_peak_is_the_directed_distance(seed):
     assert abs(found[0].peak) <= exact.certified + 1e-5
     assert abs(found[0].peak) >= 0.98 * exact.measured
     assert all(abs(zone.peak) > 0.2 for zone in found)
+
+
+def test_every_one_of_many_narrow_zones_on_a_long_edge_is_found():
+    """Ten notches of OLD, 0.3 wide and 0.15 deep, under one straight edge of NEW."""
+    notches = [[[x, 0.0], [x, -0.15], [x + 0.3, -0.15], [x + 0.3, 0.0]] for x in 500.0 + 1000.0 * np.arange(9)]
+    old = Polyline(np.vstack([[[0.0, 0.0]], *notches, [[10000.0, 0.0]]]))
+    new = Polyline(np.array([[0.0, 0.0], [10000.0, 0.0]]))
+    found = zones(new, old, 0.1, 0.3)
+    assert len(found) == 9
+    for zone in found:
+        assert zone.peak == pytest.approx(0.15, abs=1e-6)
+        assert zone.from_along <= zone.along <= zone.to_along
+
+
+def test_a_peak_lies_in_its_zone_and_on_its_side():
+    """NEW runs along the middle between two strands of OLD and leans from one to the other."""
+    old = Polyline(np.array([[0.0, 0.0], [0.0, 10.0], [-3.0, 10.0], [-3.0, -3.0], [1.0, -3.0], [1.0, 10.0]]))
+    for x in (0.49, 0.49756, 0.499, 0.5):
+        new = Polyline(np.array([[x, 1.0], [x + 0.02226, 9.0]]))
+        for zone in zones(new, old, 0.1, 0.2):
+            assert zone.from_along - 1e-9 <= zone.along <= zone.to_along + 1e-9
+            signed = signed_distances(np.array([zone.point]), old, 1e-9)[0]
+            assert signed == pytest.approx(zone.peak, abs=1e-6) or abs(zone.point[0] - 0.5) < 1e-6
 
 
 def test_curves_within_their_limits_have_no_zones():

@@ -19,7 +19,9 @@ __all__ = ["decided", "measured"]
 _WIDTH = 1.0 / 200.0  # of the limit: how far certified and measured may lie apart
 _FINE = 1e-5  # of the size: the same where there is no limit, and the least deviation that is a limit for the search
 _COURSE = 1.0 / 4000.0  # of the limit, or of the distance where that is less: chord error of signed deviations
-_LEAST = 1e-8  # of the size: the least chord error
+_LEAST = 1e-8  # of the size: chord errors and widths are taken no smaller
+_SPACING = 1e-5  # of the size: samples of the deviation follow no closer than this
+_RESOLUTION = 1e-3  # of the limit: a fast verdict that is closer is left open, and that is out
 _CLOSER = 1e-2  # times the width: tried where the limit lies between measured and certified
 _OUT_OF_ORDER = 1.5  # times the distance: what two profiles in the same order may be proven to on top of it
 _UNDECIDED = "too close to the limit to be proven within it: counted as out"
@@ -32,14 +34,15 @@ def measured(old: Figure, new: Figure, how: str, limits: Limits | None) -> Compa
     slack = old.slack + new.slack
     size = max(old.size, new.size, 1e-300)
     scale = _FINE * size if limits is None else min(limits.plus, limits.minus)
-    distance = hausdorff(new.curve, old.curve, _WIDTH * scale)
+    distance = hausdorff(new.curve, old.curve, max(_WIDTH * scale, _LEAST * size))
     inside: bool | None = None
     if limits is not None:
         inside, distance, told = _verdict(old, new, limits, distance, slack)
         said += told
     certified = max(distance.forward.certified, distance.backward.certified) + slack
-    error = min(_COURSE * scale, max(_COURSE * certified, _LEAST * size))
-    course = course_along(new.curve, old.curve, scale, _crosses(old, scale), error)
+    spacing = max(scale, _SPACING * size)
+    error = max(_LEAST * size, min(_COURSE * scale, _COURSE * certified))
+    course = course_along(new.curve, old.curve, spacing, _crosses(old, scale), error)
     if certified == 0.0:  # the same number for number: nothing but chord errors could be measured
         course = replace(course, deviation=np.zeros(len(course.along)))
     figures = course.statistics()
@@ -67,7 +70,7 @@ def measured(old: Figure, new: Figure, how: str, limits: Limits | None) -> Compa
             figures.max_minus,
             figures.percentile_95,
         ),
-        [] if limits is None or inside else _zones(old, new, limits),  # none where none is proven to be
+        [] if limits is None or inside or _UNDECIDED in said else _zones(old, new, limits),
         inside,
         said,
     )
@@ -86,7 +89,7 @@ def decided(old: Figure, new: Figure, how: str, limits: Limits | None) -> Compar
     bounds = [math.inf, math.inf]
     found = 0.0
     if limits.equal and limits.plus > slack:
-        decision = within(new.curve, old.curve, limits.plus - slack)
+        decision = within(new.curve, old.curve, limits.plus - slack, _RESOLUTION)
         inside = decision.inside
         for k, part in enumerate((decision.forward, decision.backward)):
             if part is not None:
@@ -124,7 +127,8 @@ def _verdict(
     most = max(limits.plus, limits.minus)
     for width in (None, _CLOSER):
         if width is not None:
-            distance = hausdorff(new.curve, old.curve, width * _WIDTH * min(limits.plus, limits.minus))
+            least = 0.1 * _LEAST * max(old.size, new.size)
+            distance = hausdorff(new.curve, old.curve, max(width * _WIDTH * min(limits.plus, limits.minus), least))
         parts = (distance.forward, distance.backward) if limits.equal else (distance.backward,)
         if max(part.measured for part in parts) - slack > most:
             return False, distance, [] if limits.equal else [_uncovered(distance, slack)]
@@ -136,8 +140,14 @@ def _verdict(
         return True, distance, []
     if slack >= min(limits.plus, limits.minus):
         return False, distance, [_UNDECIDED]
+    if new.curve.dimension == 3:
+        inside = distance.forward.certified + slack <= min(limits.plus, limits.minus)
+        return inside, distance, ["in space there are no sides: the smaller limit holds all round"]
     sides = within_sides(new.curve, old.curve, limits.plus - slack, limits.minus - slack)
-    return sides.inside is True, distance, [_UNDECIDED] if sides.inside is None else []
+    if sides.point is None:
+        return sides.inside is True, distance, []
+    place = f"{sides.deviation:+.4g} at ({sides.point[0]:.6g}, {sides.point[1]:.6g})"
+    return False, distance, [_UNDECIDED if sides.inside is None else f"out on its side: {place}"]
 
 
 def _uncovered(distance: TwoSided, slack: float) -> str:
