@@ -33,8 +33,11 @@ _ROUGH, _MIDDLE, _FINE = 160, 800, 4000  # samples
 _ROUGH_CHORDS = 1500  # about as many of the old curves while starts are tried
 _TURNS = 72  # starting turns all round
 _ROUGH_STEPS, _STEPS = 8, 60
-_FINALISTS = 4
+_FINALISTS = 8
 _APART = 0.02  # of the size, and radians: states nearer than this come to the same
+_STRETCHES, _LEFT_OUT = 8, 0.375  # stretches left out in turn, and their share of the samples
+_COOLING = 0.5  # by which the least scale falls from step to step
+_NEAR = 1e-3  # of the size: from here on distances count as far when the best is chosen
 _AT_REST = 1e-13  # of the size
 _CAP = 0.02  # of the size: from here on distances count as far when starts are compared
 _MEDIANS = 3.0 * 1.4826  # standard deviations of normal residuals, read off their median, within which weights are high
@@ -109,11 +112,17 @@ def rigid_move(old: Sequence[Curve], new: Sequence[Curve]) -> Move:
     costs += coarse[1].costs(_taken(rough[0], states, centre), far)
     target, samples = _Target(paths[0], size), _samples(paths[1], _MIDDLE)
     states = target.drawn(samples, states[_distinct(states, costs, size)], centre, _STEPS)
-    costs = target.costs(_placed(samples, states, centre), 1e-3 * size)
+    states = np.vstack([states, _without_a_stretch(target, samples, states, centre)])
+    # first what lays most of it on best, which no change can spoil; of these the one that lays on best what is left
+    rest = target.unchanged(_placed(samples, states, centre))
+    states = states[rest <= 1.05 * rest.min() + _LEAST_SCALE * size]
+    costs = target.costs(_placed(samples, states, centre), _NEAR * size)
+    back = _Target(paths[1], size)
+    costs += back.costs(_taken(_samples(paths[0], _MIDDLE), states, centre), _NEAR * size)
     equal = states[costs <= (1.0 + _EQUAL) * costs.min() + 1e-12]
     best = equal[np.lexsort([np.hypot(equal[:, 0], equal[:, 1]), np.round(np.abs(equal[:, 2]), 6)])[:1]]
     samples = _samples(paths[1], _FINE)
-    best = target.drawn(samples, best, centre, _STEPS)
+    best = target.drawn(samples, best, centre, _STEPS, _NEAR**2)
     factor = _spread(rough[0]) / _spread(rough[1])
     sized = np.column_stack([starts, np.full(len(starts), factor)])
     sized = _sizeable(coarse[0].drawn(rough[1], sized, centre, _ROUGH_STEPS), factor)
@@ -122,6 +131,18 @@ def rigid_move(old: Sequence[Curve], new: Sequence[Curve]) -> Move:
     scale = target.scale(samples, sized, best, centre, factor)
     dx, dy, angle = best[0].tolist()
     return Move(dx, dy, angle, (float(centre[0]), float(centre[1])), scale)
+
+
+def _without_a_stretch(target: "_Target", samples: FloatArray, states: FloatArray, centre: FloatArray) -> FloatArray:
+    """Return the best state drawn on anew by all samples but those of one stretch or another, which may be changed."""
+    best = states[[int(np.argmin(target.unchanged(_placed(samples, states, centre))))]]
+    count = len(samples)
+    out = []
+    for first in range(0, count, max(1, count // _STRETCHES)):
+        left_out = (np.arange(count) - first) % count < _LEFT_OUT * count
+        drawn = target.drawn(samples[~left_out], best, centre, _STEPS)
+        out.append(target.drawn(samples, drawn, centre, _STEPS, _NEAR**2))
+    return np.vstack(out)
 
 
 def _size(curves: Sequence[Curve]) -> float:
@@ -135,7 +156,13 @@ def _samples(paths: Sequence[Polyline], count: int) -> FloatArray:
     shares = np.maximum(np.rint(count * lengths / lengths.sum()), 1).astype(int)
     return np.concatenate(
         [
-            path.at((np.arange(share) + 0.5) * (length / share))
+            path.at(
+                (np.arange(share) + 0.5) * (length / share)
+                if path.closed
+                else np.linspace(
+                    0.0, length, share + 2
+                )  # the ends too: they alone tell how far an arc lies along itself
+            )
             for path, share, length in zip(paths, shares, lengths, strict=True)
             if length > 0.0
         ]
@@ -226,8 +253,13 @@ class _Target:
         shape = points.shape[:-1]
         return normal.reshape(2, *shape), (normal * offset).sum(axis=0).reshape(shape)
 
-    def drawn(self, samples: FloatArray, states: FloatArray, centre: FloatArray, steps: int) -> FloatArray:
+    def drawn(
+        self, samples: FloatArray, states: FloatArray, centre: FloatArray, steps: int, warm: float = _CAP
+    ) -> FloatArray:
         """Return the states that draw the samples onto the curves.
+
+        The scale of the weights follows the median residual down, but slowly: what is small and decides where the rest
+        is symmetric (a key in a disc) must have drawn the curves round before it would count as changed.
 
         Args:
             samples: shape (n, 2).
@@ -235,17 +267,20 @@ class _Target:
                 are made larger about the centre before they are moved.
             centre: that they turn about, shape (2,).
             steps: at most.
+            warm: share of the size that the scale is not under in the first step.
         """
         states = states.copy()
         scale = np.full(len(states), np.inf)
         live = np.arange(len(states))
-        for _ in range(steps):
+        for k in range(steps):
+            cool = warm * _COOLING**k * self._size
             now = states[live]
             points = _placed(samples, now, centre)
             normal, off = self._residuals(points)
             middle = np.median(np.abs(off), axis=1)
             scale[live] = np.minimum(scale[live], np.maximum(_MEDIANS * middle, _LEAST_SCALE * self._size))
-            root = scale[live, None] ** 2 / (scale[live, None] ** 2 + off**2)  # the square root of the weight
+            wide = np.maximum(scale[live, None], cool)
+            root = wide**2 / (wide**2 + off**2)  # the square root of the weight
             arm = np.moveaxis(points - centre - now[:, None, :2], 2, 0) / self._size
             columns = [normal[0], normal[1], normal[1] * arm[0] - normal[0] * arm[1]]
             if states.shape[1] > 3:
@@ -256,7 +291,7 @@ class _Target:
             states[live, 2] = np.angle(np.exp(1j * (now[:, 2] + step[:, 2] / self._size)))
             if states.shape[1] > 3:
                 states[live, 3] *= 1.0 + step[:, 3] / self._size
-            live = live[np.abs(step).max(axis=1) >= _AT_REST * self._size]
+            live = live[(np.abs(step).max(axis=1) >= _AT_REST * self._size) | (cool > scale[live])]
             if not live.size:
                 break
         return states
@@ -278,17 +313,17 @@ class _Target:
             centre: that they turn about, shape (2,).
             factor: about which the change of size is looked for.
         """
-        before = self._unchanged(_placed(samples, state, centre))
+        before = float(self.unchanged(_placed(samples, state, centre))[0])
         if before <= _LEAST_SCALE * self._size:
             return 1.0
         sized = self.drawn(samples, np.vstack([starts, np.append(state[0], 1.0)]), centre, _STEPS)
         sized = _sizeable(sized, factor)
         if not len(sized):
             return 1.0
-        after = [self._unchanged(_placed(samples, each[None], centre)) for each in sized]
+        after = self.unchanged(_placed(samples, sized, centre))
         return float(sized[int(np.argmin(after)), 3]) if min(after) < _SCALE_GAIN * before else 1.0
 
-    def _unchanged(self, points: FloatArray) -> float:
-        """Return the root mean square residual of the nearer half of points, shape (1, n, 2)."""
-        size = np.sort(np.abs(self._residuals(points)[1][0]))
-        return float(np.sqrt(np.mean(size[: (len(size) + 1) // 2] ** 2)))
+    def unchanged(self, points: FloatArray) -> FloatArray:
+        """Return the root mean square residual of the nearer half of sets of points, shape (k, n, 2)."""
+        size = np.sort(np.abs(self._residuals(points)[1]), axis=1)
+        return np.asarray(np.sqrt(np.mean(size[:, : (size.shape[1] + 1) // 2] ** 2, axis=1)))

@@ -108,6 +108,35 @@ def test_far_from_the_origin_nothing_is_lost():
     assert np.abs(found.apply(new.points) - far.points).max() < 1e-7
 
 
+@pytest.mark.parametrize("turn", [0.5, 2.0, 20.0, 61.0, 170.0])
+def test_a_small_feature_tells_how_a_symmetric_part_is_turned(turn):
+    disc = full_circle(np.zeros(2), 50.0)
+    keyhole = [disc, full_circle(np.array([45.0, 0.0]), 1.5)]
+    around = np.radians(60.0 * np.arange(6))
+    flange = [disc, *(full_circle(38.0 * np.array([np.cos(a), np.sin(a)]), 5.0 if a == 0 else 4.0) for a in around)]
+    move = Move(0.0, 0.0, np.radians(turn))
+    for part in (keyhole, flange):
+        found = rigid_move(part, [moved_curve(move, curve) for curve in part])
+        assert np.degrees(found.angle) == pytest.approx(-turn, abs=1e-6)
+
+
+@pytest.mark.parametrize("lift", [0.1, 0.5, 2.0])
+def test_an_end_that_was_lifted_draws_nothing_along(lift):
+    t = np.linspace(0.0, 1.0, 400)
+    y = 20.0 * np.sin(5.0 * t) + 8.0 * np.sin(11.0 * t)
+    old = Polyline(np.column_stack([300.0 * t, y]))
+    new = Polyline(np.column_stack([300.0 * t, y + np.where(t > 0.75, lift, 0.0)]))
+    found = rigid_move([old], [new])
+    assert np.abs(found.apply(new.points) - new.points).max() < 1e-9
+
+
+def test_an_arc_does_not_slide_along_itself():
+    arc = ArcChain(np.array([[0.0, 0.0], [100.0, 0.0]]), np.array([0.3]))
+    move = Move(-70.0, 12.0, 1.1)
+    found = rigid_move([arc], [moved_curve(move, arc)])
+    assert np.abs(found.apply(move.apply(arc.points)) - arc.points).max() < 1e-9
+
+
 def test_staircases_are_laid_step_on_step():
     steps = Polyline(staircase(outline(4).points * 5.0).astype(float), True)
     new, _ = displaced(steps, 9)
