@@ -21,6 +21,7 @@ __all__ = ["cli", "main"]
 _COMMANDS = {
     "inspect": ("converter.commands.inspect", "Show what is in a drawing and what to do with it."),
     "fair": ("converter.commands.fair", "Fair traced outlines within a proven tolerance."),
+    "spring": ("converter.commands.spring", "Lay a curve through sparse stations of a table or a drawing."),
     "compare": ("converter.commands.compare", "Compare two revisions: certified deviation and a deviation map."),
 }
 _UNUSABLE = 2

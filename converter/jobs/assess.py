@@ -76,7 +76,11 @@ def assess(profile: Profile, tolerance: float | None, redraw: bool) -> Assessmen
             return Assessment(outline, 0.0, found, "hardly larger than the tolerance: check the units", as_drawn=True)
         return Assessment(outline, tolerance, found, "as stated")
     if found.tolerance <= 0.0:
-        hint = "; state a tolerance to fair them as an outline all the same" if found.kind == "stations" else ""
+        hint = (
+            "; spring a curve through them, or state a tolerance to fair them as an outline all the same"
+            if found.kind == "stations"
+            else ""
+        )
         return Assessment(outline, 0.0, found, found.reason + hint, as_drawn=True)
     if _is_small(outline, found.tolerance):
         return Assessment(outline, 0.0, found, "its points scatter by as much as it is large", as_drawn=True)

@@ -16,6 +16,7 @@ from geometry.errors import GeometryError
 
 __all__ = ["InspectRecord", "InspectSettings", "InspectedProfile", "inspect_drawing"]
 
+_CORNER = 30.0  # degrees: chords of stations that turn by more meet at a corner, as a rule
 _PLACES = 20  # crossings listed a profile; all are counted
 
 
@@ -218,13 +219,16 @@ def _suggestion(record: InspectRecord, source: Path, settings: InspectSettings) 
     kinds = Counter(profile.looks_like for profile in record.profiles)
     if not record.profiles:
         return None, "there is no profile to work on"
+    options = [part for layer in settings.layers for part in ("--layer", layer)]
+    options += ["--gap", str(settings.gap)] if settings.gap is not None else []
+    options += ["--units", settings.units] if settings.units is not None else []
     if kinds["outline"]:
-        options = [part for layer in settings.layers for part in ("--layer", layer)]
-        options += ["--gap", str(settings.gap)] if settings.gap is not None else []
-        options += ["--units", settings.units] if settings.units is not None else []
         words = ["fairbatten", "fair", str(source), "-o", f"{source.stem}-faired.dxf", *options]
         few = "1 profile looks" if kinds["outline"] == 1 else f"{kinds['outline']} profiles look"
         return shlex.join(words), f"{few} like a traced or digitised outline"
     if kinds["stations"]:
-        return None, "the points look like stations: lay a curve through them; fairing would take the chords for edges"
+        words = ["fairbatten", "spring", str(source), "-o", f"{source.stem}-sprung.dxf", "--as", "arcs"]
+        words += ["--corner-angle", f"{_CORNER:g}", *options]
+        few = "1 profile looks" if kinds["stations"] == 1 else f"{kinds['stations']} profiles look"
+        return shlex.join(words), f"{few} like stations of a smooth curve: the chords between them are no evidence"
     return None, "nothing here needs fairing"

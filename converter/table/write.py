@@ -19,9 +19,9 @@ _ROWS = 20_000  # written at a time
 
 def write_points(
     path: Path,
-    profiles: Iterable[tuple[str, "Dense", FloatArray | None]],
+    profiles: Iterable[tuple[str, "Dense"]],
     units: str,
-    space: bool,
+    dimension: int,
     notes: Sequence[str] = (),
     force: bool = False,
     inputs: Sequence[Path] = (),
@@ -34,9 +34,9 @@ def write_points(
 
     Args:
         path: the output; it appears whole or not at all.
-        profiles: name, points, and height of a planar curve where the table has a column z.
+        profiles: name and points, of one dimension.
         units: symbol of the unit.
-        space: whether there is a column z.
+        dimension: 2, or 3 for a column z.
         notes: comments on top.
         force: whether an existing file may be replaced.
         inputs: files that must never be written.
@@ -46,18 +46,17 @@ def write_points(
     """
 
     def write(stream: BinaryIO) -> None:
-        columns = ["x", "y", *(["z"] if space else []), "along", "heading_deg", "radius"]
+        columns = ["x", "y", *(["z"] if dimension == 3 else []), "along", "heading_deg", "radius"]
         _head(stream, [*notes, f"units: {units}"], columns)
-        row = "%r," * (3 if space else 2) + "%.12g,%.9g,%.9g\n"
-        for number, (name, dense, heights) in enumerate(profiles):
+        row = "%r," * dimension + "%.12g,%.9g,%.9g\n"
+        for number, (name, dense) in enumerate(profiles):
             stream.write(_text(("\n" if number else "") + f"# profile {_one_line(name)}\n"))
             for low in range(0, len(dense.points), _ROWS):
                 part = slice(low, low + _ROWS)
                 points = dense.points[part]
-                columns_of = [points, dense.along[part], np.degrees(dense.heading[part]), dense.radius[part]]
-                if space and points.shape[1] == 2:
-                    columns_of.insert(1, np.zeros(len(points)) if heights is None else heights[part])
-                numbers = np.column_stack(columns_of)
+                numbers = np.column_stack(
+                    [points, dense.along[part], np.degrees(dense.heading[part]), dense.radius[part]]
+                )
                 stream.write((row * len(numbers) % tuple(numbers.ravel().tolist())).encode("ascii"))
 
     write_whole(path, write, force, inputs)
