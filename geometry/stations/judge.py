@@ -22,7 +22,7 @@ LEAST_ROWS = 6
 """Fewer stations than this between corners say too little about one another to be judged."""
 
 _WINDOW = 24
-_THRESHOLD = 4.5  # logarithm of the odds from which a row is named
+_THRESHOLD = 3.5  # logarithm of the odds from which a row is named
 _SLIP, _ANY = np.log(0.8), np.log(0.2)  # of wrong entries
 _NEAR_END = 2  # rows
 _STEP_SHARE = 0.25
@@ -123,6 +123,10 @@ def _worst(points: FloatArray, rows: IntArray, ends: bool) -> Suspect | None:
     views = _Views(window, near)
     odds = views.odds()
     odds[near] = views.odds(slips_only=True)[near]
+    if len(rows) < len(points):  # rows at the edge of a window stand well inside the next one
+        place = np.arange(len(rows))
+        edge = np.minimum(place, len(rows) - 1 - place) < _NEAR_END
+        odds[edge & ~near] = _NEVER
     for best in np.argsort(-odds, axis=None)[:_LOOKED_AT]:
         row, column = (int(k) for k in np.unravel_index(best, odds.shape))
         if odds[row, column] < _THRESHOLD:
@@ -295,12 +299,16 @@ class _Views:
     def _near(self, row: int, column: int, options: FloatArray) -> list[float]:
         """Return the slips that come to lie about the neighbours."""
         values = self.points[:, column]
+        inner = 0 < row < len(values) - 1
         beside = np.concatenate([values[max(row - 2, 0) : row], values[row + 1 : row + 3]])
         low, high = float(beside.min()), float(beside.max())
-        margin = 0.6 * max(high - low, float(self.units[column][0].max()))
+        margin = (0.6 if inner else 2.0) * max(high - low, float(self.units[column][0].max()))
         near = options[(options > low - margin) & (options < high + margin)]
-        middle = 0.5 * (values[max(row - 1, 0)] + values[min(row + 1, len(values) - 1)])
-        return near[np.argsort(np.abs(near - middle))[:_TRIED_SLIPS]].tolist()
+        if inner:
+            likely = 0.5 * (values[row - 1] + values[row + 1])
+        else:  # straight on
+            likely = 2.0 * values[1] - values[2] if row == 0 else 2.0 * values[-2] - values[-3]
+        return near[np.argsort(np.abs(near - likely))[:_TRIED_SLIPS]].tolist()
 
     def _with_value(self, row: int, column: int, value: float) -> float:
         points = self.points.copy()
