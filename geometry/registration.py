@@ -29,6 +29,7 @@ from geometry.polyline import Polyline
 __all__ = ["Move", "moved_curve", "rigid_move"]
 
 _FLATTENING = 1e-8  # of the size
+_DRAWN = 10.0 * _FLATTENING  # of the size: residuals that differ by less differ by flattening alone
 _ROUGH, _MIDDLE, _FINE = 160, 800, 4000  # samples
 _ROUGH_CHORDS = 1500  # about as many of the old curves while starts are tried
 _TURNS = 72  # starting turns all round
@@ -115,11 +116,11 @@ def rigid_move(old: Sequence[Curve], new: Sequence[Curve]) -> Move:
     states = np.vstack([states, _without_a_stretch(target, samples, states, centre)])
     # first what lays most of it on best, which no change can spoil; of these the one that lays on best what is left
     rest = target.unchanged(_placed(samples, states, centre))
-    states = states[rest <= 1.05 * rest.min() + _LEAST_SCALE * size]
+    states = states[rest <= 1.05 * rest.min() + _DRAWN * size]  # chords tell no better
     costs = target.costs(_placed(samples, states, centre), _NEAR * size)
     back = _Target(paths[1], size)
     costs += back.costs(_taken(_samples(paths[0], _MIDDLE), states, centre), _NEAR * size)
-    equal = states[costs <= (1.0 + _EQUAL) * costs.min() + 1e-12]
+    equal = states[costs <= (1.0 + _EQUAL) * costs.min() + (_DRAWN / _NEAR) ** 2]
     best = equal[np.lexsort([np.hypot(equal[:, 0], equal[:, 1]), np.round(np.abs(equal[:, 2]), 6)])[:1]]
     samples = _samples(paths[1], _FINE)
     best = target.drawn(samples, best, centre, _STEPS, _NEAR**2)

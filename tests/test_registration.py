@@ -108,6 +108,10 @@ def test_far_from_the_origin_nothing_is_lost():
     assert np.abs(found.apply(new.points) - far.points).max() < 1e-7
 
 
+def _middle(ring):
+    return tuple(ring.points.mean(axis=0).tolist())
+
+
 @pytest.mark.parametrize("turn", [0.5, 2.0, 20.0, 61.0, 170.0])
 def test_a_small_feature_tells_how_a_symmetric_part_is_turned(turn):
     disc = full_circle(np.zeros(2), 50.0)
@@ -116,8 +120,11 @@ def test_a_small_feature_tells_how_a_symmetric_part_is_turned(turn):
     flange = [disc, *(full_circle(38.0 * np.array([np.cos(a), np.sin(a)]), 5.0 if a == 0 else 4.0) for a in around)]
     move = Move(0.0, 0.0, np.radians(turn))
     for part in (keyhole, flange):
-        found = rigid_move(part, [moved_curve(move, curve) for curve in part])
-        assert np.degrees(found.angle) == pytest.approx(-turn, abs=1e-6)
+        for start in (0.0, -turn):  # circles begin where they did before they were turned, or anew
+            back = Move(0.0, 0.0, np.radians(start))
+            turned = [moved_curve(Move(0.0, 0.0, back.angle, _middle(c)), c) for c in part]
+            found = rigid_move(part, [moved_curve(move, curve) for curve in turned])
+            assert np.degrees(found.angle) == pytest.approx(-turn, abs=1e-5)
 
 
 @pytest.mark.parametrize("lift", [0.1, 0.5, 2.0])
